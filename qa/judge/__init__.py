@@ -1,0 +1,1 @@
+"""Limits and decision rules: a measurement becomes a verdict."""

@@ -1,0 +1,383 @@
+"""The records that travel from room to room: frozen, complete, and free of behaviour.
+
+What arrives becomes a `Series`; repeats of one series become an `Acquisition`; where the phantom lies is a `Pose`; what is
+found is a `Measurement` or a `NotMeasured` with its reason; all of one acquisition is an `Outcome`; held against a limit it
+is a `Verdict`. Conventions for axes and units are those of `qa.geometry`.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from datetime import date, datetime
+from pathlib import Path
+from types import MappingProxyType
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qa.geometry import Floats, Plane
+
+__all__ = [
+    "Acquisition",
+    "Conformity",
+    "CrossSection",
+    "ImageKind",
+    "Judged",
+    "Measurement",
+    "NotLocated",
+    "NotMeasured",
+    "Outcome",
+    "Picture",
+    "Pose",
+    "Reading",
+    "RecordedAcquisition",
+    "Refused",
+    "Region",
+    "Scanner",
+    "Series",
+    "Session",
+    "Settings",
+    "SourceFile",
+    "Verdict",
+]
+
+ImageKind = Literal["magnitude", "phase", "real", "imaginary", "other"]
+Conformity = Literal["pass", "conditional pass", "conditional fail", "fail"]
+_NOTHING: Mapping[str, Any] = MappingProxyType({})
+
+
+@dataclass(frozen=True)
+class SourceFile:
+    """One file that was taken in."""
+
+    path: Path
+    sop_instance_uid: str
+    sha256: str
+
+
+@dataclass(frozen=True)
+class Refused:
+    """A file or series that was not taken in, and why; the reason never holds a name, number or date of a person."""
+
+    path: Path
+    reason: str
+
+
+@dataclass(frozen=True)
+class Scanner:
+    """What the header says of the scanner; an absent value is an empty string or None."""
+
+    manufacturer: str = ""
+    model: str = ""
+    station: str = ""
+    serial: str = ""
+    field_strength_T: float | None = None
+    software: str = ""
+
+
+@dataclass(frozen=True)
+class Settings:
+    """What the header says of the protocol; an absent value is an empty string or None.
+
+    `pixel_mm` is (row spacing, column spacing), `matrix` is (rows, columns), `phase_encode` the image axis along which phase
+    is encoded: "column" when it runs along a column (so ghosts appear above and below), "row" when along a row.
+    `frequency_MHz` is in MHz whatever unit the file used. `parallel_imaging` and `filtered` tell what the header says
+    of processing that changes the noise (None: it says nothing).
+    """
+
+    protocol: str = ""
+    sequence: str = ""
+    slice_thickness_mm: float | None = None
+    slice_spacing_mm: float | None = None
+    pixel_mm: tuple[float, float] = (1.0, 1.0)
+    matrix: tuple[int, int] = (0, 0)
+    repetition_ms: float | None = None
+    echo_ms: float | None = None
+    flip_deg: float | None = None
+    averages: float | None = None
+    bandwidth_hz_per_pixel: float | None = None
+    phase_encode: Literal["row", "column"] | None = None
+    receive_coil: str = ""
+    frequency_MHz: float | None = None
+    parallel_imaging: bool | None = None
+    filtered: bool | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class Series:
+    """One stack of parallel images taken at one time, of one kind and one echo.
+
+    A file or DICOM series that holds several echoes, kinds or temporal positions becomes several of these.
+
+    Attributes
+    ----------
+    series_instance_uid, study_instance_uid : str
+        DICOM unique identifiers.
+    description : str
+        Series description.
+    acquired_at : datetime or None
+        Local time on the scanner's clock, without a time zone.
+    kind : ImageKind
+        Magnitude, phase and so on; only magnitude images are measured for signal.
+    temporal_position : int
+        1 for the first time point, counted within the DICOM series.
+    scanner, settings
+        What the header says.
+    planes : tuple of Plane
+        (S,) in order of position along the common normal.
+    pixels : (S, R, C) float32
+        Rescaled values in the same order; read-only.
+    files : tuple of SourceFile
+        Where they came from; a multi-frame file appears once.
+    remarks : tuple of str
+        Plain sentences on what was odd but not wrong.
+    """
+
+    series_instance_uid: str
+    study_instance_uid: str
+    description: str
+    acquired_at: datetime | None
+    kind: ImageKind
+    temporal_position: int
+    scanner: Scanner
+    settings: Settings
+    planes: tuple[Plane, ...]
+    pixels: NDArray[np.float32]
+    files: tuple[SourceFile, ...] = ()
+    remarks: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
+class Acquisition:
+    """One or more repeats of one series: same study, geometry and settings, in order of acquisition."""
+
+    repeats: tuple[Series, ...]
+    remarks: tuple[str, ...] = ()
+
+    @property
+    def first(self) -> Series:
+        """The earliest repeat, on which all but the difference methods work."""
+        return self.repeats[0]
+
+    @property
+    def planes(self) -> tuple[Plane, ...]:
+        """The planes shared by all repeats."""
+        return self.first.planes
+
+    @property
+    def pixels(self) -> NDArray[np.float32]:
+        """(S, R, C) pixels of the earliest repeat."""
+        return self.first.pixels
+
+    @property
+    def scanner(self) -> Scanner:
+        """What the header says of the scanner."""
+        return self.first.scanner
+
+    @property
+    def settings(self) -> Settings:
+        """What the header says of the protocol."""
+        return self.first.settings
+
+
+@dataclass(frozen=True)
+class Reading:
+    """All that a folder held: acquisitions that can be measured, and what was refused."""
+
+    acquisitions: tuple[Acquisition, ...]
+    refused: tuple[Refused, ...]
+
+
+@dataclass(frozen=True)
+class CrossSection:
+    """The outline of the phantom's body in one slice, as a circle fitted to its sub-pixel edge.
+
+    `slice_index` counts from 0; centre and radius are in-plane mm. `rms_mm` is the scatter of the edge about the circle,
+    `edge_fraction` the share of the circumference on which an edge was found and kept.
+    """
+
+    slice_index: int
+    centre_mm: tuple[float, float]
+    radius_mm: float
+    u_centre_mm: float
+    u_radius_mm: float
+    rms_mm: float
+    edge_fraction: float
+
+
+@dataclass(frozen=True, eq=False)
+class Pose:
+    """Where the phantom lies.
+
+    Attributes
+    ----------
+    centre_patient : (3,) float
+        The body's centre, patient mm. Where the slices cannot show it along an axis (one slice through a cylinder), the
+        middle of the stack stands in, and `u_centre_mm` says so by being None for that axis.
+    orientation : (3, 3) float
+        Columns are the phantom's x, y and z axes in patient coordinates.
+    rotation_deg, tilt_deg : float
+        Turn about the phantom's axis against its nominal set-up, and angle between its axis and the slice normal.
+    u_centre_mm : tuple of float or None
+        Standard uncertainty of the centre along the image's x, y and normal; None where it could not be found.
+    u_rotation_deg, u_tilt_deg : float or None
+        None where the phantom cannot show them.
+    sections : tuple of CrossSection
+        The body's outline in each slice that shows it, in slice order.
+    remarks : tuple of str
+        What a technologist should know of the set-up, in plain sentences.
+    """
+
+    centre_patient: Floats
+    orientation: Floats
+    rotation_deg: float
+    tilt_deg: float
+    u_centre_mm: tuple[float | None, float | None, float | None]
+    u_rotation_deg: float | None
+    u_tilt_deg: float | None
+    sections: tuple[CrossSection, ...]
+    remarks: tuple[str, ...] = ()
+
+    def to_phantom(self, points_patient: Floats) -> Floats:
+        """Map patient mm, shape (..., 3), to the phantom's frame."""
+        return (points_patient - self.centre_patient) @ self.orientation
+
+    def to_patient(self, points_phantom: Floats) -> Floats:
+        """Map the phantom's mm, shape (..., 3), to patient mm."""
+        return self.centre_patient + points_phantom @ self.orientation.T
+
+    def section(self, slice_index: int) -> CrossSection | None:
+        """Return the body's outline in a slice (counted from 0), None where the slice does not show it."""
+        return next((s for s in self.sections if s.slice_index == slice_index), None)
+
+
+@dataclass(frozen=True)
+class NotLocated:
+    """Why the phantom was not found, in words a technologist can act on."""
+
+    reason: str
+
+
+@dataclass(frozen=True)
+class Region:
+    """A place where a figure was read, so that a report can draw it.
+
+    `points` are in-plane mm (x, y): the corners of a polygon, the ends of a line, or, for a circle, its centre;
+    `radius_mm` belongs to circles alone. `slice` counts from 1, as in `Measurement`.
+    """
+
+    name: str
+    shape: Literal["circle", "polygon", "line"]
+    slice: int
+    points: tuple[tuple[float, float], ...]
+    radius_mm: float | None = None
+
+
+@dataclass(frozen=True)
+class Measurement:
+    """One figure.
+
+    `slice` counts from 1 along the slice normal; None where no one slice is meant. `details` holds plain JSON values.
+    """
+
+    quantity: str
+    value: float
+    unit: str
+    standard_uncertainty: float
+    method: str
+    method_version: int
+    slice: int | None = None
+    details: Mapping[str, Any] = field(default_factory=lambda: _NOTHING)
+    regions: tuple[Region, ...] = ()
+
+
+@dataclass(frozen=True)
+class NotMeasured:
+    """What could not be measured, and the plain reason."""
+
+    quantity: str
+    reason: str
+
+
+@dataclass(frozen=True, eq=False)
+class Outcome:
+    """All that came of one acquisition; `pose` is None where the phantom was not found."""
+
+    acquisition: Acquisition
+    phantom: str
+    pose: Pose | None
+    measurements: tuple[Measurement, ...]
+    not_measured: tuple[NotMeasured, ...]
+    remarks: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
+class Verdict:
+    """A measurement held against a limit.
+
+    `limit` is the sentence a report prints ("at most 2.5 %"); `lower` and `upper` are what was applied, None where open.
+    """
+
+    quantity: str
+    conformity: Conformity
+    lower: float | None
+    upper: float | None
+    limit: str
+    rule: str
+    source: str
+
+
+@dataclass(frozen=True)
+class Judged:
+    """A measurement as the record keeps it; `verdict` is None where no limit applies."""
+
+    measurement: Measurement
+    verdict: Verdict | None
+
+
+@dataclass(frozen=True)
+class RecordedAcquisition:
+    """One acquisition as the record keeps it, with all that is needed to trace each figure."""
+
+    identifier: int
+    scanner_name: str
+    phantom: str
+    phantom_sha256: str
+    acquired_at: datetime
+    taken_in_at: datetime
+    scanner: Scanner
+    settings: Settings
+    series_uids: tuple[str, ...]
+    files: tuple[SourceFile, ...]
+    centre_patient: tuple[float, float, float] | None
+    rotation_deg: float | None
+    tilt_deg: float | None
+    judged: tuple[Judged, ...]
+    not_measured: tuple[NotMeasured, ...]
+    remarks: tuple[str, ...]
+    software_version: str
+    limits_version: int
+    limits_sha256: str
+
+
+@dataclass(frozen=True)
+class Session:
+    """All acquisitions of one scanner on one day, in order of time."""
+
+    scanner_name: str
+    day: date
+    acquisitions: tuple[RecordedAcquisition, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class Picture:
+    """One image with the regions that figures were read in, for a report to draw.
+
+    `pixels` is (R, C) float32; `slice` counts from 1; every region lies in that slice.
+    """
+
+    title: str
+    pixels: NDArray[np.float32]
+    plane: Plane
+    slice: int
+    regions: tuple[Region, ...]

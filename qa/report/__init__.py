@@ -1,0 +1,1 @@
+"""Figures, pages and the dated PDF."""

@@ -1,0 +1,1 @@
+"""Digital phantoms of known truth, scanned by a model of an MR scanner."""
