@@ -352,6 +352,8 @@ class Limit:
         Where the figures come from, with the edition.
     key : str
         What the record calls this limit, stable from version to version.
+    shipped : bool
+        A published default that came with the program: any limit of the department that fits comes before it.
     """
 
     quantity: str
@@ -377,6 +379,7 @@ class Limit:
     rule: DecisionRule = "simple"
     source: str = ""
     key: str = ""
+    shipped: bool = False
 
 
 @dataclass(frozen=True)
