@@ -1,0 +1,29 @@
+"""Where the phantom lies in the images: centre, rotation, tilt, each with its uncertainty.
+
+`locate` finds the body's outline in every slice (`qa.locate.outline`), and from the outlines the body in space
+(`qa.locate.body`).
+"""
+
+from qa.locate.body import locate_body
+from qa.phantoms import Phantom
+from qa.records import Acquisition, NotLocated, Pose
+
+__all__ = ["locate"]
+
+
+def locate(acquisition: Acquisition, phantom: Phantom) -> Pose | NotLocated:
+    """Find the phantom.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        Magnitude images; the first repeat is looked at.
+    phantom : Phantom
+        What to look for.
+
+    Returns
+    -------
+    Pose or NotLocated
+        Where it lies, or why it was not found, in words a technologist can act on.
+    """
+    return locate_body(acquisition, phantom)
