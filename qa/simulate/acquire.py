@@ -1,0 +1,71 @@
+"""A described scan becomes the record that reading its DICOM files would give."""
+
+import hashlib
+
+from qa.records import Acquisition, Scanner, Series, Settings
+from qa.simulate.encode import scan
+from qa.simulate.setup import Setup
+
+__all__ = ["simulate", "uid"]
+
+
+def uid(setup: Setup, *what: object) -> str:
+    """Return a unique identifier that depends on the scan's seed and identity alone, under the 2.25 root (PS3.5, B.2)."""
+    said = repr((setup.seed, setup.station, setup.serial, setup.acquired_at.isoformat(), setup.description, *what))
+    return f"2.25.{int.from_bytes(hashlib.sha256(said.encode()).digest()[:16], 'big')}"
+
+
+def simulate(setup: Setup) -> Acquisition:
+    """Scan a digital phantom.
+
+    Parameters
+    ----------
+    setup : Setup
+        The scan.
+
+    Returns
+    -------
+    Acquisition
+        All repeats, with the settings that a header would hold; no files.
+    """
+    spacing = setup.thickness_mm if setup.spacing_mm is None else setup.spacing_mm
+    settings = Settings(
+        protocol=setup.protocol,
+        sequence=setup.sequence,
+        slice_thickness_mm=setup.thickness_mm,
+        slice_spacing_mm=spacing,
+        pixel_mm=setup.pixel_mm,
+        matrix=setup.matrix,
+        repetition_ms=setup.repetition_ms,
+        echo_ms=setup.echo_ms,
+        flip_deg=setup.flip_deg,
+        averages=float(setup.averages),
+        bandwidth_hz_per_pixel=setup.bandwidth_hz_per_pixel,
+        phase_encode=setup.phase_encode,
+        receive_coil=setup.receive_coil,
+        frequency_MHz=setup.frequency_MHz,
+    )
+    scanner = Scanner(
+        manufacturer=setup.manufacturer,
+        model=setup.model,
+        station=setup.station,
+        serial=setup.serial,
+        field_strength_T=setup.field_strength_T,
+        software=setup.software,
+    )
+    repeats = tuple(
+        Series(
+            series_instance_uid=uid(setup, "series", k),
+            study_instance_uid=uid(setup, "study"),
+            description=setup.description,
+            acquired_at=setup.started(k),
+            kind="magnitude",
+            temporal_position=1,
+            scanner=scanner,
+            settings=settings,
+            planes=setup.planes,
+            pixels=pixels,
+        )
+        for k, pixels in enumerate(scan(setup))
+    )
+    return Acquisition(repeats=repeats)

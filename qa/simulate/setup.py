@@ -1,0 +1,385 @@
+"""One digital scan, described: the phantom, how it lies, and the scanner with all its imperfections.
+
+Millimetres and axes follow `qa.geometry`. The phantom's nominal frame is that of the image: x along rows, y along columns,
+z along the slice normal; for a square axial stack this is DICOM's patient frame. It is then turned about its own axis and
+tilted about the image's x and y.
+"""
+
+import math
+from dataclasses import dataclass, fields, replace
+from datetime import datetime, timedelta
+from functools import cached_property
+from typing import Any, Literal
+
+import numpy as np
+
+from qa.errors import SettingError
+from qa.geometry import Floats, Plane
+from qa.phantoms import Phantom
+from qa.simulate.signal import larmor_MHz, spin_echo, spoiled_gradient_echo
+
+__all__ = ["PLANES", "Setup", "default_setup"]
+
+Vector = tuple[float, float, float]
+PLANES: dict[str, tuple[Vector, Vector]] = {
+    "axial": ((1.0, 0.0, 0.0), (0.0, 1.0, 0.0)),
+    "coronal": ((1.0, 0.0, 0.0), (0.0, 0.0, -1.0)),
+    "sagittal": ((0.0, 1.0, 0.0), (0.0, 0.0, -1.0)),
+}
+"""Row and column directions of the three cardinal planes as they are commonly displayed."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Setup:
+    """One acquisition of a digital phantom; every field has a value that a healthy scanner might show.
+
+    Attributes
+    ----------
+    phantom : Phantom
+        What is scanned; the only source of geometry.
+    diameter_mm : float or None
+        Diameter of a sphere whose definition leaves it open.
+    matrix, pixel_mm : tuple
+        Rows and columns; row spacing and column spacing, mm.
+    slices, thickness_mm, spacing_mm, stack_centre_patient
+        Number of slices, full width at half maximum of the profile, distance between slice centres (None: the thickness),
+        and the place of the middle of the stack, patient mm.
+    row_direction, column_direction : tuple of float
+        Image axes in patient coordinates.
+    profile_edge_mm : float
+        Softness of the slice profile: standard deviation of the Gaussian that blurs a rectangle; 0 is rectangular.
+    centre_patient, rotation_deg, tilt_x_deg, tilt_y_deg
+        The phantom's centre, its turn about its own axis (x towards y), and its tilt about the image's x and y.
+    snr : float
+        Mean noise-free signal over the measurement region of uniform fill, first repeat, channels all in health, over the standard
+        deviation of the real part of one channel's noise; infinity for no noise.
+    level : float
+        Pixel value of that mean signal.
+    channels, coil, channel_gains, noise_correlation
+        Receive channels, combined as root sum of squares; "loops" round the phantom or "polynomial" maps; one gain a channel
+        (1 in health); correlation of the noise of neighbouring channels, falling geometrically with distance round the array,
+        or the whole matrix.
+    shading_percent, shading_direction_deg, shading_curvature
+        100 (max - min) / (max + min) of the combined sensitivity over the disc of 75 % of the phantom's cross-section, when the phantom
+        lies centred; where the bright side is; share of the shading that is curved rather than linear.
+    ghost_percent, ghost_shift, ghost_phase_deg
+        Ghost amplitude in percent of the object, its shift as a fraction of the field of view along the phase-encode axis
+        (0.5: alternating lines; else one ghost to either side), and its phase.
+    gain_drift_percent, gain_drift_slope_percent
+        Change of gain from one repeat to the next: throughout, and rising linearly along x to this much at 100 mm.
+    scale_x_percent, scale_y_percent, nonlinearity_x_mm, nonlinearity_y_mm
+        Image scale error about the isocentre; and displacement at 100 mm from it along each axis, growing as the cube.
+    off_resonance_hz
+        Shifts the image along the readout by this over `bandwidth_hz_per_pixel`.
+    partial_fourier, acquired_fraction, apodisation
+        Share of phase-encode lines acquired, the rest zero; share of k-space acquired along both axes, zero filled to the matrix;
+        "none" or "hann".
+    sequence, repetition_ms, echo_ms, flip_deg, t1_ms, t2_ms, proton_density
+        Spin echo ("SE") or spoiled gradient echo ("GRE", `t2_ms` is then T2*), and the fill.
+    """
+
+    phantom: Phantom
+    diameter_mm: float | None = None
+    matrix: tuple[int, int] = (256, 256)
+    pixel_mm: tuple[float, float] = (1.0, 1.0)
+    slices: int = 1
+    thickness_mm: float = 5.0
+    spacing_mm: float | None = None
+    stack_centre_patient: Vector = (0.0, 0.0, 0.0)
+    row_direction: Vector = (1.0, 0.0, 0.0)
+    column_direction: Vector = (0.0, 1.0, 0.0)
+    profile_edge_mm: float = 0.0
+    centre_patient: Vector = (0.0, 0.0, 0.0)
+    rotation_deg: float = 0.0
+    tilt_x_deg: float = 0.0
+    tilt_y_deg: float = 0.0
+    snr: float = 150.0
+    level: float = 8000.0
+    channels: int = 1
+    coil: Literal["loops", "polynomial"] = "loops"
+    channel_gains: tuple[float, ...] | None = None
+    noise_correlation: float | tuple[tuple[float, ...], ...] = 0.0
+    shading_percent: float = 5.0
+    shading_direction_deg: float = 30.0
+    shading_curvature: float = 0.5
+    ghost_percent: float = 0.0
+    ghost_shift: float = 0.5
+    ghost_phase_deg: float = 0.0
+    gain_drift_percent: float = 0.0
+    gain_drift_slope_percent: float = 0.0
+    scale_x_percent: float = 0.0
+    scale_y_percent: float = 0.0
+    nonlinearity_x_mm: float = 0.0
+    nonlinearity_y_mm: float = 0.0
+    off_resonance_hz: float = 0.0
+    partial_fourier: float = 1.0
+    acquired_fraction: float = 1.0
+    apodisation: Literal["none", "hann"] = "none"
+    phase_encode: Literal["row", "column"] = "column"
+    repeats: int = 2
+    sequence: Literal["SE", "GRE"] = "SE"
+    repetition_ms: float = 500.0
+    echo_ms: float = 20.0
+    flip_deg: float = 90.0
+    averages: int = 1
+    bandwidth_hz_per_pixel: float = 150.0
+    t1_ms: float = 300.0
+    t2_ms: float = 250.0
+    proton_density: float = 1.0
+    field_strength_T: float = 3.0
+    frequency_offset_ppm: float = 0.0
+    seed: int = 0
+    manufacturer: str = "Invented"
+    model: str = "Model 7"
+    station: str = "NORTH3T"
+    serial: str = "40071"
+    software: str = "1"
+    institution: str = "Saltmarsh Imaging"
+    receive_coil: str = "HEAD"
+    protocol: str = "QA_SE"
+    series_description: str = ""
+    study_description: str = "QA weekly"
+    patient_id: str = ""
+    acquired_at: datetime = datetime(2026, 11, 23, 7, 42, 10)  # noqa: DTZ001 - the scanner's own clock has no time zone
+    repeat_seconds: float = 130.0
+
+    def __post_init__(self) -> None:
+        """Refuse what cannot be."""
+        check(self)
+
+    @property
+    def frequency_MHz(self) -> float:
+        """Centre frequency by the Larmor relation, with the magnet's own offset."""
+        return larmor_MHz(self.field_strength_T) * (1 + 1e-6 * self.frequency_offset_ppm)
+
+    @property
+    def relative_signal(self) -> float:
+        """Signal of the fill under this protocol, in units of its equilibrium magnetisation at proton density 1."""
+        formula = spin_echo if self.sequence == "SE" else spoiled_gradient_echo
+        return formula(self.proton_density, self.t1_ms, self.t2_ms, self.repetition_ms, self.echo_ms, self.flip_deg)
+
+    @property
+    def body_diameter_mm(self) -> float:
+        """Diameter of what lies in the scanner."""
+        diameter = self.phantom.body.diameter_mm if self.diameter_mm is None else self.diameter_mm
+        assert diameter is not None  # noqa: S101 - checked on construction
+        return diameter
+
+    @property
+    def description(self) -> str:
+        """Series description."""
+        return self.series_description or f"QA {self.phantom.name}"
+
+    @cached_property
+    def axes(self) -> Floats:
+        """Row direction, column direction and slice normal as the columns of a (3, 3) matrix."""
+        row, column = np.asarray(self.row_direction), np.asarray(self.column_direction)
+        return np.stack([row, column, np.cross(row, column)], axis=1)
+
+    @cached_property
+    def planes(self) -> tuple[Plane, ...]:
+        """The slices' planes, in order along the normal."""
+        (rows, columns), (dy, dx) = self.matrix, self.pixel_mm
+        spacing = self.thickness_mm if self.spacing_mm is None else self.spacing_mm
+        corner = np.asarray(self.stack_centre_patient) - self.axes @ ((columns - 1) / 2 * dx, (rows - 1) / 2 * dy, 0.0)
+        heights = (np.arange(self.slices) - (self.slices - 1) / 2) * spacing
+        return tuple(
+            Plane(
+                position_patient=_vector(corner + height * self.axes[:, 2]),
+                row_direction=self.row_direction,
+                column_direction=self.column_direction,
+                pixel_mm=self.pixel_mm,
+                shape=self.matrix,
+            )
+            for height in heights
+        )
+
+    @cached_property
+    def tilt(self) -> Floats:
+        """(3, 3) turn that tilts the phantom's axis out of the slice normal, in image axes."""
+        a, b = math.radians(self.tilt_x_deg), math.radians(self.tilt_y_deg)
+        about_x = np.array([[1, 0, 0], [0, math.cos(a), -math.sin(a)], [0, math.sin(a), math.cos(a)]])
+        about_y = np.array([[math.cos(b), 0, math.sin(b)], [0, 1, 0], [-math.sin(b), 0, math.cos(b)]])
+        turned: Floats = about_x @ about_y
+        return turned
+
+    @cached_property
+    def orientation(self) -> Floats:
+        """(3, 3): the phantom's x, y and z axes in patient coordinates, as columns."""
+        c = math.radians(self.rotation_deg)
+        about_z = np.array([[math.cos(c), -math.sin(c), 0], [math.sin(c), math.cos(c), 0], [0, 0, 1]])
+        turned: Floats = self.axes @ self.tilt @ about_z
+        return turned
+
+    @property
+    def off_resonance_shift_mm(self) -> tuple[float, float]:
+        """Shift of the image along in-plane x and y from off-resonance: along the readout."""
+        pixels = self.off_resonance_hz / self.bandwidth_hz_per_pixel
+        if self.phase_encode == "column":
+            return pixels * self.pixel_mm[1], 0.0
+        return 0.0, pixels * self.pixel_mm[0]
+
+    def started(self, repeat: int) -> datetime:
+        """Time at which a repeat (counted from 0) began."""
+        return self.acquired_at + timedelta(seconds=repeat * self.repeat_seconds)
+
+    def but(self, **changes: Any) -> "Setup":  # noqa: ANN401 - any field
+        """Return the same scan with some settings changed."""
+        unknown = set(changes) - {f.name for f in fields(self)}
+        if unknown:
+            raise SettingError(f"There is no setting {sorted(unknown)[0]!r} of a digital scan: see qa.simulate.Setup.")
+        return replace(self, **changes)
+
+
+def default_setup(phantom: Phantom, **changes: Any) -> Setup:  # noqa: ANN401 - any field of Setup
+    """Describe a plain scan of a phantom: the slices its definition asks for, and a field of view with margins for ghosting.
+
+    Parameters
+    ----------
+    phantom : Phantom
+        What is scanned.
+    **changes
+        Any field of `Setup`.
+
+    Returns
+    -------
+    Setup
+        The scan.
+
+    Raises
+    ------
+    SettingError
+        A setting that cannot be.
+    """
+    settings: dict[str, Any] = {"phantom": phantom}
+    if phantom.body.diameter_mm is None:
+        settings["diameter_mm"] = 170.0
+    if phantom.slices is not None:
+        stack = phantom.slices
+        middle = stack.first_z_mm + (stack.count - 1) / 2 * stack.spacing_mm
+        settings |= {
+            "slices": stack.count,
+            "thickness_mm": stack.thickness_mm,
+            "spacing_mm": stack.spacing_mm,
+            "stack_centre_patient": (0.0, 0.0, middle),
+        }
+    if "matrix" not in changes and "pixel_mm" not in changes:
+        diameter = changes.get("diameter_mm") or phantom.body.diameter_mm or 170.0
+        settings["matrix"] = (256, 256) if diameter <= 190 else (300, 300)
+    return Setup(**(settings | changes))
+
+
+def _vector(values: Floats) -> Vector:
+    return float(values[0]), float(values[1]), float(values[2])
+
+
+_POSITIVE = (
+    "thickness_mm",
+    "snr",
+    "level",
+    "bandwidth_hz_per_pixel",
+    "repetition_ms",
+    "t1_ms",
+    "t2_ms",
+    "proton_density",
+    "field_strength_T",
+)
+_COUNTS = ("slices", "channels", "repeats", "averages")
+_RANGES: dict[str, tuple[float, float]] = {
+    "profile_edge_mm": (0, 10),
+    "tilt_x_deg": (-60, 60),
+    "tilt_y_deg": (-60, 60),
+    "rotation_deg": (-360, 360),
+    "shading_percent": (0, 60),
+    "shading_curvature": (0, 1),
+    "ghost_percent": (0, 100),
+    "ghost_shift": (0, 0.5),
+    "gain_drift_percent": (-50, 50),
+    "gain_drift_slope_percent": (-50, 50),
+    "scale_x_percent": (-20, 20),
+    "scale_y_percent": (-20, 20),
+    "nonlinearity_x_mm": (-10, 10),
+    "nonlinearity_y_mm": (-10, 10),
+    "partial_fourier": (0.5, 1),
+    "acquired_fraction": (0.25, 1),
+    "echo_ms": (0, math.inf),
+    "flip_deg": (0, 180),
+    "repeat_seconds": (0, math.inf),
+}
+
+
+def check(setup: Setup) -> None:
+    """Refuse a scan that cannot be, in one sentence that names the setting."""
+    for name in _COUNTS:
+        value = getattr(setup, name)
+        if not isinstance(value, int) or value < 1:
+            raise SettingError(f"{name} is {value!r}: it must be a whole number, at least 1.")
+    for name in _POSITIVE:
+        value = getattr(setup, name)
+        if not value > 0 or (math.isinf(value) and name != "snr"):
+            raise SettingError(f"{name} is {value:g}: it must be above 0.")
+    for name, (low, high) in _RANGES.items():
+        value = getattr(setup, name)
+        if not low <= value <= high:
+            raise SettingError(f"{name} is {value:g}: it must lie from {low:g} to {high:g}.")
+    if setup.repetition_ms <= setup.echo_ms:
+        raise SettingError(f"echo_ms is {setup.echo_ms:g}: it must be below repetition_ms, {setup.repetition_ms:g}.")
+    _check_grid(setup)
+    _check_coil(setup)
+    _check_fit(setup)
+
+
+def _check_grid(setup: Setup) -> None:
+    if len(setup.matrix) != 2 or not all(isinstance(n, int) and 16 <= n <= 2048 for n in setup.matrix):
+        raise SettingError(f"matrix is {setup.matrix!r}: rows and columns must be whole numbers from 16 to 2048.")
+    if len(setup.pixel_mm) != 2 or not all(0.05 <= p <= 20 for p in setup.pixel_mm):
+        raise SettingError(f"pixel_mm is {setup.pixel_mm!r}: both spacings must lie from 0.05 to 20 mm.")
+    if setup.spacing_mm is not None and not 0 < setup.spacing_mm < math.inf:
+        raise SettingError(f"spacing_mm is {setup.spacing_mm:g}: it must be above 0.")
+    row, column = np.asarray(setup.row_direction), np.asarray(setup.column_direction)
+    if not np.allclose([row @ row, column @ column, row @ column], [1, 1, 0], atol=1e-6):
+        raise SettingError("row_direction and column_direction must be unit vectors at right angles to each other.")
+
+
+def _check_coil(setup: Setup) -> None:
+    gains = setup.channel_gains
+    if gains is not None and (len(gains) != setup.channels or min(gains) < 0 or max(gains) <= 0):
+        raise SettingError(f"channel_gains must hold {setup.channels} values, none negative and not all zero.")
+    if isinstance(setup.noise_correlation, tuple):
+        matrix = np.asarray(setup.noise_correlation, dtype=np.float64)
+        if matrix.shape != (setup.channels, setup.channels) or not np.allclose(matrix, matrix.T):
+            raise SettingError(f"noise_correlation must be a symmetric matrix of {setup.channels} by {setup.channels} values.")
+        if not np.allclose(np.diag(matrix), 1) or np.linalg.eigvalsh(matrix)[0] <= 0:
+            raise SettingError("noise_correlation must have ones on its diagonal and be positive definite.")
+    elif not 0 <= setup.noise_correlation < 1:
+        raise SettingError(f"noise_correlation is {setup.noise_correlation:g}: it must lie from 0 to below 1.")
+
+
+def _check_fit(setup: Setup) -> None:
+    if setup.diameter_mm is None and setup.phantom.body.diameter_mm is None:
+        raise SettingError(f"diameter_mm is missing: the definition of {setup.phantom.name} leaves the diameter open.")
+    if setup.diameter_mm is not None:
+        if not setup.diameter_mm > 0:
+            raise SettingError(f"diameter_mm is {setup.diameter_mm:g}: it must be above 0.")
+        if setup.phantom.body.diameter_mm not in {None, setup.diameter_mm}:
+            raise SettingError(
+                f"diameter_mm may not be set: {setup.phantom.name} is {setup.phantom.body.diameter_mm:g} mm wide."
+            )
+    radius = setup.body_diameter_mm / 2
+    (rows, columns), (dy, dx) = setup.matrix, setup.pixel_mm
+    for plane in setup.planes:
+        centre = plane.from_patient(np.asarray(setup.centre_patient))
+        axis = setup.axes.T @ setup.orientation[:, 2]
+        if setup.phantom.body.shape == "cylinder" and abs(axis[2]) > 0.1:
+            centre = centre - axis * centre[2] / axis[2]
+        shift = setup.off_resonance_shift_mm
+        for k, (count, step, scale, name) in enumerate(
+            ((columns, dx, setup.scale_x_percent, "columns"), (rows, dy, setup.scale_y_percent, "rows"))
+        ):
+            reach = radius * (1 + scale / 100)
+            at = float(centre[k]) + shift[k]
+            if at - reach < -0.5 * step + step or at + reach > (count - 0.5) * step - step:
+                raise SettingError(
+                    f"matrix and pixel_mm give a field of view of {count * step:g} mm along {name}: the phantom, "
+                    f"{2 * radius:g} mm wide, does not fit it where centre_patient puts it."
+                )
