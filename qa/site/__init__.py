@@ -1,6 +1,6 @@
 """site.toml becomes checked records: scanners, expectations, limits, schedule, people."""
 
-from qa.site.limits import Limit, limits_json, limits_sha256, parse_limits, shipped_limits
+from qa.site.limits import limits_json, limits_sha256, parse_limits, shipped_limits
 from qa.site.load import FILE_NAME, Site, load_site
 from qa.site.matching import changed_settings, expectation_for, is_phantom_identity, match_scanner
 from qa.site.tables import Charts, Department, Downtime, Expectation, Mail, Match, ReportSettings, SiteScanner
@@ -13,7 +13,6 @@ __all__ = [
     "Department",
     "Downtime",
     "Expectation",
-    "Limit",
     "Mail",
     "Match",
     "ReportSettings",

@@ -3,7 +3,7 @@
 import re
 import tomllib
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import Any
@@ -13,7 +13,8 @@ from pydantic import BaseModel, ValidationError
 
 from qa.errors import SiteError
 from qa.phantoms import Phantom, load_phantom, phantom_names
-from qa.site.limits import Limit, did_you_mean, expand, limits_json, limits_sha256, shipped_limits
+from qa.records import Limit
+from qa.site.limits import LimitTable, did_you_mean, limits_json, limits_sha256, shipped_limits
 from qa.site.tables import (
     Charts,
     Department,
@@ -35,7 +36,7 @@ _TABLES: dict[str, type[BaseModel]] = {
     "record": RecordPlace,
     "scanner": SiteScanner,
     "expect": Expectation,
-    "limit": Limit,
+    "limit": LimitTable,
     "downtime": Downtime,
     "mail": Mail,
     "charts": Charts,
@@ -177,8 +178,8 @@ def load_site(folder: Path) -> Site:
         for number, patterns in enumerate(entries):
             checker.known((table, number, "scanner"), patterns, names)
     for number, limit in own:
-        checker.known(("limit", number, "scanner"), limit.scanner, names)
-        checker.known(("limit", number, "phantom"), limit.phantom, sorted({*phantom_names(), *phantoms}))
+        checker.known(("limit", number, "scanner"), (limit.scanner,), names)
+        checker.known(("limit", number, "phantom"), (limit.phantom,), sorted({*phantom_names(), *phantoms}))
     return Site(
         folder=folder,
         department=file.department,
@@ -262,22 +263,20 @@ class _Checker:
     def limits(self, tables: list[dict[str, Any]]) -> list[tuple[int, Limit]]:
         """Check the department's own limits, each by itself and against each other."""
         own: list[tuple[int, Limit]] = []
-        seen: dict[tuple[Any, ...], tuple[int, Limit]] = {}
+        seen: dict[str, tuple[int, Limit]] = {}
         for number, table in enumerate(tables):
-            if "shipped" in table:
-                raise self.wrong(("limit", number, "shipped"), "is not a key that site.toml may set")
-            for one in expand(table):
-                try:
-                    limit = Limit.model_validate(one)
-                except ValidationError as error:
-                    raise self.error(error, "limit", number) from error
-                first, other = seen.setdefault(limit.selectors, (number, limit))
-                if first != number or other is not limit:
-                    verb = "repeats" if other.bounds == limit.bounds else "contradicts"
+            try:
+                limits = LimitTable.model_validate(table).limits()
+            except ValidationError as error:
+                raise self.error(error, "limit", number) from error
+            for limit in limits:
+                if limit.key in seen:
+                    first, other = seen[limit.key]
+                    verb = "repeats" if replace(other, source=limit.source) == limit else "contradicts"
                     raise self.wrong(
-                        ("limit", number),
-                        f"{verb} [[limit]] number {first + 1}: both are for {limit.quantity}, for the same cases; keep one",
+                        ("limit", number), f"{verb} [[limit]] number {first + 1}: both are for {limit.key}; keep one"
                     )
+                seen[limit.key] = number, limit
                 own.append((number, limit))
         return own
 
@@ -366,8 +365,7 @@ def _allowed(where: tuple[str | int, ...]) -> list[str]:
     model = _NESTED.get((keys[0], keys[1])) if len(keys) > 2 else _TABLES.get(keys[0])
     if model is None:
         return list(_TABLES)
-    names = [field.alias or name for name, field in model.model_fields.items()]
-    return [name for name in names if name != "shipped"]
+    return [field.alias or name for name, field in model.model_fields.items()]
 
 
 _HEAD = re.compile(r"^\s*\[\[?\s*\"?([^\]\"]+?)\"?\s*\]\]?\s*(#.*)?$")

@@ -4,7 +4,6 @@ import unicodedata
 from collections.abc import Mapping
 from dataclasses import fields
 from datetime import date
-from types import MappingProxyType
 from typing import Annotated, Any, Literal
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
@@ -197,7 +196,7 @@ SETTING_NAMES = tuple(f.name for f in fields(Settings))
 def _settings(given: Any) -> Any:  # noqa: ANN401 - what TOML holds
     if not isinstance(given, dict):
         raise ValueError("must be a table such as { repetition_ms = 500, echo_ms = 20 }")  # noqa: TRY004 - pydantic's way
-    return MappingProxyType({key: _setting(key, value) for key, value in given.items()})
+    return {key: _setting(key, value) for key, value in given.items()}
 
 
 def _setting(key: str, value: Any) -> Any:  # noqa: ANN401 - what TOML holds
@@ -231,7 +230,7 @@ class Expectation(_Table):
     phantom: Text
     series: Pattern = "*"
     patient_id: Annotated[Pattern, AfterValidator(_patient_pattern)]
-    settings: Annotated[Mapping[str, Any], BeforeValidator(_settings)] = MappingProxyType({})
+    settings: Annotated[Mapping[str, Any], BeforeValidator(_settings), Field(default_factory=dict)]
     optional: Switch = False
 
 

@@ -27,27 +27,22 @@ def write_site_template(folder: Path) -> Path:
     Raises
     ------
     UsageError
-        There is a site.toml already, or the path is not a folder.
+        There is a site.toml already, or a file where a folder should be.
     FaultError
         The folder cannot be written to.
     """
     folder = Path(folder)
     path = folder / FILE_NAME
+    if path.exists():
+        raise UsageError(f"{path}: there is one already, and it was left as it is: edit it, or choose another folder.")
     text = files("qa.site").joinpath("example.toml").read_text("utf-8")
     try:
-        folder.mkdir(parents=True, exist_ok=True)
+        for name in SUBFOLDERS:
+            (folder / name).mkdir(parents=True, exist_ok=True)
         with path.open("x", encoding="utf-8", newline="\n") as file:
             file.write(text)
-        for name in SUBFOLDERS:
-            (folder / name).mkdir(exist_ok=True)
-    except FileExistsError as error:
-        if path.exists():
-            raise UsageError(
-                f"{path}: there is one already, and it was left as it is: edit it, or choose another folder."
-            ) from None
-        raise UsageError(f"{error.filename}: is a file, not a folder: choose another folder.") from None
-    except NotADirectoryError as error:
-        raise UsageError(f"{error.filename}: is not a folder: choose another folder.") from None
+    except (FileExistsError, NotADirectoryError) as error:
+        raise UsageError(f"{error.filename}: is not a folder: choose another place.") from None
     except OSError as error:
         raise FaultError(f"{folder}: cannot be written to ({error.strerror}): check permissions and space.") from error
     return path
