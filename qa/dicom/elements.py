@@ -1,0 +1,313 @@
+"""The one place that touches pydicom's loosely typed data sets: bytes in, plain texts and numbers out.
+
+Values are read straight from the raw elements where they are plain (ASCII text, binary numbers) and through pydicom where a
+character set or a sequence is involved. Whatever is wrong with a value, it reads as absent: no exception of pydicom, which
+may quote the header, leaves this module.
+"""
+
+import contextlib
+import logging
+import math
+import re
+import struct
+import warnings
+import zlib
+from collections.abc import Iterator, Mapping
+from datetime import date, datetime, time
+from io import BytesIO
+from typing import Any
+
+from pydicom.datadict import dictionary_VR
+from pydicom.dataelem import RawDataElement, convert_raw_data_element
+from pydicom.dataset import Dataset
+from pydicom.filereader import read_dataset
+from pydicom.sequence import Sequence
+
+from qa.dicom.refusal import RefusalError
+
+__all__ = ["Elements", "File", "parse", "quietly"]
+
+_TRANSFER_SYNTAX = 0x00020010
+_EXPLICIT = "1.2.840.10008.1.2.1"
+_DEFLATED = "1.2.840.10008.1.2.1.99"
+_BIG_ENDIAN = "1.2.840.10008.1.2.2"
+_IMPLICIT = ("1.2.840.10008.1.2", "1.2.840.113619.5.2")
+_LARGEST_INFLATED = 2**30
+_LONGEST_TEXT = 200
+_BINARY = {
+    "US": "H",
+    "SS": "h",
+    "UL": "I",
+    "SL": "i",
+    "FL": "f",
+    "FD": "d",
+    "UV": "Q",
+    "SV": "q",
+    "OW": "H",
+    "OF": "f",
+    "OD": "d",
+}
+_PREFIX_END = 132
+_UNPRINTABLE = re.compile(r"[^\S ]+|[\x00-\x1f\x7f-\x9f\u2028\u2029\u202a-\u202e\u2066-\u2069\ufeff\ufffd]")
+_DATE = re.compile(r"(\d{4})[.-]?(\d\d)[.-]?(\d\d)")
+_TIME = re.compile(r"(\d\d):?(\d\d)?:?(\d\d)?(?:\.(\d{1,6})\d*)?")
+_Raw = Any
+
+
+@contextlib.contextmanager
+def quietly() -> Iterator[None]:
+    """Keep pydicom's and its plug-ins' warnings and log records back: they may quote a header's values."""
+    loggers = [logging.getLogger(name) for name in ("pydicom", "pylibjpeg", "openjpeg", "libjpeg", "rle")]
+    levels = [logger.level for logger in loggers]
+    try:
+        for logger in loggers:
+            logger.setLevel(logging.CRITICAL + 1)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")
+            yield
+    finally:
+        for logger, level in zip(loggers, levels, strict=True):
+            logger.setLevel(level)
+
+
+class Elements:
+    """Typed look-ups in a data set, with values of functional groups laid over it where there are any.
+
+    A look-up of something absent, empty, of the wrong kind or not finite gives an empty text, an empty tuple or None.
+    """
+
+    __slots__ = ("_creators", "_dataset", "_over")
+
+    def __init__(self, dataset: Dataset, over: Mapping[int, _Raw] | None = None) -> None:
+        self._dataset = dataset
+        self._over: Mapping[int, _Raw] = over or {}
+        self._creators: dict[tuple[int, str], int] | None = None
+
+    def raw(self, tag: int) -> _Raw:
+        """Return the element as pydicom holds it, raw where it was never looked at; None where it is absent."""
+        element = self._over.get(tag)
+        if element is None:
+            try:
+                element = self._dataset.get_item(tag)
+            except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged element leads it to)
+                return None
+        return element
+
+    def __contains__(self, tag: int) -> bool:
+        element = self.raw(tag)
+        return element is not None and element.value not in (None, b"", "")
+
+    def overlaid(self, over: Mapping[int, _Raw]) -> "Elements":
+        """Return the same data set with other elements laid over it."""
+        return Elements(self._dataset, over)
+
+    def items(self, tag: int) -> list[Dataset]:
+        """Return the items of a sequence."""
+        value = self._converted(self.raw(tag))
+        return list(value) if isinstance(value, Sequence) else []
+
+    def strings(self, tag: int) -> tuple[str, ...]:
+        """Return the values of a text element, trimmed, without control characters."""
+        element = self.raw(tag)
+        if element is None:
+            return ()
+        value = element.value
+        if isinstance(element, RawDataElement) and isinstance(value, bytes):
+            if value.isascii() and b"\x1b" not in value:
+                texts: list[str] = value.decode("ascii").split("\\")
+            else:
+                converted = self._converted(element)
+                texts = [str(each) for each in converted] if _is_list(converted) else [str(converted or "")]
+        else:
+            texts = [str(each) for each in value] if _is_list(value) else [str(value or "")]
+        return tuple(_clean(text) for text in texts)
+
+    def text(self, tag: int) -> str:
+        """Return a text element's value; several values are joined by a space."""
+        return " ".join(part for part in self.strings(tag) if part)[:_LONGEST_TEXT]
+
+    def code(self, tag: int) -> str:
+        """Return a text element's first value in capitals."""
+        values = self.strings(tag)
+        return values[0].upper() if values else ""
+
+    def numbers(self, tag: int) -> tuple[float, ...]:
+        """Return the values of a number element, all finite, or nothing."""
+        element = self.raw(tag)
+        if element is None:
+            return ()
+        try:
+            values = _numbers(element)
+        except (ValueError, TypeError, struct.error, OverflowError, KeyError, AttributeError):
+            return ()
+        return values if all(map(math.isfinite, values)) else ()
+
+    def number(self, tag: int) -> float | None:
+        """Return the first value of a number element."""
+        values = self.numbers(tag)
+        return values[0] if values else None
+
+    def positive(self, tag: int) -> float | None:
+        """Return the first value of a number element where it is above zero."""
+        value = self.number(tag)
+        return value if value is not None and value > 0 else None
+
+    def whole(self, tag: int) -> int | None:
+        """Return the first value of a number element where it is a whole number."""
+        value = self.number(tag)
+        return int(value) if value is not None and value == int(value) else None
+
+    def bytes_of(self, tag: int) -> bytes:
+        """Return the bytes of an element as the file holds them."""
+        element = self.raw(tag)
+        value = None if element is None else element.value
+        return value if isinstance(value, bytes) else b""
+
+    def private(self, group: int, creator: str, offset: int) -> int:
+        """Return the tag of a private element in the block its creator reserved, 0 where there is no such block.
+
+        PS3.5, 7.8.1: element (gggg,00bb) names the creator of (gggg,bb00) to (gggg,bbFF).
+        """
+        if self._creators is None:
+            self._creators = {}
+            for tag in [*self._over, *self._dataset.keys()]:
+                if tag >> 16 & 1 and 0x10 <= tag & 0xFFFF <= 0xFF:
+                    self._creators.setdefault((tag >> 16, self.text(tag).upper()), tag & 0xFF)
+        block = self._creators.get((group, creator.upper()))
+        return 0 if block is None else group << 16 | block << 8 | offset
+
+    def day(self, tag: int) -> date | None:
+        """Return a date (DA)."""
+        return _date(self.text(tag))
+
+    def moment(self, tag: int) -> datetime | None:
+        """Return a date and time (DT), its offset from universal time left out."""
+        text = self.text(tag)
+        return _combined(text[:8], text[8:].split("+")[0].split("-")[0])
+
+    def day_and_time(self, day_tag: int, time_tag: int) -> datetime | None:
+        """Return a date (DA) and a time (TM) as one; midnight where the time is absent is a guess, so None."""
+        return _combined(self.text(day_tag), self.text(time_tag))
+
+    def _converted(self, element: _Raw) -> Any:  # noqa: ANN401 (pydicom's values are of any kind)
+        if element is None:
+            return None
+        if not isinstance(element, RawDataElement):
+            return element.value
+        try:
+            encoding = self._dataset.original_character_set
+            return convert_raw_data_element(element, encoding=encoding).value
+        except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged element leads it to)
+            return None
+
+
+class File:
+    """One parsed file: its elements, its transfer syntax, and the data set for the pixel decoders."""
+
+    __slots__ = ("dataset", "elements", "meta", "transfer_syntax")
+
+    def __init__(self, dataset: Dataset, meta: Dataset, transfer_syntax: str) -> None:
+        self.dataset = dataset
+        self.elements = Elements(dataset)
+        self.meta = Elements(meta)
+        self.transfer_syntax = transfer_syntax
+
+
+def parse(content: bytes) -> File:
+    """Parse a file's header and leave its pixels alone.
+
+    Raises
+    ------
+    RefusalError
+        The bytes are no DICOM data set.
+    """
+    stream = BytesIO(content)
+    try:
+        if content[128:_PREFIX_END] == b"DICM":
+            stream.seek(_PREFIX_END)
+        meta = read_dataset(stream, is_implicit_VR=False, is_little_endian=True, stop_when=_is_past_meta)
+        syntax = Elements(meta).text(_TRANSFER_SYNTAX)
+        if syntax == _DEFLATED:
+            stream = BytesIO(_inflated(content[stream.tell() :]))
+        syntax = syntax or _guessed_syntax(content[stream.tell() : stream.tell() + 6])
+        dataset = read_dataset(
+            stream, is_implicit_VR=syntax in _IMPLICIT, is_little_endian=syntax != _BIG_ENDIAN, stop_when=None
+        )
+    except RefusalError:
+        raise
+    except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged file leads it to, and may quote it)
+        raise RefusalError("the file is damaged: its header cannot be read") from None
+    return File(dataset, meta, syntax)
+
+
+def _is_past_meta(tag: int, _vr: str | None, _length: int) -> bool:
+    return tag >> 16 != 2
+
+
+def _guessed_syntax(start: bytes) -> str:
+    """Guess the encoding of a data set without file meta information from its first element."""
+    if start[4:6].isalpha() and start[4:6].isupper():
+        return _BIG_ENDIAN if start[:1] == b"\x00" else _EXPLICIT
+    return _IMPLICIT[0]
+
+
+def _inflated(deflated: bytes) -> bytes:
+    """Inflate a deflated data set (PS3.5, A.5), up to a bound: a few bytes can ask for gigabytes."""
+    inflater = zlib.decompressobj(-zlib.MAX_WBITS)
+    try:
+        content = inflater.decompress(deflated, _LARGEST_INFLATED)
+    except zlib.error:
+        raise RefusalError("the file is damaged: its deflated content cannot be inflated") from None
+    if inflater.unconsumed_tail:
+        raise RefusalError(
+            f"its deflated content is larger than {_LARGEST_INFLATED // 2**30} GiB: too large for a phantom series"
+        )
+    if not inflater.eof:
+        raise RefusalError("the file is cut short: its deflated content does not end")
+    return content
+
+
+def _numbers(element: _Raw) -> tuple[float, ...]:
+    value = element.value
+    if not isinstance(element, RawDataElement):
+        return tuple(float(each) for each in value) if _is_list(value) else (float(value),)
+    if not value:
+        return ()
+    kind = element.VR
+    if kind is None or kind == "UN":
+        kind = dictionary_VR(element.tag)
+    if " or " in kind:
+        kind = "US"
+    if (letter := _BINARY.get(kind)) is None:
+        return tuple(float(part) for part in value.split(b"\\"))
+    count = len(value) // struct.calcsize(letter)
+    return tuple(map(float, struct.unpack(f"{'<' if element.is_little_endian else '>'}{count}{letter}", value)))
+
+
+def _is_list(value: object) -> bool:
+    return isinstance(value, list | tuple) or (hasattr(value, "__iter__") and not isinstance(value, str | bytes))
+
+
+def _clean(text: str) -> str:
+    return _UNPRINTABLE.sub(" ", text).strip()[:_LONGEST_TEXT]
+
+
+def _date(text: str) -> date | None:
+    found = _DATE.match(text)
+    if found is None:
+        return None
+    try:
+        return date(int(found[1]), int(found[2]), int(found[3]))
+    except ValueError:
+        return None
+
+
+def _combined(day_text: str, time_text: str) -> datetime | None:
+    day, found = _date(day_text), _TIME.match(time_text)
+    if day is None or found is None:
+        return None
+    try:
+        clock = time(int(found[1]), int(found[2] or 0), int(found[3] or 0), int((found[4] or "0").ljust(6, "0")))
+    except ValueError:
+        return None
+    return datetime.combine(day, clock)

@@ -1,0 +1,123 @@
+"""Read a folder: each file's bytes once, its header once, its pixels once; what is not taken in is refused with the reason."""
+
+import hashlib
+from collections import defaultdict
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from qa.dicom.elements import parse, quietly
+from qa.dicom.files import Found, find, read_bytes
+from qa.dicom.frames import Frame
+from qa.dicom.group import group
+from qa.dicom.header import header_of
+from qa.dicom.identity import Header, refuse_people, unmeasurable
+from qa.dicom.images import Decode, frames_of
+from qa.dicom.pixels import decode
+from qa.dicom.refusal import RefusalError
+from qa.dicom.stack import stack
+from qa.records import Reading, Refused, SourceFile
+
+__all__ = ["Admit", "read_files"]
+
+Admit = Callable[[Header], str | None]
+
+
+@dataclass(frozen=True, eq=False)
+class _Taken:
+    source: SourceFile
+    series_uid: str
+    frames: tuple[Frame, ...]
+
+
+def read_files(
+    paths: Path | str | Iterable[Path | str],
+    admit: Admit | None = None,
+    progress: Callable[[int, int], None] | None = None,
+    decode_pixels: Decode = decode,
+) -> Reading:
+    """Do what `qa.dicom.read` promises; `decode_pixels` turns a parsed file into stored values."""
+    files = find(paths)
+    taken: list[_Taken] = []
+    refused: list[Refused] = []
+    lost: dict[str, list[Refused]] = defaultdict(list)
+    for count, file in enumerate(files, start=1):
+        with quietly():
+            outcome, series_uid = _read_one(file, admit or refuse_people, decode_pixels)
+        if isinstance(outcome, _Taken):
+            taken.append(outcome)
+        elif outcome is not None:
+            refused.append(outcome)
+            if series_uid:
+                lost[series_uid].append(outcome)
+        if progress is not None:
+            progress(count, len(files))
+    singles, doubles = _each_once(taken)
+    stacks, left_out = stack([frame for each in singles for frame in each.frames], lost)
+    return Reading(group(stacks), tuple(sorted([*refused, *doubles, *left_out], key=lambda each: str(each.path))))
+
+
+def _read_one(file: Found, admit: Admit, decode_pixels: Decode) -> tuple[_Taken | Refused | None, str]:
+    """Read one file; the Series Instance UID goes with it as far as it is known."""
+    series_uid = ""
+    try:
+        content = read_bytes(file)
+        if content is None:
+            return None, ""
+        parsed = parse(content)
+        header = header_of(parsed)
+        if header.sop_class_uid == _DIRECTORY:
+            return (Refused(file.path, "it is a DICOM directory, which holds no image") if file.asked_for else None), ""
+        reason = unmeasurable(header) or _without_identifiers(header) or admit(header)
+        if reason is not None:
+            return Refused(file.path, reason), ""
+        series_uid = header.series_instance_uid
+        source = SourceFile(file.path, header.sop_instance_uid, hashlib.sha256(content).hexdigest())
+        return _Taken(source, series_uid, tuple(frames_of(parsed, header, source, decode_pixels))), series_uid
+    except RefusalError as refusal:
+        return Refused(file.path, str(refusal)), series_uid
+    except (MemoryError, RecursionError):
+        return Refused(file.path, "the file asks for more memory than a phantom image needs"), series_uid
+
+
+_DIRECTORY = "1.2.840.10008.1.3.10"
+
+
+def _without_identifiers(header: Header) -> str | None:
+    if not header.sop_instance_uid:
+        return "SOP Instance UID is missing: the image cannot be told from others"
+    if not header.series_instance_uid or not header.study_instance_uid:
+        return "Series or Study Instance UID is missing: what the image belongs to is not known"
+    return None
+
+
+def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[Refused]]:
+    """Take each SOP instance once: copies are named, files that differ under one identifier all refused."""
+    by_uid: dict[str, list[_Taken]] = defaultdict(list)
+    for each in taken:
+        by_uid[each.source.sop_instance_uid].append(each)
+    singles: list[_Taken] = []
+    refused: list[Refused] = []
+    for same in by_uid.values():
+        first, *others = same
+        if any(each.source.sha256 != first.source.sha256 for each in others):
+            names = " and ".join(str(each.source.path.name) for each in same[:3])
+            refused += [
+                Refused(each.source.path, f"different files share one SOP Instance UID ({names}): keep the right one")
+                for each in same
+            ]
+        else:
+            singles.append(
+                _with_remarks(
+                    first,
+                    [f"{each.source.path.name} is a copy of {first.source.path.name} and was read once" for each in others],
+                )
+            )
+    return singles, refused
+
+
+def _with_remarks(taken: _Taken, remarks: Sequence[str]) -> _Taken:
+    if not remarks:
+        return taken
+    origin = replace(taken.frames[0].origin, remarks=(*taken.frames[0].origin.remarks, *remarks))
+    return replace(taken, frames=tuple(replace(frame, origin=origin) for frame in taken.frames))
