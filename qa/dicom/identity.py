@@ -7,6 +7,7 @@ A person's name, birth date and sex are not kept: only whether they are given. T
 import re
 from dataclasses import dataclass, field
 from datetime import date, datetime
+from pathlib import Path
 
 __all__ = [
     "Header",
@@ -49,7 +50,8 @@ _PHANTOM_WORDS = re.compile(
 class Header:
     """What `site.toml` and the guards decide on, read without decoding a pixel.
 
-    Texts are empty where the header says nothing. `acquired_at` is local time on the scanner's clock.
+    Texts are empty where the header says nothing. `acquired_at` is local time on the scanner's clock. `sha256` is the hash of
+    the whole file, by which one that was taken in before is known.
     """
 
     modality: str = ""
@@ -67,6 +69,8 @@ class Header:
     software: str = ""
     field_strength_T: float | None = None
     acquired_at: datetime | None = None
+    path: Path = Path()
+    sha256: str = ""
     patient_id: str = field(default="", repr=False)
     names_a_person: bool = field(default=False, repr=False)
     gives_birth_date: bool = field(default=False, repr=False)

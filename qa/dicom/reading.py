@@ -65,14 +65,15 @@ def _read_one(file: Found, admit: Admit, decode_pixels: Decode) -> tuple[_Taken 
         if content is None:
             return None, ""
         parsed = parse(content)
-        header = header_of(parsed)
+        sha256 = hashlib.sha256(content).hexdigest()
+        header = replace(header_of(parsed), path=file.path, sha256=sha256)
         if header.sop_class_uid == _DIRECTORY:
             return (Refused(file.path, "it is a DICOM directory, which holds no image") if file.asked_for else None), ""
         reason = unmeasurable(header) or _without_identifiers(header) or admit(header)
         if reason is not None:
             return Refused(file.path, reason), ""
         series_uid = header.series_instance_uid
-        source = SourceFile(file.path, header.sop_instance_uid, hashlib.sha256(content).hexdigest())
+        source = SourceFile(file.path, header.sop_instance_uid, sha256)
         return _Taken(source, series_uid, tuple(frames_of(parsed, header, source, decode_pixels))), series_uid
     except RefusalError as refusal:
         return Refused(file.path, str(refusal)), series_uid
