@@ -101,6 +101,10 @@ class Elements:
         """Return the same data set with other elements laid over it."""
         return Elements(self._dataset, over)
 
+    def all(self) -> dict[int, _Raw]:
+        """Return all elements by tag."""
+        return {int(tag): self.raw(tag) for tag in list(self._dataset.keys())}
+
     def items(self, tag: int) -> list[Dataset]:
         """Return the items of a sequence."""
         value = self._converted(self.raw(tag))

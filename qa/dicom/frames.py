@@ -33,7 +33,9 @@ class Frame:
     ----------
     contrast : tuple
         Values in which images of one stack agree besides the settings: echo number, inversion time, diffusion weighting,
-        processing steps named in Image Type, stack.
+        sense of phase encoding, processing steps named in Image Type.
+    stack_id : str
+        Which stack of its series the image belongs to, where the file says.
     temporal : int or None
         Temporal position as the file numbers it.
     acquisition, instance, number : int
@@ -47,6 +49,7 @@ class Frame:
     kind: ImageKind
     settings: Settings
     contrast: tuple[object, ...]
+    stack_id: str
     temporal: int | None
     acquisition: int
     instance: int
@@ -57,9 +60,10 @@ class Frame:
 
     @property
     def order(self) -> tuple[object, ...]:
-        """What frames are put in order of time by, and by what the file says of their order where times are the same."""
+        """What frames are put in order of time by, and by what the file says of it where times are the same."""
         return (
             self.acquired_at.isoformat(timespec="microseconds") if self.acquired_at else "unknown",
+            self.origin.series_number,
             self.temporal or 0,
             self.acquisition,
             self.instance,

@@ -66,8 +66,9 @@ def _same_scan(first: Stacked, second: Stacked) -> bool:
 
 
 def _coil_note(first: Stacked, second: Stacked) -> str:
-    ours, theirs = second.series.settings.receive_coil or "none named", first.series.settings.receive_coil or "none named"
-    return f"it agrees with series {first.series.series_instance_uid} in all but the receive coil ({ours}, there {theirs}): not a repeat of it"
+    ours, theirs = (each.series.settings.receive_coil or "none named" for each in (second, first))
+    uid = first.series.series_instance_uid
+    return f"it agrees with series {uid} in all but the receive coil ({ours}, there {theirs}): not a repeat of it"
 
 
 def _scaled_differently(acquisition: _Growing) -> list[str]:

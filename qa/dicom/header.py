@@ -114,8 +114,13 @@ def header_of(file: File) -> Header:
 
 
 def image_type(get: Elements) -> tuple[str, ...]:
-    """Return Image Type, or Frame Type where a functional group gives it, in capitals."""
-    values = get.strings(0x00089007) or get.strings(0x00080008)
+    """Return Image Type, or Frame Type where a functional group gives it, in capitals.
+
+    Siemens' enhanced images say less there than in a private element of the same meaning, whose values are added.
+    """
+    values = list(get.strings(0x00089007) or get.strings(0x00080008))
+    if tag := get.private(0x0021, _SIEMENS_FRAME, 0x75):
+        values += [value for value in get.strings(tag)[2:] if value not in values]
     return tuple(value.upper() for value in values)
 
 
@@ -170,17 +175,9 @@ def kind_of(get: Elements, kinds: tuple[str, ...]) -> ImageKind:
     Complex Image Component (PS3.3, C.8.13.3.1.1) comes first, then the values of Image Type, then the manufacturers' own
     elements. An original image that says nothing is a magnitude image.
     """
-    if (component := _COMPONENTS.get(get.code(0x00089208))) is not None:
+    component = _COMPONENTS.get(get.code(0x00089208)) or _kind_of_type(kinds[2:])
+    if component is not None:
         return component
-    parts = kinds[2:]
-    for value in parts:
-        if value in _MAPS or (value.endswith(" MAP") and not value.startswith("PHASE")):
-            return "other"
-    for value in parts:
-        if (component := _COMPONENTS.get(value)) is not None:
-            return component
-        if value.startswith("PHASE"):
-            return "phase"
     if (tag := get.private(0x0043, _GE, 0x2F)) and (number := get.whole(tag)) is not None:
         return _GE_COMPONENTS.get(number, "other")
     if (tag := get.private(0x2005, _PHILIPS_MR, 0x11)) and (letter := get.code(tag)):
@@ -280,7 +277,8 @@ def _receive_coil(get: Elements) -> str:
 def _parallel_imaging(get: Elements) -> bool | None:
     """Tell whether parallel imaging was used: Parallel Acquisition, else what manufacturers put in private elements.
 
-    Siemens writes a mode text such as "p2" or "p2 s3" where there was any; GE an acceleration factor below 1; Philips a copy of the standard's element.
+    Siemens writes a mode text such as "p2" or "p2 s3" where there was any; GE factors, 1 for none; Philips a copy of the
+    standard's element.
     """
     if (answer := get.code(0x00189077)) in {"YES", "NO"}:
         return answer == "YES"

@@ -152,7 +152,7 @@ def decode(file: File, layout: Layout) -> Stored:
 
 
 def rescaled(stored: Stored, layout: Layout, rescale: Rescale) -> NDArray[np.float32]:
-    """Turn stored values into output values.
+    """Turn stored values, of any shape, into output values.
 
     MONOCHROME1, in which the lowest value is shown brightest, is turned over within the range of stored values first, as a
     viewer shows it: lowest + highest - value. Pixels that are padding read as zero: they hold no signal.

@@ -69,6 +69,7 @@ def _lots(frames: Sequence[Frame]) -> list[list[Frame]]:
             first = lot[0]
             if (
                 first.kind == frame.kind
+                and first.stack_id == frame.stack_id
                 and first.contrast == frame.contrast
                 and same_grid(first.plane, frame.plane)
                 and same_settings(first.settings, frame.settings)
