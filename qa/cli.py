@@ -1,1 +1,275 @@
-"""To come."""
+"""The commands: read arguments, call one function, print. Nothing is computed here."""
+
+import os
+import sys
+from collections.abc import Iterable, Sequence
+from datetime import date
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from qa import __version__
+from qa.errors import EvenfieldError, ExitStatus, UsageError
+
+if TYPE_CHECKING:
+    from qa.pipeline import Progress
+
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    name="evenfield",
+    no_args_is_help=True,
+    add_completion=False,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+    help="Keeps MR scanners honest: phantom images in, figures with uncertainty, limits, history and a dated PDF report out.",
+)
+
+SiteOption = Annotated[
+    Path, typer.Option("--site", envvar="EVENFIELD_SITE", help="The department folder, the one with site.toml.")
+]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print the figures as one JSON object, and nothing else.")]
+QuietOption = Annotated[bool, typer.Option("--quiet", "-q", help="Say nothing that is not needed.")]
+PathsArgument = Annotated[list[Path], typer.Argument(help="Folders or files of DICOM images.", show_default=False)]
+HERE = Path()
+
+
+def say(text: str) -> None:
+    """Print what is not a figure, to standard error."""
+    print(text, file=sys.stderr)  # noqa: T201 - this is where the program speaks
+
+
+def put(text: str) -> None:
+    """Print figures, to standard output."""
+    print(text)  # noqa: T201 - this is where the program answers
+
+
+def _day(text: str | None, option: str) -> date | None:
+    if text is None:
+        return None
+    try:
+        return date.fromisoformat(text)
+    except ValueError:
+        raise UsageError(f"{option}: {text!r} is not a date: write it as 2026-11-23.") from None
+
+
+def _progress(*, quiet: bool) -> "Progress":
+    """Return a wrapper that shows a bar on a terminal, and nothing when output is redirected."""
+
+    def plain(items: Sequence[Any], _title: str) -> Iterable[Any]:
+        return items
+
+    def bar(items: Sequence[Any], title: str) -> Iterable[Any]:
+        from rich.console import Console
+        from rich.progress import track
+
+        return track(items, description=title, console=Console(stderr=True), transient=True)
+
+    return plain if quiet or not sys.stderr.isatty() else bar
+
+
+def _finish(status: ExitStatus) -> None:
+    raise typer.Exit(int(status))
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        put(f"evenfield {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _root(
+    *,
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
+    """Keep MR scanners honest: phantom images in, figures with uncertainty, limits, history and a dated PDF report out."""
+
+
+@app.command()
+def init(folder: Annotated[Path, typer.Argument(help="The new department folder.")]) -> None:
+    """Start a department folder with a commented site.toml.
+
+    Example: evenfield init /srv/mr-qa
+    """
+    from qa.site import write_site_template
+
+    path = write_site_template(folder)
+    say(
+        f"{path} is a worked example: put in your scanners and what is expected of each, then copy series into {folder}/inbox."
+    )
+
+
+@app.command()
+def measure(
+    paths: PathsArgument,
+    *,
+    phantom: Annotated[
+        str, typer.Option("--phantom", help="A shipped phantom's name, or the path of your own definition (.toml).")
+    ],
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+) -> None:
+    """Measure a folder of DICOM files and print the figures; nothing is stored.
+
+    Example: evenfield measure scans/monday --phantom sphere-170
+    """
+    from qa.pipeline import measure_paths
+
+    outcomes, refused = measure_paths(paths, phantom, _progress(quiet=quiet))
+    if as_json:
+        from qa.report.figures_json import measurements_document, to_json
+
+        put(to_json(measurements_document(outcomes, refused)))
+    else:
+        from qa.report.terminal import outcome_text
+
+        for outcome in outcomes:
+            put(outcome_text(outcome))
+    if not quiet:
+        for one in refused:
+            say(f"refused {one.path}: {one.reason}")
+    if not outcomes:
+        if not refused and not quiet:
+            say(f"{', '.join(map(str, paths))}: no DICOM image was found: give a folder that holds a phantom's series.")
+        _finish(ExitStatus.NEEDS_A_PERSON)
+    if refused or any(not outcome.measurements for outcome in outcomes):
+        _finish(ExitStatus.NEEDS_A_PERSON)
+
+
+@app.command()
+def ingest(
+    paths: Annotated[
+        list[Path] | None, typer.Argument(help="Folders or files; the inbox when none is given.", show_default=False)
+    ] = None,
+    *,
+    site: SiteOption = HERE,
+    quiet: QuietOption = False,
+) -> None:
+    """Take series in: measure, judge, file away, record. With no path, from the inbox.
+
+    Example: evenfield ingest --site /srv/mr-qa
+    """
+    from qa.pipeline import open_department, survey, take_in
+    from qa.report.terminal import intake_lines
+
+    with open_department(site) as department:
+        intake = take_in(department, paths or (), _progress(quiet=quiet))
+        if not quiet:
+            for line in intake_lines(intake):
+                say(line)
+        _finish(survey(department).exit_status(refused=bool(intake.refused)))
+
+
+@app.command()
+def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
+    """Run the scheduled job: take the inbox in, look for scanners out of limits or overdue, print only what needs a person.
+
+    Example (crontab): 30 6 * * * evenfield check --site /srv/mr-qa
+    """
+    from qa.pipeline import open_department, survey, take_in
+    from qa.report.terminal import attention_lines
+
+    with open_department(site) as department:
+        intake = take_in(department)
+        found = survey(department)
+        if not quiet:
+            for line in attention_lines(intake, found):
+                put(line)
+        _finish(found.exit_status(refused=bool(intake.refused)))
+
+
+@app.command()
+def status(*, site: SiteOption = HERE, as_json: JsonOption = False, quiet: QuietOption = False) -> None:
+    """Show the fleet at a glance, one line a scanner.
+
+    Example: evenfield status --site /srv/mr-qa
+    """
+    from qa.pipeline import open_department, survey
+
+    with open_department(site) as department:
+        found = survey(department)
+        if as_json:
+            from qa.report.figures_json import status_document, to_json
+
+            put(to_json(status_document(found)))
+        elif not quiet:
+            from qa.report.terminal import status_table
+
+            put(status_table(found))
+        _finish(found.exit_status(refused=False))
+
+
+@app.command()
+def report(
+    scanners: Annotated[
+        list[str] | None, typer.Argument(help="Names from site.toml; all of them when none is given.", show_default=False)
+    ] = None,
+    *,
+    site: SiteOption = HERE,
+    first: Annotated[str | None, typer.Option("--from", help="First day of the period, as 2026-01-31.")] = None,
+    last: Annotated[str | None, typer.Option("--to", help="Last day of the period.")] = None,
+    as_of: Annotated[
+        str | None, typer.Option("--as-of", help="The day the report is dated with; today when not given.")
+    ] = None,
+    page: Annotated[str | None, typer.Option("--page", help="A4 or Letter; site.toml decides when not given.")] = None,
+    quiet: QuietOption = False,
+) -> None:
+    """Render the dated PDF trend report of each scanner.
+
+    Example: evenfield report north-3t --from 2026-01-01 --to 2026-12-31
+    """
+    from qa.pipeline import open_department, write_reports
+
+    days = (_day(first, "--from"), _day(last, "--to"), _day(as_of, "--as-of"))
+    with open_department(site) as department:
+        for path in write_reports(department, scanners or (), *days, page=page, progress=_progress(quiet=quiet)):
+            put(str(path))
+
+
+@app.command()
+def demo(
+    folder: Annotated[Path, typer.Argument(help="Where to build it: a new or an empty folder.")] = Path("evenfield-demo"),
+    *,
+    quiet: QuietOption = False,
+) -> None:
+    """Build an invented department of digital phantoms and run the whole job on it, from empty folder to PDF.
+
+    Example: evenfield demo /tmp/saltmarsh
+    """
+    from qa.demo import build_demo
+
+    for line in build_demo(folder, _progress(quiet=quiet)):
+        put(line)
+
+
+def main() -> None:
+    """Run the program; whatever goes wrong ends in one sentence and the documented exit status."""
+    try:
+        app()
+    except EvenfieldError as error:
+        say(f"evenfield: {error}")
+        raise SystemExit(int(error.exit_status)) from None
+    except KeyboardInterrupt:
+        say("evenfield: stopped; what was done is kept, and a rerun goes on from there.")
+        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
+    except BrokenPipeError:
+        # The reader of our output has gone; Python would complain once more while closing it.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
+    except Exception as error:
+        if os.environ.get("EVENFIELD_TRACEBACK"):
+            raise
+        say(
+            f"evenfield: a fault in the program itself ({type(error).__name__}): what was done is kept. "
+            "Set EVENFIELD_TRACEBACK=1 and run again to see where."
+        )
+        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
+
+
+if __name__ == "__main__":
+    main()
