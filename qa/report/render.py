@@ -1,0 +1,98 @@
+"""Templates become HTML, HTML becomes PDF; nothing is fetched from outside `templates/` and the page's own figures."""
+
+import re
+import warnings
+from collections.abc import Mapping
+from functools import lru_cache
+from typing import TYPE_CHECKING
+
+from qa.errors import FaultError
+from qa.resources import shipped_folder
+
+if TYPE_CHECKING:
+    from jinja2 import Environment
+
+__all__ = ["fill_template", "to_pdf"]
+
+
+# Characters that no page can hold or that turn the text around them: controls but tab and line ends, surrogates, direction
+# overrides and isolates, non-characters.
+_UNPRINTABLE = re.compile(
+    "[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\u202a-\u202e\u2066-\u2069\ufdd0-\ufdef\ufffe\uffff]"
+)
+
+
+def _printable(content: object) -> object:
+    """Put a question mark in the place of what cannot be printed; leave markup that a template made alone."""
+    return _UNPRINTABLE.sub("?", content) if type(content) is str else content
+
+
+@lru_cache(maxsize=1)
+def _environment() -> "Environment":
+    """Templates with escaping on for whatever is put in, and an error for whatever was forgotten."""
+    from jinja2 import Environment, FileSystemLoader, StrictUndefined
+
+    return Environment(
+        loader=FileSystemLoader(shipped_folder("templates")),
+        autoescape=True,
+        undefined=StrictUndefined,
+        finalize=_printable,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+
+
+def fill_template(name: str, **content: object) -> str:
+    """Fill a template of `templates/`; every text put in is escaped."""
+    return _environment().get_template(name).render(**content)
+
+
+def to_pdf(html: str, figures: Mapping[str, bytes], identifier: bytes, page_css: str) -> bytes:
+    """Lay HTML out as an archival PDF (PDF/A-3a: tagged, fonts embedded).
+
+    Parameters
+    ----------
+    html : str
+        The page; it refers to style sheets as ``template:report.css`` and to figures as ``figure:NAME``.
+    figures : Mapping
+        SVG by name.
+    identifier : bytes
+        What the file identifier is made from; the same page with the same identifier gives the same bytes.
+    page_css : str
+        Rules of this paper size, added to the page's own.
+
+    Returns
+    -------
+    bytes
+        PDF.
+
+    Raises
+    ------
+    FaultError
+        A part of the report is missing from this installation, or WeasyPrint's own libraries are.
+    """
+    try:
+        from weasyprint import CSS, HTML
+        from weasyprint.text.fonts import FontConfiguration
+        from weasyprint.urls import FatalURLFetchingError
+    except OSError as error:
+        raise FaultError(
+            "The report cannot be made into a PDF: the Pango library is missing on this machine; install it "
+            "(Debian and Ubuntu: apt-get install libpango-1.0-0 libpangoft2-1.0-0) and run the report again."
+        ) from error
+    from qa.report.fetcher import TEMPLATE_SCHEME, OwnFiles
+
+    fonts = FontConfiguration()
+    fetcher = OwnFiles(shipped_folder("templates"), figures)
+    sheet = CSS(string=page_css, font_config=fonts, url_fetcher=fetcher)
+    document = HTML(string=html, base_url=f"{TEMPLATE_SCHEME}:/", url_fetcher=fetcher)
+    try:
+        with warnings.catch_warnings():
+            # WeasyPrint leaves closing its colour profile's file to the garbage collector.
+            warnings.simplefilter("ignore", ResourceWarning)
+            pdf = document.write_pdf(stylesheets=[sheet], font_config=fonts, pdf_variant="pdf/a-3a", pdf_identifier=identifier)
+    except FatalURLFetchingError as error:
+        raise FaultError(f"The report is not complete ({error}): install this copy of evenfield again.") from error
+    if not isinstance(pdf, bytes):
+        raise FaultError("The report was not made: the PDF library gave nothing back; install this copy of evenfield again.")
+    return pdf
