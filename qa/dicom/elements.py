@@ -48,7 +48,6 @@ _BINARY = {
     "OD": "d",
 }
 _PREFIX_END = 132
-_UNPRINTABLE = re.compile(r"[^\S ]+|[\x00-\x1f\x7f-\x9f\u2028\u2029\u202a-\u202e\u2066-\u2069\ufeff\ufffd]")
 _DATE = re.compile(r"(\d{4})[.-]?(\d\d)[.-]?(\d\d)")
 _TIME = re.compile(r"(\d\d):?(\d\d)?:?(\d\d)?(?:\.(\d{1,6})\d*)?")
 _Raw = Any
@@ -56,7 +55,7 @@ _Raw = Any
 
 @contextlib.contextmanager
 def quietly() -> Iterator[None]:
-    """Keep pydicom's and its plug-ins' warnings and log records back: they may quote a header's values."""
+    """Keep back the warnings and log records of pydicom and its plug-ins, which may quote a header's values."""
     loggers = [logging.getLogger(name) for name in ("pydicom", "pylibjpeg", "openjpeg", "libjpeg", "rle")]
     levels = [logger.level for logger in loggers]
     try:
@@ -71,48 +70,55 @@ def quietly() -> Iterator[None]:
 
 
 class Elements:
-    """Typed look-ups in a data set, with values of functional groups laid over it where there are any.
+    """Typed look-ups in a data set.
 
     A look-up of something absent, empty, of the wrong kind or not finite gives an empty text, an empty tuple or None.
+
+    Parameters
+    ----------
+    elements : mapping
+        Elements as pydicom holds them, raw where they were never looked at, by tag.
+    encoding
+        The character set of the data set they stand in, as pydicom gives it.
     """
 
-    __slots__ = ("_creators", "_dataset", "_over")
+    __slots__ = ("_creators", "_elements", "_encoding")
 
-    def __init__(self, dataset: Dataset, over: Mapping[int, _Raw] | None = None) -> None:
-        self._dataset = dataset
-        self._over: Mapping[int, _Raw] = over or {}
+    def __init__(self, elements: Mapping[int, _Raw], encoding: _Raw = None) -> None:
+        self._elements = elements
+        self._encoding = encoding
         self._creators: dict[tuple[int, str], int] | None = None
 
+    @classmethod
+    def of(cls, dataset: Dataset) -> "Elements":
+        """Return the look-ups in one of pydicom's data sets, as it stands now."""
+        # Plain integers as keys: pydicom's tags compare in Python code, which would be half the cost of reading a header.
+        return cls({int(tag): element for tag, element in dataset.items()}, dataset.original_character_set)
+
     def raw(self, tag: int) -> _Raw:
-        """Return the element as pydicom holds it, raw where it was never looked at; None where it is absent."""
-        element = self._over.get(tag)
-        if element is None:
-            try:
-                element = self._dataset.get_item(tag)
-            except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged element leads it to)
-                return None
-        return element
+        """Return the element as pydicom holds it; None where it is absent."""
+        return self._elements.get(tag)
 
     def __contains__(self, tag: int) -> bool:
-        element = self.raw(tag)
+        element = self._elements.get(tag)
         return element is not None and element.value not in (None, b"", "")
 
     def overlaid(self, over: Mapping[int, _Raw]) -> "Elements":
-        """Return the same data set with other elements laid over it."""
-        return Elements(self._dataset, over)
+        """Return the same elements with others laid over them."""
+        return Elements({**self._elements, **over}, self._encoding)
 
-    def all(self) -> dict[int, _Raw]:
+    def all(self) -> Mapping[int, _Raw]:
         """Return all elements by tag."""
-        return {int(tag): self.raw(tag) for tag in list(self._dataset.keys())}
+        return self._elements
 
-    def items(self, tag: int) -> list[Dataset]:
+    def items(self, tag: int) -> "list[Elements]":
         """Return the items of a sequence."""
-        value = self._converted(self.raw(tag))
-        return list(value) if isinstance(value, Sequence) else []
+        value = self._converted(self._elements.get(tag))
+        return [Elements.of(item) for item in value] if isinstance(value, Sequence) else []
 
     def strings(self, tag: int) -> tuple[str, ...]:
         """Return the values of a text element, trimmed, without control characters."""
-        element = self.raw(tag)
+        element = self._elements.get(tag)
         if element is None:
             return ()
         value = element.value
@@ -124,11 +130,14 @@ class Elements:
                 texts = [str(each) for each in converted] if _is_list(converted) else [str(converted or "")]
         else:
             texts = [str(each) for each in value] if _is_list(value) else [str(value or "")]
-        return tuple(_clean(text) for text in texts)
+        return tuple([_clean(text) for text in texts])
 
     def text(self, tag: int) -> str:
         """Return a text element's value; several values are joined by a space."""
-        return " ".join(part for part in self.strings(tag) if part)[:_LONGEST_TEXT]
+        strings = self.strings(tag)
+        if len(strings) == 1:
+            return strings[0]
+        return " ".join(part for part in strings if part)[:_LONGEST_TEXT]
 
     def code(self, tag: int) -> str:
         """Return a text element's first value in capitals."""
@@ -137,7 +146,7 @@ class Elements:
 
     def numbers(self, tag: int) -> tuple[float, ...]:
         """Return the values of a number element, all finite, or nothing."""
-        element = self.raw(tag)
+        element = self._elements.get(tag)
         if element is None:
             return ()
         try:
@@ -163,7 +172,7 @@ class Elements:
 
     def bytes_of(self, tag: int) -> bytes:
         """Return the bytes of an element as the file holds them."""
-        element = self.raw(tag)
+        element = self._elements.get(tag)
         value = None if element is None else element.value
         return value if isinstance(value, bytes) else b""
 
@@ -174,7 +183,7 @@ class Elements:
         """
         if self._creators is None:
             self._creators = {}
-            for tag in [*self._over, *self._dataset.keys()]:
+            for tag in self._elements:
                 if tag >> 16 & 1 and 0x10 <= tag & 0xFFFF <= 0xFF:
                     self._creators.setdefault((tag >> 16, self.text(tag).upper()), tag & 0xFF)
         block = self._creators.get((group, creator.upper()))
@@ -199,8 +208,7 @@ class Elements:
         if not isinstance(element, RawDataElement):
             return element.value
         try:
-            encoding = self._dataset.original_character_set
-            return convert_raw_data_element(element, encoding=encoding).value
+            return convert_raw_data_element(element, encoding=self._encoding).value
         except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged element leads it to)
             return None
 
@@ -212,8 +220,8 @@ class File:
 
     def __init__(self, dataset: Dataset, meta: Dataset, transfer_syntax: str) -> None:
         self.dataset = dataset
-        self.elements = Elements(dataset)
-        self.meta = Elements(meta)
+        self.elements = Elements.of(dataset)
+        self.meta = Elements.of(meta)
         self.transfer_syntax = transfer_syntax
 
 
@@ -230,7 +238,7 @@ def parse(content: bytes) -> File:
         if content[128:_PREFIX_END] == b"DICM":
             stream.seek(_PREFIX_END)
         meta = read_dataset(stream, is_implicit_VR=False, is_little_endian=True, stop_when=_is_past_meta)
-        syntax = Elements(meta).text(_TRANSFER_SYNTAX)
+        syntax = Elements.of(meta).text(_TRANSFER_SYNTAX)
         if syntax == _DEFLATED:
             stream = BytesIO(_inflated(content[stream.tell() :]))
         syntax = syntax or _guessed_syntax(content[stream.tell() : stream.tell() + 6])
@@ -293,7 +301,9 @@ def _is_list(value: object) -> bool:
 
 
 def _clean(text: str) -> str:
-    return _UNPRINTABLE.sub(" ", text).strip()[:_LONGEST_TEXT]
+    if not text.isprintable():
+        text = "".join(character if character.isprintable() else " " for character in text)
+    return text.strip()[:_LONGEST_TEXT]
 
 
 def _date(text: str) -> date | None:

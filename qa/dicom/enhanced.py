@@ -50,21 +50,20 @@ def of_each_frame(get: Elements, frames: int) -> list[Elements]:
     """
     shared: dict[int, Any] = {}
     for item in get.items(_SHARED)[:1]:
-        shared.update(_flat(Elements(item), {}))
+        shared.update(_flat(item, {}))
     groups = get.items(_PER_FRAME)
     if len(groups) != frames:
         raise RefusalError(f"it has {frames} frames but functional groups for {len(groups)}")
-    return [get.overlaid({**shared, **_flat(Elements(item), shared)}) for item in groups]
+    return [get.overlaid({**shared, **_flat(item, shared)}) for item in groups]
 
 
 def _flat(group: Elements, beneath: Mapping[int, Any]) -> dict[int, Any]:
     flat: dict[int, Any] = {}
     for macro in _MACROS:
-        for item in group.items(macro)[:1]:
-            inner = Elements(item)
+        for inner in group.items(macro)[:1]:
             flat.update(_fitting(inner, {**beneath, **flat}))
             for direction in inner.items(_GRADIENT_DIRECTION)[:1]:
-                flat.update(Elements(direction).all())
+                flat.update(direction.all())
     return flat
 
 

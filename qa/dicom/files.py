@@ -96,7 +96,7 @@ def find(paths: Path | str | Iterable[Path | str]) -> list[Found]:
         A path does not exist.
     """
     wanted = [Path(paths)] if isinstance(paths, str | Path) else [Path(p) for p in paths]
-    found: dict[str, Found] = {}
+    found: dict[tuple[int, int] | str, Found] = {}
     for path in wanted:
         try:
             is_folder = stat.S_ISDIR(path.stat().st_mode)
@@ -105,10 +105,19 @@ def find(paths: Path | str | Iterable[Path | str]) -> list[Found]:
                 raise UsageError(f"{path} cannot be looked into: permission is denied") from None
             raise UsageError(f"{path} does not exist: give a folder of DICOM files, or such a file") from None
         for each in _walk(path) if is_folder else [Found(path, asked_for=True)]:
-            key = os.path.realpath(each.path)
-            if key not in found or each.asked_for:
+            key = _identity(each.path)
+            if key not in found or (each.asked_for, str(found[key].path)) > (found[key].asked_for, str(each.path)):
                 found[key] = each
     return sorted(found.values(), key=lambda each: str(each.path))
+
+
+def _identity(path: Path) -> tuple[int, int] | str:
+    """Return what two paths to one file share."""
+    try:
+        facts = path.stat()
+    except OSError:
+        return str(path)
+    return facts.st_dev, facts.st_ino
 
 
 def _walk(folder: Path) -> Iterator[Found]:
@@ -149,7 +158,8 @@ def read_bytes(file: Found) -> bytes | None:
                     raise RefusalError("the file is empty")
                 if not start.startswith(_BARE_STARTS):
                     raise RefusalError("not a DICOM file")
-            return start + stream.read()
+            stream.seek(0)
+            return stream.read()
     except FileNotFoundError:
         raise RefusalError("the link leads nowhere, or the file has gone") from None
     except PermissionError:

@@ -3,9 +3,7 @@
 from dataclasses import dataclass
 from datetime import datetime
 
-import numpy as np
-from numpy.typing import NDArray
-
+from qa.dicom.pixels import Scaling, Stored
 from qa.geometry import Plane
 from qa.records import ImageKind, Scanner, Settings, SourceFile
 
@@ -40,8 +38,8 @@ class Frame:
         Temporal position as the file numbers it.
     acquisition, instance, number : int
         Acquisition Number, Instance Number, and the frame's place in its file; 0 where absent.
-    pixels : (R, C) float32
-        Rescaled values.
+    stored : (R, C) numbers
+        Values as the file holds them, which `scaling` makes output values of.
     """
 
     origin: Origin
@@ -55,8 +53,8 @@ class Frame:
     instance: int
     number: int
     acquired_at: datetime | None
-    slope: float
-    pixels: NDArray[np.float32]
+    stored: Stored
+    scaling: Scaling
 
     @property
     def order(self) -> tuple[object, ...]:

@@ -2,6 +2,7 @@
 
 import math
 from datetime import datetime
+from functools import lru_cache
 from typing import Literal
 
 import numpy as np
@@ -223,6 +224,7 @@ def _fault(get: Elements, tag: int) -> str:
     return "is not what it should be" if tag in get else "is missing"
 
 
+@lru_cache(maxsize=256)
 def _orthonormal(
     row: tuple[float, ...], column: tuple[float, ...]
 ) -> tuple[tuple[float, float, float], tuple[float, float, float]]:
@@ -288,7 +290,7 @@ def _parallel_imaging(get: Elements) -> bool | None:
     if (tag := get.private(0x0043, _GE, 0x83)) and (factors := get.numbers(tag)):
         return any(factor != 1 for factor in factors)
     if tag := get.private(0x2005, _PHILIPS_FRAME, 0x0F):
-        answers = {Elements(item).code(0x00189077) for item in get.items(tag)[:1]}
+        answers = {item.code(0x00189077) for item in get.items(tag)[:1]}
         return "YES" in answers if answers & {"YES", "NO"} else None
     return None
 

@@ -8,7 +8,7 @@ from qa.dicom.frames import Frame, Origin
 from qa.dicom.header import acquired_at, image_type, kind_of, plane_of, scanner_of, settings_of
 from qa.dicom.identity import Header
 from qa.dicom.mosaic import cut, text_fields, tiles_of
-from qa.dicom.pixels import Layout, Rescale, Stored, layout_of, rescale_of, rescaled
+from qa.dicom.pixels import Layout, Scaling, Stored, layout_of, scaling_of
 from qa.dicom.refusal import RefusalError
 from qa.geometry import Plane
 from qa.records import SourceFile
@@ -46,10 +46,11 @@ def frames_of(file: File, header: Header, source: SourceFile, decode: Decode) ->
     else:
         heads = [get]
     planes = [_plane_of(head, layout, number, len(heads)) for number, head in enumerate(heads, start=1)]
-    rescales = [rescale_of(head) for head in heads]
+    scalings = [scaling_of(head, layout) for head in heads]
     mosaic = tiles_of(get, planes[0]) if len(heads) == 1 else None
     if mosaic is not None:
-        planes, heads, rescales = list(mosaic.planes), heads * len(mosaic.planes), rescales * len(mosaic.planes)
+        count = len(mosaic.planes)
+        planes, heads, scalings = list(mosaic.planes), heads * count, scalings * count
         remarks += mosaic.remarks
     origin = Origin(
         source=source,
@@ -63,7 +64,7 @@ def frames_of(file: File, header: Header, source: SourceFile, decode: Decode) ->
     stored = decode(file, layout)
     if mosaic is not None:
         stored = cut(stored[0], mosaic)
-    return _frames(origin, layout, stored, heads=heads, planes=planes, rescales=rescales)
+    return _frames(origin, stored, heads, planes, scalings)
 
 
 def _plane_of(head: Elements, layout: Layout, number: int, count: int) -> Plane:
@@ -75,15 +76,13 @@ def _plane_of(head: Elements, layout: Layout, number: int, count: int) -> Plane:
 
 def _frames(
     origin: Origin,
-    layout: Layout,
     stored: Stored,
-    *,
     heads: Sequence[Elements],
     planes: Sequence[Plane],
-    rescales: Sequence[Rescale],
+    scalings: Sequence[Scaling],
 ) -> list[Frame]:
     frames = []
-    for number, (get, plane, rescale) in enumerate(zip(heads, planes, rescales, strict=True)):
+    for number, (get, plane, scaling) in enumerate(zip(heads, planes, scalings, strict=True)):
         kinds = image_type(get)
         temporal = get.whole(0x00209128)  # Temporal Position Index; the classic element is the Identifier
         acquisition = get.whole(0x00209156)  # Frame Acquisition Number; the classic element is Acquisition Number
@@ -100,8 +99,8 @@ def _frames(
                 instance=get.whole(0x00200013) or 0,
                 number=number,
                 acquired_at=acquired_at(get),
-                slope=rescale.slope,
-                pixels=rescaled(stored[number], layout, rescale),
+                stored=stored[number],
+                scaling=scaling,
             )
         )
     return frames

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from qa.dicom.elements import Elements, File
 from qa.dicom.refusal import RefusalError
 
-__all__ = ["Layout", "Rescale", "Stored", "decode", "layout_of", "rescale_of", "rescaled"]
+__all__ = ["Layout", "Scaling", "Stored", "decode", "layout_of", "scale_into", "scaling_of"]
 
 _PIXEL_DATA, _FLOAT_PIXELS, _DOUBLE_PIXELS = 0x7FE00010, 0x7FE00008, 0x7FE00009
 _NATIVE = frozenset(
@@ -20,6 +20,7 @@ _BIG_ENDIAN = "1.2.840.10008.1.2.2"
 _COLOURS = ("RGB", "YBR", "PALETTE", "HSV", "ARGB", "CMYK", "XYB", "ICT", "RCT")
 _MOST_ON_A_SIDE = 8192
 _MOST_PIXELS = 2**28
+_LARGEST_FLOAT = 1e9
 _FLOAT32_MAX = float(np.finfo(np.float32).max)
 
 Stored = NDArray[Any]
@@ -52,11 +53,24 @@ class Layout:
 
 
 @dataclass(frozen=True)
-class Rescale:
-    """Stored value to output value: slope times the stored value plus intercept (PS3.3, C.11.1.1.2)."""
+class Scaling:
+    """How stored values of one image become output values.
+
+    Output is slope times the stored value plus intercept (PS3.3, C.11.1.1.2). `turned_about`, where it is not None, is the sum
+    of the lowest and highest stored value there can be, about which MONOCHROME1 is turned over first: the lowest value is
+    then shown brightest, and stands for most signal. Stored values in the inclusive range `padding` are no pixels and read
+    as zero: they hold no signal.
+    """
 
     slope: float = 1.0
     intercept: float = 0.0
+    turned_about: float | None = None
+    padding: tuple[float, float] | None = None
+
+    @property
+    def is_plain(self) -> bool:
+        """Whether stored values are output values."""
+        return self.slope == 1 and self.intercept == 0 and self.turned_about is None
 
 
 def layout_of(get: Elements) -> Layout:
@@ -76,9 +90,11 @@ def layout_of(get: Elements) -> Layout:
         raise RefusalError("it holds pixel data of more than one kind")
     if present[0] != _PIXEL_DATA:
         bits = 32 if present[0] == _FLOAT_PIXELS else 64
-        return Layout(frames, rows, columns, bits, bits, bits - 1, True, True, False, _padding(get))
+        return Layout(frames, rows, columns, bits, bits, bits - 1, True, True, False, None)
     allocated, stored, high_bit, is_signed = _bits(get)
-    return Layout(frames, rows, columns, allocated, stored, high_bit, is_signed, False, is_inverted, _padding(get))
+    return Layout(
+        frames, rows, columns, allocated, stored, high_bit, is_signed, False, is_inverted, _padding(get, is_signed=is_signed)
+    )
 
 
 def _size(get: Elements) -> tuple[int, int, int]:
@@ -116,21 +132,24 @@ def _bits(get: Elements) -> tuple[int, int, int, bool]:
     return allocated, stored, high, signed == 1
 
 
-def rescale_of(get: Elements) -> Rescale:
-    """Read the rescale of one image or frame; where the header gives none, stored values stand as they are.
+def scaling_of(get: Elements, layout: Layout) -> Scaling:
+    """Read the scaling of one image or frame; where the header gives none, stored values stand as they are.
 
     Real World Value Mapping and manufacturers' private scales (Philips' scale slope) are left alone.
 
     Raises
     ------
     RefusalError
-        Slope or intercept is given and is no number, or the slope is zero.
+        Slope or intercept is given and is no number, the slope is zero, or values would not be finite.
     """
     slope = get.number(0x00281053) if 0x00281053 in get else 1.0
     intercept = get.number(0x00281052) if 0x00281052 in get else 0.0
-    if slope is None or intercept is None or slope == 0:
+    if slope is None or intercept is None or slope == 0 or abs(slope) * 2.0**32 + abs(intercept) > _FLOAT32_MAX:
         raise RefusalError("Rescale Slope or Rescale Intercept is not a number that values can be scaled with")
-    return Rescale(slope, intercept)
+    turned_about = None
+    if layout.is_inverted:
+        turned_about = -1.0 if layout.is_signed else 2.0**layout.stored - 1.0
+    return Scaling(slope, intercept, turned_about, layout.padding)
 
 
 def decode(file: File, layout: Layout) -> Stored:
@@ -143,6 +162,8 @@ def decode(file: File, layout: Layout) -> Stored:
     """
     if file.transfer_syntax in _NATIVE:
         stored = _native(file, layout)
+        if layout.is_float and not bool(np.all(np.abs(stored) < _LARGEST_FLOAT)):
+            raise RefusalError("it holds pixels that are not finite numbers, or absurdly large ones")
         return stored if layout.is_float else _clean_bits(stored, layout, layout.high_bit)
     if layout.is_float:
         raise RefusalError("its floating-point pixel data are compressed, which the standard does not allow")
@@ -151,33 +172,20 @@ def decode(file: File, layout: Layout) -> Stored:
     return _clean_bits(_compressed(file, layout), layout, high_bit)
 
 
-def rescaled(stored: Stored, layout: Layout, rescale: Rescale) -> NDArray[np.float32]:
-    """Turn stored values, of any shape, into output values.
-
-    MONOCHROME1, in which the lowest value is shown brightest, is turned over within the range of stored values first, as a
-    viewer shows it: lowest + highest - value. Pixels that are padding read as zero: they hold no signal.
-
-    Raises
-    ------
-    RefusalError
-        A value is not finite.
-    """
-    is_plain = rescale == Rescale() and not layout.is_inverted
-    if is_plain and not layout.is_float:
-        values = stored.astype(np.float32)
+def scale_into(out: NDArray[np.float32], stored: Stored, scaling: Scaling) -> None:
+    """Write the output values of an image into an array of the same shape."""
+    if scaling.is_plain:
+        np.copyto(out, stored, casting="unsafe")
     else:
         exact = stored.astype(np.float64)
-        if layout.is_inverted:
-            exact = (-1.0 if layout.is_signed else 2.0**layout.stored - 1.0) - exact
-        with np.errstate(all="ignore"):
-            exact = exact * rescale.slope + rescale.intercept
-            is_out = not bool(np.all(np.abs(exact) <= _FLOAT32_MAX))
-        if is_out:
-            raise RefusalError("it holds pixels that are not finite numbers")
-        values = exact.astype(np.float32)
-    if layout.padding is not None:
-        values[(stored >= layout.padding[0]) & (stored <= layout.padding[1])] = 0.0
-    return values
+        if scaling.turned_about is not None:
+            np.subtract(scaling.turned_about, exact, out=exact)
+        exact *= scaling.slope
+        exact += scaling.intercept
+        np.copyto(out, exact, casting="same_kind")
+    if scaling.padding is not None:
+        low, high = scaling.padding
+        out[(stored >= low) & (stored <= high)] = 0.0
 
 
 def _native(file: File, layout: Layout) -> Stored:
@@ -219,7 +227,7 @@ def _clean_bits(values: Stored, layout: Layout, high_bit: int) -> Stored:
     """Take out the bits that hold no pixel and carry the sign up (PS3.5, 8.1.1)."""
     size = values.dtype.itemsize
     native = values.astype(values.dtype.newbyteorder("="), copy=False).view(f"{'i' if layout.is_signed else 'u'}{size}")
-    if layout.stored >= size * 8:
+    if layout.stored >= size * 8 or (high_bit == layout.stored - 1 and _fits(native, layout)):
         return native
     up = size * 8 - 1 - high_bit
     shifted = native << np.asarray(up, dtype=native.dtype) if up else native
@@ -227,9 +235,19 @@ def _clean_bits(values: Stored, layout: Layout, high_bit: int) -> Stored:
     return cleaned
 
 
-def _padding(get: Elements) -> tuple[float, float] | None:
-    value = get.number(0x00280120)
+def _fits(values: Stored, layout: Layout) -> bool:
+    if layout.is_signed:
+        half = 2 ** (layout.stored - 1)
+        return bool(values.min() >= -half and values.max() < half)
+    return bool(values.max() < 2**layout.stored)
+
+
+def _padding(get: Elements, *, is_signed: bool) -> tuple[float, float] | None:
+    value, limit = get.number(0x00280120), get.number(0x00280121)
     if value is None:
         return None
-    limit = get.number(0x00280121)
-    return (value, value) if limit is None else (min(value, limit), max(value, limit))
+    # In implicit encoding the element does not say whether it is signed: it is as the pixels are.
+    ends = [value, value if limit is None else limit]
+    if is_signed:
+        ends = [each - 2**16 if 2**15 <= each < 2**16 else each for each in ends]
+    return min(ends), max(ends)

@@ -41,17 +41,17 @@ def read_files(
     taken: list[_Taken] = []
     refused: list[Refused] = []
     lost: dict[str, list[Refused]] = defaultdict(list)
-    for count, file in enumerate(files, start=1):
-        with quietly():
+    with quietly():
+        for count, file in enumerate(files, start=1):
             outcome, series_uid = _read_one(file, admit or refuse_people, decode_pixels)
-        if isinstance(outcome, _Taken):
-            taken.append(outcome)
-        elif outcome is not None:
-            refused.append(outcome)
-            if series_uid:
-                lost[series_uid].append(outcome)
-        if progress is not None:
-            progress(count, len(files))
+            if isinstance(outcome, _Taken):
+                taken.append(outcome)
+            elif outcome is not None:
+                refused.append(outcome)
+                if series_uid:
+                    lost[series_uid].append(outcome)
+            if progress is not None:
+                progress(count, len(files))
     singles, doubles = _each_once(taken)
     stacks, left_out = stack([frame for each in singles for frame in each.frames], lost)
     return Reading(group(stacks), tuple(sorted([*refused, *doubles, *left_out], key=lambda each: str(each.path))))

@@ -1,14 +1,17 @@
 """From loose frames to series: what belongs in one stack is put in order of position; what is odd is said."""
 
+import math
 from collections import Counter, defaultdict
 from collections.abc import Callable, Hashable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from statistics import median
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qa.dicom.alike import SAME_PLACE_MM, same_grid, same_settings
 from qa.dicom.frames import Frame
+from qa.dicom.pixels import scale_into
 from qa.records import Refused, Series
 
 __all__ = ["Stacked", "stack"]
@@ -138,7 +141,9 @@ _KEYS: tuple[Callable[[Frame], Hashable], ...] = (
 
 def _stacked(frames: list[Frame], position: int, remarks: Sequence[str]) -> Stacked:
     first = min(frames, key=lambda frame: frame.order)
-    pixels = np.stack([frame.pixels for frame in frames])
+    pixels = np.empty((len(frames), *first.plane.shape), dtype=np.float32)
+    for image, frame in zip(pixels, frames, strict=True):
+        scale_into(image, frame.stored, frame.scaling)
     pixels.setflags(write=False)
     places = _places(frames)
     settings = first.settings
@@ -146,9 +151,9 @@ def _stacked(frames: list[Frame], position: int, remarks: Sequence[str]) -> Stac
         settings = replace(settings, slice_spacing_mm=float(median(np.diff(places))))
     sources = {frame.origin.source: None for frame in frames}
     kind, doubt = first.kind, []
-    if kind == "magnitude" and float(pixels.min()) < -_NEGATIVE_SHARE * float(pixels.max()):
+    if kind == "magnitude" and any(map(_may_be_negative, frames)) and _is_negative(pixels):
         kind = "other"
-        doubt = ["the header does not tell magnitude from phase images and values are negative: not taken for magnitude"]
+        doubt = ["it holds negative values, as a magnitude image cannot: not taken for one"]
     series = Series(
         series_instance_uid=first.origin.series_instance_uid,
         study_instance_uid=first.origin.study_instance_uid,
@@ -163,7 +168,15 @@ def _stacked(frames: list[Frame], position: int, remarks: Sequence[str]) -> Stac
         files=tuple(sources),
         remarks=tuple(dict.fromkeys([*_inherited(frames), *doubt, *_gaps(places, frames), *remarks])),
     )
-    return Stacked(series, first.contrast, first.order, tuple(frame.slope for frame in frames))
+    return Stacked(series, first.contrast, first.order, tuple(frame.scaling.slope for frame in frames))
+
+
+def _is_negative(pixels: NDArray[np.float32]) -> bool:
+    return float(pixels.min()) < -_NEGATIVE_SHARE * float(pixels.max())
+
+
+def _may_be_negative(frame: Frame) -> bool:
+    return frame.stored.dtype.kind != "u" or frame.scaling.slope < 0 or frame.scaling.intercept < 0
 
 
 def _inherited(frames: Sequence[Frame]) -> list[str]:
@@ -177,8 +190,11 @@ def _gaps(places: Sequence[float], frames: Sequence[Frame]) -> list[str]:
     steps = np.diff(places)
     nominal, thickness = frames[0].settings.slice_spacing_mm, frames[0].settings.slice_thickness_mm or 0.0
     usual = float(median(steps))
-    if nominal is not None and not np.isclose(nominal + thickness, usual, rtol=_UNEVEN):
-        usual = min(usual, nominal)
+    # Where every other slice is missing the usual step is twice the nominal one; but some scanners give the gap as nominal.
+    skipped = round(usual / nominal) if nominal is not None and nominal > SAME_PLACE_MM else 1
+    if skipped > 1 and math.isclose(usual, skipped * (nominal or 0.0), rel_tol=_UNEVEN / 2):
+        is_gap = math.isclose(usual, (nominal or 0.0) + thickness, rel_tol=_UNEVEN / 2)
+        usual = usual if is_gap else usual / skipped
     said = []
     for number, step in enumerate(steps, start=1):
         ratio = float(step) / usual
