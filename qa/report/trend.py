@@ -1,9 +1,10 @@
 """The trend chart: one quantity of one scanner over time, against its limits."""
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date, datetime, timedelta
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
@@ -13,7 +14,6 @@ from qa.report.style import DATA, FAINT, GREY, HAIRLINE, INK, LIMIT, MISSED, TEX
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
-    from matplotlib.path import Path as MarkPath
 
 __all__ = ["MARKS", "Mark", "TrendChart", "TrendPoint", "draw_trend"]
 
@@ -60,53 +60,52 @@ def _days(when: date | datetime) -> float:
     return float((when - _EPOCH).days)
 
 
-def _mark_shape(mark: Mark) -> tuple["MarkPath", float, bool]:
-    """Outline of a mark within a unit circle, its radius in points, and whether it is filled."""
-    from matplotlib.path import Path as MarkPath
-
-    diamond = MarkPath([(0, 1), (1, 0), (0, -1), (-1, 0), (0, 1)], closed=True)
-    square = MarkPath([(-1, -1), (1, -1), (1, 1), (-1, 1), (-1, -1)], closed=True)
-    shapes: dict[Mark, tuple[MarkPath, float, bool]] = {
-        "pass": (MarkPath.unit_circle(), 1.35, True),
-        "conditional pass": (MarkPath.unit_circle(), 1.75, False),
-        "conditional fail": (diamond, 2.7, False),
-        "fail": (diamond, 3.0, True),
-        "no limit": (square, 1.15, True),
-    }
-    return shapes[mark]
+_DIAMOND = np.array([(0, 1), (1, 0), (0, -1), (-1, 0), (0, 1)], dtype=np.float64)
+_OCTAGON = np.array([(math.cos(turn), math.sin(turn)) for turn in np.linspace(0, 2 * math.pi, 17)])
 
 
 def _add_marks(axes: "Axes", x: Floats, y: Floats, mark: Mark, scale: float) -> None:
-    """Draw all marks of a kind as one path: a page of many points stays light."""
+    """Draw all marks of a kind as one path: a page of many points stays light.
+
+    The two common marks are ends of lines without length, a dot by a round cap and a square by a square one; the rarer ones
+    are outlines.
+    """
     from matplotlib.patches import PathPatch
     from matplotlib.path import Path as MarkPath
-    from matplotlib.transforms import Affine2D, IdentityTransform
+    from matplotlib.transforms import IdentityTransform
 
-    shape, radius, filled = _mark_shape(mark)
     centres = axes.transData.transform(np.column_stack([x, y]))
-    size = Affine2D().scale(radius * scale)
-    path = MarkPath.make_compound_path(*(size.frozen().translate(*centre).transform_path(shape) for centre in centres))
     ink = LIMIT if mark in {"fail", "conditional fail"} else DATA
-    axes.add_patch(
+    if mark in {"pass", "no limit"}:
+        _segments(
+            axes, centres, centres + np.array([0.01, 0.0]), transform=IdentityTransform(), edgecolor=ink, zorder=4,
+            linewidth=scale * (2.7 if mark == "pass" else 2.2), capstyle="round" if mark == "pass" else "projecting",
+        )  # fmt: skip
+        return
+    outline, radius = (_OCTAGON, 1.75) if mark == "conditional pass" else (_DIAMOND, 3.0 if mark == "fail" else 2.7)
+    vertices = (centres[:, None] + radius * scale * outline).reshape(-1, 2)
+    codes = np.tile([MarkPath.MOVETO, *[MarkPath.LINETO] * (len(outline) - 2), MarkPath.CLOSEPOLY], len(centres))
+    axes.add_artist(
         PathPatch(
-            path,
+            MarkPath(vertices, codes),
             transform=IdentityTransform(),
-            facecolor=ink if filled else "white",
+            facecolor=ink if mark == "fail" else "white",
             edgecolor=ink,
-            linewidth=0.0 if filled else 0.8,
-            zorder=5 if mark in {"fail", "conditional fail"} else 4,
+            linewidth=0.0 if mark == "fail" else 0.8,
+            zorder=4 if mark == "conditional pass" else 5,
         )
     )
 
 
-def _segments(axes: "Axes", starts: Floats, ends: Floats, **options: object) -> None:
+def _segments(axes: "Axes", starts: Floats, ends: Floats, **options: Any) -> None:  # noqa: ANN401 - matplotlib's own
     """Draw separate lines as one path, in data coordinates."""
     from matplotlib.patches import PathPatch
     from matplotlib.path import Path as MarkPath
 
     vertices = np.stack([starts, ends], axis=1).reshape(-1, 2)
     codes = np.tile([MarkPath.MOVETO, MarkPath.LINETO], len(starts))
-    axes.add_patch(PathPatch(MarkPath(vertices, codes), fill=False, **options))
+    # An artist, not a patch: the axes' limits are set already and need no look at every point.
+    axes.add_artist(PathPatch(MarkPath(vertices, codes), fill=False, **options))
 
 
 def _value_range(chart: TrendChart) -> tuple[float, float]:
