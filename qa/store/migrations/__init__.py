@@ -1,0 +1,1 @@
+"""Alembic's migrations: how a record of any earlier version becomes one of today's."""
