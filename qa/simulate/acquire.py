@@ -2,8 +2,11 @@
 
 import hashlib
 
+import numpy as np
+from numpy.typing import NDArray
+
 from qa.records import Acquisition, Scanner, Series, Settings
-from qa.simulate.encode import scan
+from qa.simulate.encode import Scan
 from qa.simulate.setup import Setup
 
 __all__ = ["simulate", "uid"]
@@ -15,19 +18,22 @@ def uid(setup: Setup, *what: object) -> str:
     return f"2.25.{int.from_bytes(hashlib.sha256(said.encode()).digest()[:16], 'big')}"
 
 
-def simulate(setup: Setup) -> Acquisition:
+def simulate(setup: Setup, machine: Scan | None = None) -> Acquisition:
     """Scan a digital phantom.
 
     Parameters
     ----------
     setup : Setup
         The scan.
+    machine : Scan, optional
+        The same scan already on the scanner, so that `true_values` can share its noise-free images.
 
     Returns
     -------
     Acquisition
         All repeats, with the settings that a header would hold; no files.
     """
+    machine = Scan(setup) if machine is None else machine
     spacing = setup.thickness_mm if setup.spacing_mm is None else setup.spacing_mm
     settings = Settings(
         protocol=setup.protocol,
@@ -64,8 +70,14 @@ def simulate(setup: Setup) -> Acquisition:
             scanner=scanner,
             settings=settings,
             planes=setup.planes,
-            pixels=pixels,
+            pixels=_stored(machine, k),
         )
-        for k, pixels in enumerate(scan(setup))
+        for k in range(setup.repeats)
     )
     return Acquisition(repeats=repeats)
+
+
+def _stored(machine: Scan, repeat: int) -> NDArray[np.float32]:
+    pixels = machine.stack(repeat).astype(np.float32)
+    pixels.setflags(write=False)
+    return pixels

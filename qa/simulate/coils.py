@@ -20,10 +20,11 @@ def _scanner_place(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike)
 
 
 def shading(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) -> Floats:
-    """Combined sensitivity of all channels in health.
+    """Tell the combined sensitivity of all channels in health.
 
-    A second-order surface about the middle of the stack, linear towards `shading_direction_deg` and brighter outside by the curved share; over the
-    centred disc of 75 % of the phantom's cross-section 100 (max - min) / (max + min) is `shading_percent`.
+    A second-order surface about the middle of the stack: linear towards `shading_direction_deg`, and the curved share
+    brighter outside (or inside, where negative); over the cross-section of a centred phantom 100 (max - min) / max is
+    `shading_percent`.
 
     Parameters
     ----------
@@ -40,34 +41,39 @@ def shading(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) -> Flo
         Sensitivity, 1 in the middle.
     """
     x, y = _scanner_place(setup, plane, x_mm, y_mm)
-    reach = math.sqrt(0.75) * setup.body_diameter_mm / 2
-    angle, share = math.radians(setup.shading_direction_deg), setup.shading_curvature
+    reach = setup.body_diameter_mm / 2
+    angle = math.radians(setup.shading_direction_deg)
     along = (x * math.cos(angle) + y * math.sin(angle)) / reach
-    slope, bend = _coefficients(setup.shading_percent / 100, share)
-    sensed: Floats = 1 + slope * along + bend * (x * x + y * y) / reach**2
+    slope, bend = _coefficients(setup.shading_percent / 100, setup.shading_curvature)
+    # far outside the phantom the surface levels off, so that it stays positive on any field of view
+    square = 4 * np.tanh((x * x + y * y) / reach**2 / 4)
+    sensed: Floats = 1 + slope * along + bend * square
     return np.maximum(sensed, 0.05)
 
 
 def _coefficients(contrast: float, share: float) -> tuple[float, float]:
-    """Linear and curved coefficient, `share` of their sum curved, for a contrast (max - min) / (max + min) on the unit disc.
+    """Find linear and curved coefficient, `share` of their sum curved, for a contrast (max - min) / max on the unit disc.
 
-    On the axis of the slope the surface is 1 + a t + b t^2, highest at t = 1; lowest at t = -1, or at the bottom of the bowl.
+    Along the slope the surface is 1 + a t + b t^2, so its extremes are at t = -1, t = 1 or the vertex between.
     """
     low, high = 0.0, 4.0
+    a = b = 0.0
     for _ in range(60):
         size = 0.5 * (low + high)
-        a, b = size * (1 - share), size * share
-        bottom = max(-1.0, -a / (2 * b)) if b > 0 else -1.0
-        top, least = 1 + a + b, 1 + a * bottom + b * bottom * bottom
-        low, high = (size, high) if (top - least) / (top + least) < contrast else (low, size)
-    return low * (1 - share), low * share
+        a, b = size * (1 - abs(share)), size * share
+        at = [-1.0, 1.0]
+        if b and abs(a / (2 * b)) < 1:
+            at.append(-a / (2 * b))
+        values = [1 + a * t + b * 4 * math.tanh(t * t / 4) for t in at]
+        low, high = (size, high) if 1 - min(values) / max(values) < contrast else (low, size)
+    return a, b
 
 
 def channel_share(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) -> Complexes:
-    """Each channel's complex share of the combined sensitivity, (N, ...) with squares that sum to 1 in health.
+    """Tell each channel's complex share of the combined sensitivity, (N, ...), with squares that sum to 1 in health.
 
-    "loops": the field of N long rectangular loops evenly round the phantom, by Biot and Savart for their two long wires; "polynomial":
-    smooth first-order maps with evenly turned directions. A failing channel's gain is applied here.
+    "loops": the field of N long rectangular loops evenly round the phantom, by Biot and Savart for their two long wires;
+    "polynomial": smooth first-order maps with evenly turned directions. A failing channel's gain is applied here.
     """
     x, y = _scanner_place(setup, plane, x_mm, y_mm)
     place = x + 1j * y
@@ -89,7 +95,7 @@ def channel_share(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) 
         maps.append(field)
     stack = np.stack(maps)
     stack /= np.sqrt(np.sum(stack.real**2 + stack.imag**2, axis=0))
-    return stack * np.asarray(gains).reshape(-1, *(1,) * place.ndim)
+    return np.asarray(stack * np.asarray(gains).reshape(-1, *(1,) * place.ndim))
 
 
 def noise_mixing(setup: Setup) -> Floats:

@@ -10,13 +10,13 @@ from numpy.typing import NDArray
 
 from qa.geometry import Plane
 from qa.simulate.acquire import uid
-from qa.simulate.encode import scan
+from qa.simulate.encode import Scan
 from qa.simulate.setup import Setup
 
 if TYPE_CHECKING:
     from pydicom.dataset import Dataset
 
-__all__ = ["write_dicom"]
+__all__ = ["add_pixels", "decimals", "shared_dataset", "write_dicom"]
 
 _MR_IMAGE = "1.2.840.10008.5.1.4.1.1.4"
 _IMPLEMENTATION = "2.25.314159265358979323846264338327950288"
@@ -42,7 +42,9 @@ def write_dicom(setup: Setup, folder: Path, *, enhanced: bool = False) -> list[P
     from qa.simulate.dicom_enhanced import enhanced_dataset
 
     written = []
-    for repeat, stack in enumerate(scan(setup)):
+    machine = Scan(setup)
+    for repeat in range(setup.repeats):
+        stack = machine.stack(repeat)
         place = Path(folder) / f"s{repeat}"
         place.mkdir(parents=True, exist_ok=True)
         if enhanced:
@@ -57,7 +59,7 @@ def write_dicom(setup: Setup, folder: Path, *, enhanced: bool = False) -> list[P
     return written
 
 
-def common(setup: Setup, repeat: int, sop_class: str, sop_instance: str) -> "Dataset":
+def shared_dataset(setup: Setup, repeat: int, sop_class: str, sop_instance: str) -> "Dataset":
     """Patient, study, series, equipment and frame of reference: what both kinds of object share."""
     from pydicom.dataset import Dataset
 
@@ -96,7 +98,7 @@ def common(setup: Setup, repeat: int, sop_class: str, sop_instance: str) -> "Dat
     return ds
 
 
-def pixel_module(ds: "Dataset", setup: Setup, pixels: NDArray[np.float32]) -> None:
+def add_pixels(ds: "Dataset", setup: Setup, pixels: NDArray[np.float32]) -> None:
     """Add rows, columns, bits and the pixels themselves as unsigned 16 bit."""
     ds.SamplesPerPixel = 1
     ds.PhotometricInterpretation = "MONOCHROME2"
@@ -113,7 +115,7 @@ def decimals(values: Any) -> list[str]:  # noqa: ANN401 - any sequence of number
 
 
 def _classic(setup: Setup, repeat: int, index: int, plane: Plane, pixels: NDArray[np.float32]) -> "Dataset":
-    ds = common(setup, repeat, _MR_IMAGE, uid(setup, "image", repeat, index))
+    ds = shared_dataset(setup, repeat, _MR_IMAGE, uid(setup, "image", repeat, index))
     ds.ImageType = ["ORIGINAL", "PRIMARY", "M", "NONE"]
     ds.ScanningSequence = "SE" if setup.sequence == "SE" else "GR"
     ds.SequenceVariant = "NONE" if setup.sequence == "SE" else "SP"
@@ -143,21 +145,21 @@ def _classic(setup: Setup, repeat: int, index: int, plane: Plane, pixels: NDArra
     ds.SliceLocation = decimals([plane.position_along_normal])[0]
     ds.PixelSpacing = decimals(setup.pixel_mm)
     ds.WindowCenter, ds.WindowWidth = decimals([setup.level / 2, setup.level])
-    pixel_module(ds, setup, pixels)
+    add_pixels(ds, setup, pixels)
     return ds
 
 
 def _save(ds: "Dataset", path: Path) -> None:
     from pydicom import dcmwrite
     from pydicom.dataset import FileMetaDataset
-    from pydicom.uid import ExplicitVRLittleEndian
+    from pydicom.uid import UID, ExplicitVRLittleEndian
 
     meta = FileMetaDataset()
     meta.FileMetaInformationVersion = b"\x00\x01"
     meta.MediaStorageSOPClassUID = ds.SOPClassUID
     meta.MediaStorageSOPInstanceUID = ds.SOPInstanceUID
     meta.TransferSyntaxUID = ExplicitVRLittleEndian
-    meta.ImplementationClassUID = _IMPLEMENTATION
+    meta.ImplementationClassUID = UID(_IMPLEMENTATION)
     meta.ImplementationVersionName = "EVENFIELD"
     ds.file_meta = meta
     dcmwrite(path, ds, enforce_file_format=True)

@@ -7,57 +7,55 @@ it ghosts; complex Gaussian noise in every channel.
 import math
 
 import numpy as np
-from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane
 from qa.simulate.coils import Complexes, channel_share, noise_mixing, shading
-from qa.simulate.objects import OVERSAMPLING, FineGrid, density, slice_key
+from qa.simulate.fine import FineGrid
+from qa.simulate.objects import density, slice_key
 from qa.simulate.setup import Setup
+from qa.simulate.warp import jacobian
 
-__all__ = ["Scan", "acquired_window", "encode", "ghost_modulation", "noise_level", "scan", "to_image"]
+__all__ = ["Scan", "acquired_window", "ghost_modulation", "object_kspace"]
 
 
-def encode(
-    fine: NDArray[np.floating] | Complexes, shape: tuple[int, int], pixel_mm: tuple[float, float], blur_mm: float
-) -> Complexes:
-    """Transform an object on the fine grid and keep the k-space of an image.
+def object_kspace(fine: Floats, grid: FineGrid, count: tuple[int, int]) -> Complexes:
+    """Transform an object on the fine grid, and keep the middle of its k-space.
 
     Parameters
     ----------
-    fine : (R q, C q) array
-        Samples of the object, every edge blurred by a Gaussian of standard deviation `blur_mm`.
-    shape, pixel_mm : tuple
-        Rows and columns of the image; row and column spacing.
-    blur_mm : float
-        The blur to divide out.
+    fine : (R q, C q) float64
+        Samples of the object, every edge blurred by `grid.blur_mm`.
+    grid : FineGrid
+        Where the samples lie.
+    count : tuple of int
+        Rows and columns of k-space to keep, no more than the samples.
 
     Returns
     -------
-    (R, C) complex128
-        K-space in FFT order (zero frequency first), scaled so that its inverse transform shows an even object of 1 as 1.
+    complex128
+        K-space in FFT order, zero frequency first; phases count from in-plane (0, 0), the centre of the image's first pixel;
+        the zero frequency is the mean over the field of view.
     """
     from scipy.fft import fft
 
-    q = OVERSAMPLING
-    half = fft(fine, axis=1)
-    half = _crop(half, shape[1], axis=1)
-    full = _crop(fft(half, axis=0), shape[0], axis=0)
-    kx = np.fft.fftfreq(shape[1]) / pixel_mm[1]
-    ky = np.fft.fftfreq(shape[0]) / pixel_mm[0]
-    sharpen = 2 * math.pi**2 * blur_mm**2
-    start = 2j * math.pi * (q - 1) / 2 / q
-    across = np.exp(sharpen * kx**2 + start * kx * pixel_mm[1])
-    down = np.exp(sharpen * ky**2 + start * ky * pixel_mm[0])
-    return np.asarray(full * (down[:, None] * across[None, :] / q**2))
+    rows, columns = fine.shape
+    step_x, step_y = float(grid.x_mm[0, 1] - grid.x_mm[0, 0]), float(grid.y_mm[1, 0] - grid.y_mm[0, 0])
+    full = _middle(fft(_middle(fft(fine, axis=1), count[1], axis=1), axis=0), count[0], axis=0)
+    kx, ky = np.fft.fftfreq(count[1]) * count[1] / (columns * step_x), np.fft.fftfreq(count[0]) * count[0] / (rows * step_y)
+    sharpen = 2 * math.pi**2 * grid.blur_mm**2
+    across = np.exp(sharpen * kx**2 - 2j * math.pi * kx * grid.x_mm[0, 0])
+    down = np.exp(sharpen * ky**2 - 2j * math.pi * ky * grid.y_mm[0, 0])
+    return np.asarray(full * (down[:, None] * (across[None, :] / (rows * columns))))
 
 
-def _crop(spectrum: Complexes, count: int, axis: int) -> Complexes:
+def _middle(spectrum: Complexes, count: int, axis: int) -> Complexes:
+    """Keep the lowest `count` frequencies along an axis in FFT order."""
     keep = np.fft.fftfreq(count, 1 / count).round().astype(np.intp)
     return np.take(spectrum, keep, axis=axis, mode="wrap")
 
 
 def ghost_modulation(setup: Setup) -> Complexes:
-    """Factor on each phase-encode line, in FFT order along that axis.
+    """Give the factor on each phase-encode line, in FFT order.
 
     A ghost shifted by half the field of view comes of lines that alternate; another shift of a slower ripple, with a ghost
     to either side.
@@ -70,7 +68,7 @@ def ghost_modulation(setup: Setup) -> Complexes:
 
 
 def acquired_window(setup: Setup) -> tuple[Floats, Floats]:
-    """Weights of k-space along rows (R,) and columns (C,), in FFT order: what is acquired, and how it is apodised."""
+    """Give the weight of k-space along rows (R,) and columns (C,), in FFT order: what is acquired, and its apodisation."""
     windows = []
     for axis, count in (("column", setup.matrix[0]), ("row", setup.matrix[1])):
         k = np.fft.fftfreq(count, 1 / count)
@@ -84,44 +82,37 @@ def acquired_window(setup: Setup) -> tuple[Floats, Floats]:
     return windows[0], windows[1]
 
 
-def to_image(kspace: Complexes) -> Complexes:
-    """Inverse transform of k-space in FFT order."""
-    from scipy.fft import ifft2
-
-    return np.asarray(ifft2(kspace, axes=(-2, -1)))
-
-
-def noise_level(setup: Setup, kept: float) -> float:
-    """Standard deviation of the real part of one channel's noise before the window, `kept` the window's mean square."""
-    if math.isinf(setup.snr):
-        return 0.0
-    return setup.level / setup.snr / math.sqrt(kept)
+def _squeeze(setup: Setup, plane: Plane, x_mm: Floats, y_mm: Floats) -> Floats:
+    """How much of the object's area each place of the image shows: gradients that stretch the image thin its signal."""
+    stretch = jacobian(setup, plane, x_mm, y_mm)
+    return np.asarray(stretch[0, 0] * stretch[1, 1] - stretch[0, 1] * stretch[1, 0])
 
 
 class Scan:
-    """One acquisition as it is acquired: noise-free k-space once for slices that look the same, noise for every image.
+    """One acquisition on the scanner: noise-free images once for slices that look the same, noise for every image.
 
     Parameters
     ----------
     setup : Setup
-        The scan.
+        What is scanned, and how.
     """
 
     def __init__(self, setup: Setup) -> None:
         self.setup = setup
-        self._signal: dict[object, Complexes] = {}
         down, across = acquired_window(setup)
         modulation = ghost_modulation(setup)
         lines = modulation[:, None] if setup.phase_encode == "column" else modulation[None, :]
         self.window: Floats = down[:, None] * across[None, :]
         self._weights: Complexes = self.window * lines
-        self._sigma = noise_level(setup, float(np.mean(self.window**2)))
+        self._plain = bool(np.all(self.window == 1))
+        self.sigma = 0.0 if math.isinf(setup.snr) else setup.level / setup.snr
         self._mixing = noise_mixing(setup)
-        self._maps: Complexes | None = None
-        self.scale = self._calibrate()
+        self._scale = self._fill_value()
+        self._images: dict[object, Complexes] = {}
+        self._sensed: Complexes | None = None
 
-    def _calibrate(self) -> float:
-        """Pixel value of fill at sensitivity 1, so that the mean of the measurement region is `level`."""
+    def _fill_value(self) -> float:
+        """Pixel value of fill at sensitivity 1, so that the mean over the measurement region is `level`."""
         setup = self.setup
         plane = setup.planes[(setup.slices - 1) // 2]
         centre = plane.from_patient(np.asarray(setup.centre_patient))
@@ -129,80 +120,89 @@ class Scan:
         rings = np.sqrt((np.arange(48) + 0.5) / 48) * reach
         turns = np.arange(96) * 2 * math.pi / 96
         x, y = centre[0] + np.outer(rings, np.cos(turns)), centre[1] + np.outer(rings, np.sin(turns))
-        return setup.level / float(np.mean(shading(setup, plane, x, y)))
+        return setup.level / float(np.mean(shading(setup, plane, x, y) * _squeeze(setup, plane, x, y)))
 
-    def signal(self, slice_index: int, repeat: int = 0) -> Complexes:
-        """Noise-free k-space of every channel, (N, R, C) in FFT order."""
+    def _middle_grid(self, plane: Plane) -> tuple[tuple[int, int], Floats, Floats]:
+        """Half as fine again as the image: room for what a smooth sensitivity spreads in k-space."""
+        count = (plane.shape[0] + plane.shape[0] // 2, plane.shape[1] + plane.shape[1] // 2)
+        wide, high = plane.size_mm
+        x: Floats = np.linspace(0.0, wide, count[1], endpoint=False)[None, :]
+        y: Floats = np.linspace(0.0, high, count[0], endpoint=False)[:, None]
+        return count, x, y
+
+    def _sensitivity(self, plane: Plane, x: Floats, y: Floats) -> Complexes:
+        if self._sensed is None:
+            # Places beyond the last pixel stand, by the transform's period, for those before the first.
+            wide, high = plane.size_mm
+            x = np.where(x > wide - plane.pixel_mm[1] / 2, x - wide, x)
+            y = np.where(y > high - plane.pixel_mm[0] / 2, y - high, y)
+            bright = self._scale * shading(self.setup, plane, x, y)
+            self._sensed = channel_share(self.setup, plane, x, y) * (bright * _squeeze(self.setup, plane, x, y))
+        return self._sensed
+
+    def clean(self, slice_index: int, repeat: int = 0) -> Complexes:
+        """Give the noise-free image of every channel, (N, R, C)."""
         setup = self.setup
         plane = setup.planes[slice_index]
-        drifts = bool(setup.gain_drift_slope_percent) and repeat > 0
-        key = (slice_key(setup, plane), repeat if drifts else 0)
-        if key[0] is not None and key in self._signal:
-            return self._signal[key]
-        grid = FineGrid.of(plane)
-        if self._maps is None:
-            sensed = self.scale * shading(setup, plane, grid.x_mm, grid.y_mm)
-            self._maps = channel_share(setup, plane, grid.x_mm, grid.y_mm) * sensed
-        filled = density(setup, plane)
-        if drifts:
-            middle = plane.middle_mm[0]
-            filled = filled * (1 + repeat * setup.gain_drift_slope_percent / 100 * (grid.x_mm - middle) / 100)
-        kspace = np.stack(
-            [
-                encode(filled * (m.real if setup.channels == 1 else m), setup.matrix, setup.pixel_mm, grid.blur_mm)
-                * self._weights
-                for m in self._maps
-            ]
-        )
-        if key[0] is not None:
-            self._signal[key] = kspace
-        return kspace
+        slope = repeat * setup.gain_drift_slope_percent / 100
+        same = slice_key(setup, plane)
+        key = (slice_index if same is None else same, slope)
+        if key not in self._images:
+            self._images[key] = self._acquire(plane, slope)
+        return self._images[key] * (1 + repeat * setup.gain_drift_percent / 100)
 
-    def complex_image(self, slice_index: int, repeat: int = 0, *, noise: bool = True) -> Complexes:
-        """Image of every channel, (N, R, C)."""
+    def _acquire(self, plane: Plane, slope: float) -> Complexes:
+        from scipy.fft import fft, ifft2
+
         setup = self.setup
-        kspace = self.signal(slice_index, repeat) * (1 + repeat * setup.gain_drift_percent / 100)
-        if noise and self._sigma > 0:
-            rng = np.random.default_rng(np.random.SeedSequence([setup.seed, slice_index, repeat]))
-            raw = rng.standard_normal((2, setup.channels, *setup.matrix))
-            white = raw[0] + 1j * raw[1]
-            if setup.noise_correlation:
-                white = np.tensordot(self._mixing, white, axes=1)
-            spread = self._sigma * math.sqrt(setup.matrix[0] * setup.matrix[1])
-            kspace = kspace + white * (spread * self.window)
-        return to_image(kspace)
+        grid = FineGrid.of(plane)
+        count, x, y = self._middle_grid(plane)
+        thing = ifft2(object_kspace(density(setup, plane, grid), grid, count)).real * (count[0] * count[1])
+        if slope:
+            thing = thing * (1 + slope * (x - plane.middle_mm[0]) / 100)
+        images = np.empty((setup.channels, *setup.matrix), dtype=np.complex128)
+        for k, sensed in enumerate(self._sensitivity(plane, x, y)):
+            seen = thing * (sensed.real if setup.channels == 1 else sensed)
+            kspace = _middle(fft(_middle(fft(seen, axis=1), setup.matrix[1], axis=1), axis=0), setup.matrix[0], axis=0)
+            images[k] = ifft2(kspace * self._weights)
+        return images * (setup.matrix[0] * setup.matrix[1] / (count[0] * count[1]))
+
+    def without_ringing(self, slice_index: int) -> Complexes:
+        """Give the noise-free image of every channel as if k-space had been apodised: no ringing, the same ghosts."""
+        from scipy.fft import fft2, ifft2
+
+        calm = [0.5 + 0.5 * np.cos(2 * math.pi * np.fft.fftfreq(count)) for count in self.setup.matrix]
+        kspace = fft2(self.clean(slice_index), axes=(-2, -1))
+        return np.asarray(ifft2(kspace * (calm[0][:, None] * calm[1][None, :]), axes=(-2, -1)))
+
+    def noise(self, slice_index: int, repeat: int) -> Complexes:
+        """Give the noise of every channel, (N, R, C): `sigma` in the real and the imaginary part of every pixel.
+
+        White noise stays white under the transform, so it is drawn in the image, unless k-space is weighted.
+        """
+        from scipy.fft import ifft2
+
+        setup = self.setup
+        rng = np.random.default_rng(np.random.SeedSequence([setup.seed, slice_index, repeat]))
+        white = rng.standard_normal((setup.channels, *setup.matrix, 2)).view(np.complex128)[..., 0]
+        if setup.noise_correlation:
+            white = np.tensordot(self._mixing, white, axes=1)
+        if not self._plain:
+            pixels = setup.matrix[0] * setup.matrix[1]
+            white = ifft2(white * (self.window / math.sqrt(np.mean(self.window**2))), axes=(-2, -1)) * math.sqrt(pixels)
+        return np.asarray(white * self.sigma)
 
     def magnitude(self, slice_index: int, repeat: int = 0, *, noise: bool = True) -> Floats:
-        """Root sum of squares over the channels, (R, C)."""
-        image = self.complex_image(slice_index, repeat, noise=noise)
+        """Give the root sum of squares over the channels, (R, C)."""
+        image = self.clean(slice_index, repeat)
+        if noise and self.sigma > 0:
+            image = image + self.noise(slice_index, repeat)
         if len(image) == 1:
             return np.abs(image[0])
-        combined: Floats = np.sqrt(np.sum(image.real**2 + image.imag**2, axis=0))
-        return combined
+        return np.asarray(np.sqrt(np.sum(image.real**2 + image.imag**2, axis=0)))
 
-
-def scan(setup: Setup, *, noise: bool = True) -> list[NDArray[np.float32]]:
-    """Acquire every repeat.
-
-    Parameters
-    ----------
-    setup : Setup
-        The scan.
-    noise : bool
-        False for the model's noise-free images, not rounded.
-
-    Returns
-    -------
-    list of (S, R, C) float32
-        One stack a repeat, pixel values as a scanner stores them: whole numbers from 0 to 65535.
-    """
-    machine = Scan(setup)
-    stacks = []
-    for repeat in range(setup.repeats):
-        images = np.stack([machine.magnitude(k, repeat, noise=noise) for k in range(setup.slices)])
-        if noise:
-            images = np.clip(np.rint(images), 0, 65535)
-        stack = images.astype(np.float32)
-        stack.setflags(write=False)
-        stacks.append(stack)
-    return stacks
+    def stack(self, repeat: int) -> Floats:
+        """Give one repeat as a scanner stores it: (S, R, C), whole numbers from 0 to 65535."""
+        images = np.stack([self.magnitude(k, repeat) for k in range(self.setup.slices)])
+        whole: Floats = np.clip(np.rint(images), 0, 65535)
+        return whole

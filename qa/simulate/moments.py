@@ -28,7 +28,8 @@ def magnitude_mean(amplitude: ArrayLike, sigma: ArrayLike, channels: int) -> Flo
     Returns
     -------
     ndarray
-        sigma sqrt(pi / 2) L(amplitude^2 / (2 sigma^2)), L the generalised Laguerre function of order 1/2; above 25 sigma its asymptotic series.
+        The closed form, with the confluent hypergeometric function 1F1(-1/2; channels; -amplitude^2 / (2 sigma^2)); above
+        25 sigma its asymptotic series.
     """
     from scipy.special import gammaln, hyp1f1
 
@@ -58,8 +59,9 @@ def magnitude_variance(amplitude: ArrayLike, sigma: ArrayLike, channels: int) ->
 
 
 def root_mean(eigenvalues: ArrayLike) -> float:
-    """Mean of sqrt(Q), Q a sum of independent exponential variables of mean 2 eigenvalue: signal-free air of correlated channels.
+    """Mean of the root sum of squares in signal-free air, the channels' noise correlated with these eigenvalues.
 
+    The square Q is a sum of independent exponential variables of mean twice each eigenvalue, and
     E sqrt(Q) = (1 / (2 sqrt pi)) times the integral of (1 - L(t)) t^(-3/2), L the Laplace transform of Q.
     """
     from scipy.integrate import quad

@@ -1,31 +1,74 @@
-"""Places in object, image and phantom, and the body's outline: the geometry that truth needs, point by point."""
+"""What a true value is, and the geometry that it needs, point by point."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike
 
 from qa.geometry import Floats, Plane
-from qa.simulate.objects import Profile, object_place
 from qa.simulate.setup import Setup
+from qa.simulate.warp import image_place, object_place
 
-__all__ = ["image_place", "outline_mm", "phantom_place"]
+__all__ = ["Truth", "meant_slice", "on_plane", "outline_mm", "phantom_place", "seen_centre"]
 
 
-def image_place(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) -> tuple[Floats, Floats]:
-    """Tell where in the image an in-plane place of the object appears: the inverse of `object_place`, by iteration."""
-    x, y = np.asarray(x_mm, dtype=np.float64), np.asarray(y_mm, dtype=np.float64)
-    at_x, at_y = x.copy(), y.copy()
-    for _ in range(60):
-        was_x, was_y = object_place(setup, plane, at_x, at_y)
-        at_x, at_y = at_x + (x - was_x), at_y + (y - was_y)
-    return at_x, at_y
+@dataclass(frozen=True)
+class Truth:
+    """The true value of one quantity.
+
+    Attributes
+    ----------
+    value : float
+        In the slice that the quantity is read in, or over all.
+    by_slice : mapping
+        From slice number, counted from 1 along the normal, to value; empty where no one slice is meant.
+    details : mapping
+        What a comparison may need besides: named in `true_values`.
+    """
+
+    value: float
+    by_slice: Mapping[int, float] = field(default_factory=dict)
+    details: Mapping[str, Any] = field(default_factory=dict)
 
 
 def phantom_place(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike, *, seen: bool = True) -> Floats:
     """Phantom coordinates (..., 3) of an in-plane place: of the image where `seen`, else of the object."""
     x, y = object_place(setup, plane, x_mm, y_mm) if seen else (x_mm, y_mm)
-    patient = plane.to_patient(x, y)
-    at: Floats = (patient - np.asarray(setup.centre_patient)) @ setup.orientation
+    at: Floats = (plane.to_patient(x, y) - np.asarray(setup.centre_patient)) @ setup.orientation
     return at
+
+
+def on_plane(setup: Setup, plane: Plane, X: ArrayLike, Y: ArrayLike) -> Floats:
+    """Object place, in-plane mm (..., 2), where lines parallel to the phantom's axis cross a slice."""
+    X, Y = np.broadcast_arrays(np.asarray(X, dtype=np.float64), np.asarray(Y, dtype=np.float64))
+    start = np.asarray(setup.centre_patient) + np.stack([X, Y, np.zeros_like(X)], axis=-1) @ setup.orientation.T
+    local = plane.from_patient(start)
+    axis = plane.axes.T @ setup.orientation[:, 2]
+    crossed: Floats = local - axis * (local[..., 2:] / axis[2])
+    return crossed[..., :2]
+
+
+def seen_centre(setup: Setup, plane: Plane) -> tuple[float, float]:
+    """Where a slice shows the phantom's axis, or a sphere's centre projected on it: in-plane mm of the image."""
+    if setup.phantom.body.shape == "cylinder":
+        at = on_plane(setup, plane, 0.0, 0.0)
+    else:
+        at = plane.from_patient(np.asarray(setup.centre_patient))
+    x, y = image_place(setup, plane, at[0], at[1])
+    return float(x), float(y)
+
+
+def meant_slice(setup: Setup, z_mm: float) -> int:
+    """Choose the slice, by number, that is meant for a section: by the definition's own stack, else the nearest one."""
+    stack = setup.phantom.slices
+    if stack is not None and stack.count == setup.slices:
+        index = round((z_mm - stack.first_z_mm) / stack.spacing_mm)
+        if 0 <= index < stack.count:
+            return index + 1
+    place = np.asarray(setup.centre_patient) + setup.orientation[:, 2] * z_mm
+    return 1 + min(range(setup.slices), key=lambda k: abs(float(setup.planes[k].from_patient(place)[2])))
 
 
 def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], direction: tuple[float, float]) -> float:
@@ -34,7 +77,6 @@ def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], directio
     A cylinder's outline is where the slice's middle plane leaves it; a sphere's where half the slice profile still lies in it.
     """
     radius = setup.body_diameter_mm / 2
-    profile = Profile(setup.thickness_mm, setup.profile_edge_mm)
     sphere = setup.phantom.body.shape == "sphere"
     height = float(plane.from_patient(np.asarray(setup.centre_patient))[2])
 
@@ -42,9 +84,8 @@ def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], directio
         at = phantom_place(setup, plane, centre[0] + distance * direction[0], centre[1] + distance * direction[1])
         if not sphere:
             return bool(np.hypot(at[0], at[1]) < radius)
-        across = float(at @ at) - height**2
-        half = np.sqrt(max(radius**2 - across, 0.0))
-        return bool(profile.cumulative(height + half) - profile.cumulative(height - half) > 0.5)
+        half = np.sqrt(max(radius**2 - (float(at @ at) - height**2), 0.0))
+        return bool(setup.profile.cumulative(height + half) - setup.profile.cumulative(height - half) > 0.5)
 
     low, high = 0.0, 2.5 * radius
     for _ in range(60):

@@ -16,6 +16,7 @@ import numpy as np
 from qa.errors import SettingError
 from qa.geometry import Floats, Plane
 from qa.phantoms import Phantom
+from qa.simulate.profile import Profile
 from qa.simulate.signal import larmor_MHz, spin_echo, spoiled_gradient_echo
 
 __all__ = ["PLANES", "Setup", "default_setup"]
@@ -51,8 +52,8 @@ class Setup:
     centre_patient, rotation_deg, tilt_x_deg, tilt_y_deg
         The phantom's centre, its turn about its own axis (x towards y), and its tilt about the image's x and y.
     snr : float
-        Mean noise-free signal over the measurement region of uniform fill, first repeat, channels all in health, over the standard
-        deviation of the real part of one channel's noise; infinity for no noise.
+        Mean noise-free signal over the measurement region of uniform fill, first repeat, channels all in health, over the
+        standard deviation of the real part of one channel's noise; infinity for no noise.
     level : float
         Pixel value of that mean signal.
     channels, coil, channel_gains, noise_correlation
@@ -60,8 +61,8 @@ class Setup:
         (1 in health); correlation of the noise of neighbouring channels, falling geometrically with distance round the array,
         or the whole matrix.
     shading_percent, shading_direction_deg, shading_curvature
-        100 (max - min) / (max + min) of the combined sensitivity over the disc of 75 % of the phantom's cross-section, when the phantom
-        lies centred; where the bright side is; share of the shading that is curved rather than linear.
+        100 (max - min) / max of the combined sensitivity over the cross-section of a phantom that lies centred; where the
+        bright side is; share of the shading that is curved rather than linear: brighter outside, or inside where negative.
     ghost_percent, ghost_shift, ghost_phase_deg
         Ghost amplitude in percent of the object, its shift as a fraction of the field of view along the phase-encode axis
         (0.5: alternating lines; else one ghost to either side), and its phase.
@@ -72,8 +73,8 @@ class Setup:
     off_resonance_hz
         Shifts the image along the readout by this over `bandwidth_hz_per_pixel`.
     partial_fourier, acquired_fraction, apodisation
-        Share of phase-encode lines acquired, the rest zero; share of k-space acquired along both axes, zero filled to the matrix;
-        "none" or "hann".
+        Share of phase-encode lines acquired, the rest zero; share of k-space acquired along both axes, zero filled to the
+        matrix; "none" or "hann".
     sequence, repetition_ms, echo_ms, flip_deg, t1_ms, t2_ms, proton_density
         Spin echo ("SE") or spoiled gradient echo ("GRE", `t2_ms` is then T2*), and the fill.
     """
@@ -148,7 +149,7 @@ class Setup:
         check(self)
 
     @property
-    def frequency_MHz(self) -> float:
+    def frequency_MHz(self) -> float:  # noqa: N802 - a unit keeps its case
         """Centre frequency by the Larmor relation, with the magnet's own offset."""
         return larmor_MHz(self.field_strength_T) * (1 + 1e-6 * self.frequency_offset_ppm)
 
@@ -156,7 +157,8 @@ class Setup:
     def relative_signal(self) -> float:
         """Signal of the fill under this protocol, in units of its equilibrium magnetisation at proton density 1."""
         formula = spin_echo if self.sequence == "SE" else spoiled_gradient_echo
-        return formula(self.proton_density, self.t1_ms, self.t2_ms, self.repetition_ms, self.echo_ms, self.flip_deg)
+        each = formula(self.t1_ms, self.t2_ms, self.repetition_ms, self.echo_ms, self.flip_deg)
+        return self.proton_density * each
 
     @property
     def body_diameter_mm(self) -> float:
@@ -212,6 +214,16 @@ class Setup:
         return turned
 
     @property
+    def profile(self) -> Profile:
+        """The slice profile."""
+        return Profile(self.thickness_mm, self.profile_edge_mm)
+
+    @property
+    def bent(self) -> bool:
+        """Whether the gradients are not linear."""
+        return bool(self.nonlinearity_x_mm or self.nonlinearity_y_mm)
+
+    @property
     def off_resonance_shift_mm(self) -> tuple[float, float]:
         """Shift of the image along in-plane x and y from off-resonance: along the readout."""
         pixels = self.off_resonance_hz / self.bandwidth_hz_per_pixel
@@ -227,7 +239,7 @@ class Setup:
         """Return the same scan with some settings changed."""
         unknown = set(changes) - {f.name for f in fields(self)}
         if unknown:
-            raise SettingError(f"There is no setting {sorted(unknown)[0]!r} of a digital scan: see qa.simulate.Setup.")
+            raise SettingError(f"There is no setting {min(unknown)!r} of a digital scan: see qa.simulate.Setup.")
         return replace(self, **changes)
 
 
@@ -291,15 +303,15 @@ _RANGES: dict[str, tuple[float, float]] = {
     "tilt_y_deg": (-60, 60),
     "rotation_deg": (-360, 360),
     "shading_percent": (0, 60),
-    "shading_curvature": (0, 1),
+    "shading_curvature": (-1, 1),
     "ghost_percent": (0, 100),
     "ghost_shift": (0, 0.5),
     "gain_drift_percent": (-50, 50),
     "gain_drift_slope_percent": (-50, 50),
     "scale_x_percent": (-20, 20),
     "scale_y_percent": (-20, 20),
-    "nonlinearity_x_mm": (-10, 10),
-    "nonlinearity_y_mm": (-10, 10),
+    "nonlinearity_x_mm": (-6, 6),
+    "nonlinearity_y_mm": (-6, 6),
     "partial_fourier": (0.5, 1),
     "acquired_fraction": (0.25, 1),
     "echo_ms": (0, math.inf),
