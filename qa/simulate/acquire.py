@@ -2,9 +2,6 @@
 
 import hashlib
 
-import numpy as np
-from numpy.typing import NDArray
-
 from qa.records import Acquisition, Scanner, Series, Settings
 from qa.simulate.encode import Scan
 from qa.simulate.setup import Setup
@@ -70,14 +67,8 @@ def simulate(setup: Setup, machine: Scan | None = None) -> Acquisition:
             scanner=scanner,
             settings=settings,
             planes=setup.planes,
-            pixels=_stored(machine, k),
+            pixels=machine.stack(k),
         )
         for k in range(setup.repeats)
     )
     return Acquisition(repeats=repeats)
-
-
-def _stored(machine: Scan, repeat: int) -> NDArray[np.float32]:
-    pixels = machine.stack(repeat).astype(np.float32)
-    pixels.setflags(write=False)
-    return pixels

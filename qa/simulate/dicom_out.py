@@ -116,6 +116,7 @@ def decimals(values: Any) -> list[str]:  # noqa: ANN401 - any sequence of number
 
 def _classic(setup: Setup, repeat: int, index: int, plane: Plane, pixels: NDArray[np.float32]) -> "Dataset":
     ds = shared_dataset(setup, repeat, _MR_IMAGE, uid(setup, "image", repeat, index))
+    ds.Laterality = ""
     ds.ImageType = ["ORIGINAL", "PRIMARY", "M", "NONE"]
     ds.ScanningSequence = "SE" if setup.sequence == "SE" else "GR"
     ds.SequenceVariant = "NONE" if setup.sequence == "SE" else "SP"

@@ -7,6 +7,7 @@ it ghosts; complex Gaussian noise in every channel.
 import math
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane
 from qa.simulate.coils import Complexes, channel_share, noise_mixing, shading
@@ -197,12 +198,12 @@ class Scan:
         image = self.clean(slice_index, repeat)
         if noise and self.sigma > 0:
             image = image + self.noise(slice_index, repeat)
-        if len(image) == 1:
-            return np.abs(image[0])
-        return np.asarray(np.sqrt(np.sum(image.real**2 + image.imag**2, axis=0)))
+        combined: Floats = np.sqrt(np.sum(image.real**2 + image.imag**2, axis=0))
+        return combined
 
-    def stack(self, repeat: int) -> Floats:
-        """Give one repeat as a scanner stores it: (S, R, C), whole numbers from 0 to 65535."""
+    def stack(self, repeat: int) -> NDArray[np.float32]:
+        """Give one repeat as a scanner stores it: (S, R, C), whole numbers from 0 to 65535, read-only."""
         images = np.stack([self.magnitude(k, repeat) for k in range(self.setup.slices)])
-        whole: Floats = np.clip(np.rint(images), 0, 65535)
+        whole = np.clip(np.rint(images), 0, 65535).astype(np.float32)
+        whole.setflags(write=False)
         return whole
