@@ -21,7 +21,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Floats", "Plane", "disc_overlap", "harmonics", "robust_fit", "sample"]
+__all__ = ["Floats", "Plane", "Rim", "disc_overlap", "find_rim", "harmonics", "robust_fit", "sample"]
 
 Floats = NDArray[np.float64]
 
@@ -170,14 +170,117 @@ def robust_fit(design: Floats, values: Floats, least_scale: float, start: Floats
             parameters = solve(known / np.maximum(residual, least_scale))
     weights = known.astype(np.float64)
     for _ in range(8):
-        residual = np.where(known, np.abs(filled - parameters @ design.T), np.nan)
-        enough = known.any(axis=1)
-        scale = np.full(len(values), least_scale)
-        scale[enough] = np.maximum(1.4826 * np.nanmedian(residual[enough], axis=1), least_scale)
-        weights = np.where(known, np.clip(1 - (np.nan_to_num(residual) / (4.685 * scale[:, None])) ** 2, 0, None) ** 2, 0.0)
+        residual = np.abs(filled - parameters @ design.T)
+        ranked = np.sort(np.where(known, residual, np.inf), axis=1)
+        middle = ranked[np.arange(len(values)), np.maximum(known.sum(axis=1) - 1, 0) // 2]
+        scale = np.maximum(1.4826 * np.where(np.isfinite(middle), middle, 0.0), least_scale)
+        weights = known * np.clip(1 - (residual / (4.685 * scale[:, None])) ** 2, 0, None) ** 2
         parameters = solve(weights)
     poor = (weights > 0).sum(axis=1) <= design.shape[1]
     return np.where(poor[:, None], np.nan, parameters), weights
+
+
+@dataclass(frozen=True, eq=False)
+class Rim:
+    """The edge of a bright round object, seen along radii from near its centre.
+
+    Attributes
+    ----------
+    radius_mm : (S, N) float
+        Where the signal falls through half height; NaN where it does not.
+    plateau, floor : (S, N) float
+        Squared magnitude inside, carried to the edge along its slope, and outside.
+    """
+
+    radius_mm: Floats
+    plateau: Floats
+    floor: Floats
+
+
+def find_rim(
+    images: NDArray[np.floating], plane: Plane, centres_mm: Floats, radii_mm: Floats, angles: Floats, *, reach_px: float
+) -> Rim:
+    """Find the outermost fall through half height near an expected radius.
+
+    Half height lies between the local plateau inside, levelled for shading, and the local floor outside. Heights are
+    compared as squared magnitudes less the squared floor: the expectation of a squared magnitude is the squared signal plus
+    a constant (Gudbjartsson and Patz 1995; for several channels Constantinides et al. 1997), so noise does not move the
+    edge. Plateau and floor are read under a Hann window, which truncation ringing does not pass.
+
+    Parameters
+    ----------
+    images : (S, R, C) array
+        Magnitude images.
+    plane : Plane
+        Spacing and size of any of them.
+    centres_mm : (S, 2) float
+        Where radii start, in-plane mm.
+    radii_mm : (S, N) float
+        Where the edge is expected.
+    angles : (N,) float
+        Angles of the radii, evenly round the circle, radians.
+    reach_px : float
+        How far from the expected radius to look, mean pixels; above 8 the search is coarse and takes the median inside as
+        plateau.
+
+    Returns
+    -------
+    Rim
+        Edge, plateau and floor along each radius.
+    """
+    pixel = float(np.mean(plane.pixel_mm))
+    coarse = reach_px > 8
+    step = pixel if coarse else pixel / 2
+    offsets = np.arange(-reach_px * pixel, reach_px * pixel + step / 2, step)
+    distance = radii_mm[:, :, None] + offsets
+    x = centres_mm[:, 0, None, None] + distance * np.cos(angles)[:, None]
+    y = centres_mm[:, 1, None, None] + distance * np.sin(angles)[:, None]
+    power = sample(images, y / plane.pixel_mm[0], x / plane.pixel_mm[1]) ** 2
+    power[distance < 0] = np.nan
+    power = _fill_outwards(power)
+    inner, outer = offsets <= -min(2.0, reach_px / 4) * pixel, offsets >= min(2.0, reach_px / 4) * pixel
+    if coarse:
+        plateau = np.median(power[..., inner], axis=-1)
+    else:
+        plateau = np.clip(_around(np.sqrt(power[..., inner]) @ _hann_fit(offsets[inner], 1)), 0, None) ** 2
+    floor = _around(power[..., outer] @ _hann_fit(offsets[outer], 0))
+    level = floor + (plateau - floor) / 4
+    above = power > level[..., None]
+    last = offsets.size - 1 - np.argmax(above[..., ::-1], axis=-1)
+    last = np.where(above.any(axis=-1) & (last < offsets.size - 1), last, 0)
+    upper, lower = (np.sqrt(np.take_along_axis(power, k[..., None], axis=-1)[..., 0]) for k in (last, last + 1))
+    root = np.sqrt(level)
+    fall = np.where(upper > lower, upper - lower, 1.0)
+    edge = radii_mm + offsets[last] + step * (upper - root) / fall
+    usual = np.median(plateau, axis=1, keepdims=True)
+    good = (last > 0) & (upper > lower) & (plateau > 0.04 * usual) & (plateau > 2 * floor)
+    return Rim(np.where(good, edge, np.nan), plateau, floor)
+
+
+def _fill_outwards(power: Floats) -> Floats:
+    """Give places beyond the image the mean of what the same radius shows inside it, or nothing."""
+    known = np.isfinite(power)
+    if known.all():
+        return power
+    count = known.sum(axis=-1, keepdims=True)
+    low = np.where(known, power, np.inf).min(axis=-1, keepdims=True)
+    return np.where(known, power, np.where(count > 0, low, 0.0))
+
+
+def _hann_fit(offsets: Floats, degree: int) -> Floats:
+    """Weights (N,) that give the value at offset 0 of a polynomial fitted under a Hann window."""
+    window = np.sin(np.pi * (np.arange(offsets.size) + 0.5) / offsets.size) ** 2
+    design = offsets[:, None] ** np.arange(degree + 1)
+    weights: Floats = np.linalg.solve((design * window[:, None]).T @ design, (design * window[:, None]).T)[0]
+    return weights
+
+
+def _around(values: Floats) -> Floats:
+    """Average over each angle and its two neighbours on either side, shape (S, N)."""
+    wrapped = np.concatenate([values[:, -2:], values, values[:, :2]], axis=1)
+    total = np.cumsum(np.pad(wrapped, ((0, 0), (1, 0))), axis=1)
+    mean: Floats = (total[:, 5:] - total[:, :-5]) / 5
+    return mean
 
 
 def disc_overlap(plane: Plane, centre_mm: tuple[float, float], radius_mm: float) -> Floats:

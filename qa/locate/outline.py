@@ -1,8 +1,7 @@
 """The body's outline in each slice: a circle through its sub-pixel edge.
 
-The edge along a radius lies at half height between the local plateau inside and the local floor outside. Heights are compared
-as squared magnitudes less the squared floor, because the expectation of a squared magnitude is the squared signal plus a
-constant (Gudbjartsson and Patz 1995), so that noise, of one channel or of many, does not move the edge.
+A coarse silhouette says where to look; edges along radii (`qa.geometry.find_rim`) and a robust fit to them do the rest, so
+that a notch, an air bubble or an insert at the rim is left out and not averaged in.
 """
 
 from dataclasses import dataclass
@@ -11,13 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage
 
-from qa.geometry import Floats, Plane, harmonics, robust_fit, sample
+from qa.geometry import Plane, find_rim, harmonics, robust_fit
 from qa.records import CrossSection
 
 __all__ = ["Outline", "Silhouette", "find_outlines", "find_silhouettes"]
 
 _COARSE = 64
-_REJECTED_AT = 4.685
 
 
 @dataclass(frozen=True)
@@ -124,8 +122,10 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     pixel = float(np.mean(plane.pixel_mm))
 
     angles = np.linspace(0, 2 * np.pi, 96, endpoint=False)
-    reach = 3 * max(1, round(min(plane.shape) / _COARSE)) * pixel + 0.1 * float(radii.max())
-    edges = _edges(images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), 96)), angles, reach=reach, step=pixel)
+    reach = 9 + 0.1 * float(radii.max()) / pixel
+    edges = find_rim(
+        images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), 96)), angles, reach_px=reach
+    ).radius_mm
     rigid, _ = robust_fit(harmonics(angles, 1), edges, 0.3 * pixel)
     shape, _ = robust_fit(harmonics(angles, 2), edges, 0.3 * pixel, np.pad(rigid, ((0, 0), (0, 2))))
 
@@ -135,7 +135,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     if not len(images):
         return ()
     angles = np.linspace(0, 2 * np.pi, 192, endpoint=False)
-    edges = _edges(images, plane, centres, shape @ harmonics(angles, 2).T, angles, reach=8 * pixel, step=pixel / 2)
+    edges = find_rim(images, plane, centres, shape @ harmonics(angles, 2).T, angles, reach_px=8).radius_mm
     shape, weights = robust_fit(harmonics(angles, 2), edges, 0.05 * pixel, shape)
 
     outlines = []
@@ -149,7 +149,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
         middle = centre + fit[1:3]
         off_circle = edge[kept] - harmonics(angles[kept], 1) @ fit[:3]
         off_shape = edge[kept] - harmonics(angles[kept], 2) @ fit
-        independent = min(float(kept.sum()), 2 * np.pi * radius * kept.mean() / (1.5 * pixel))
+        independent = min(float(kept.sum()), 2 * np.pi * radius * kept.mean() / (2.5 * pixel))
         scatter = float(np.sqrt(np.mean(off_shape**2)))
         x, y = middle[0] + radius * np.cos(angles), middle[1] + radius * np.sin(angles)
         far = [(-1.5 * mm, (n + 0.5) * mm) for mm, n in zip(plane.pixel_mm[::-1], plane.shape[::-1], strict=True)]
@@ -170,65 +170,3 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
             )
         )
     return tuple(outlines)
-
-
-def _edges(
-    images: NDArray[np.float32],
-    plane: Plane,
-    centres: Floats,
-    radii: Floats,
-    angles: Floats,
-    *,
-    reach: float,
-    step: float,
-) -> Floats:
-    """Radius (S, N) in mm of the outermost fall through half height near the expected one; NaN where there is none."""
-    pixel = float(np.mean(plane.pixel_mm))
-    offsets = np.arange(-reach, reach + step / 2, step)
-    distance = radii[:, :, None] + offsets
-    x = centres[:, 0, None, None] + distance * np.cos(angles)[:, None]
-    y = centres[:, 1, None, None] + distance * np.sin(angles)[:, None]
-    power = sample(images, y / plane.pixel_mm[0], x / plane.pixel_mm[1]) ** 2
-    power[distance < 0] = np.nan
-    margin = min(2.5 * pixel, reach / 2)
-    smooth = _around(power)
-    inside, outside = smooth[..., offsets <= -margin], smooth[..., offsets >= margin]
-    plateau = _levelled(np.sqrt(inside), offsets[offsets <= -margin]) ** 2 if reach <= 8 * pixel else _middle(inside)
-    known = np.isfinite(outside)
-    floor = np.where(known, outside, 0).sum(axis=-1) / np.maximum(known.sum(axis=-1), 1)
-    rest = np.median(floor, axis=1, keepdims=True)
-    floor = np.where(known.any(axis=-1), floor, rest)
-    level = floor + (plateau - floor) / 4
-    above = np.nan_to_num(power) > level[..., None]
-    last = offsets.size - 1 - np.argmax(above[..., ::-1], axis=-1)
-    last = np.where(above.any(axis=-1) & (last < offsets.size - 1) & (last > 0), last, 0)
-    upper, lower = (np.sqrt(np.take_along_axis(power, k[..., None], axis=-1)[..., 0]) for k in (last, last + 1))
-    root = np.sqrt(level)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        edge = np.take_along_axis(distance, last[..., None], axis=-1)[..., 0] + step * (upper - root) / (upper - lower)
-    typical = np.nanmedian(np.where(np.isfinite(plateau), plateau, np.nan), axis=1, keepdims=True)
-    good = (last > 0) & (plateau > 0.05 * typical) & (plateau > 2 * floor)
-    return np.where(good, edge, np.nan)
-
-
-def _around(profiles: Floats) -> Floats:
-    """Average each profile with its neighbours, two on either side."""
-    wrapped = np.concatenate([profiles[:, -2:], profiles, profiles[:, :2]], axis=1)
-    total = np.cumsum(np.nan_to_num(np.pad(wrapped, ((0, 0), (1, 0), (0, 0)))), axis=1)
-    mean = (total[:, 5:] - total[:, :-5]) / 5
-    return np.where(np.isfinite(profiles), mean, np.nan)
-
-
-def _middle(inside: Floats) -> Floats:
-    """Median over the inner samples: a plateau that an insert does not pull down."""
-    filled = np.where(np.isfinite(inside), inside, 0.0)
-    middle: Floats = np.median(filled, axis=-1)
-    return middle
-
-
-def _levelled(inside: Floats, offsets: Floats) -> Floats:
-    """Carry the inner plateau to the edge along a straight line, because shading tilts it."""
-    design = np.stack([np.ones_like(offsets), offsets], axis=1)
-    weights = np.linalg.pinv(design)[0]
-    carried: Floats = np.clip(np.nan_to_num(inside) @ weights, 0, None)
-    return carried

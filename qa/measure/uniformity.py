@@ -1,0 +1,233 @@
+"""`uniformity_piu` and `uniformity_naad`: how even the signal is over M.
+
+NEMA MS 3. Percent integral uniformity is 100 (1 - (max - min) / (max + min)), max and min being the highest and lowest mean
+of a 1 cm2 disc that lies wholly in M. The normalised absolute average deviation is 100 (1 - mean of abs(Y - Ybar) / Ybar)
+over M after the 3 by 3 low-pass filter (1 2 1, 2 4 2, 1 2 1) / 16.
+
+Both are stated with the scatter of noise taken out, as the mean of many repeats would show them. In one image scatter
+drives the highest disc up, the lowest down and every deviation away from zero; how far is worked out from the noise found
+in the image and a plain surface through it, and taken out. Details give the figure before that (`uncorrected`) and the
+correction.
+"""
+
+import math
+from collections.abc import Iterable
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qa.geometry import Floats, Plane, disc_overlap, sample
+from qa.measure.noise import Noise, evaluate, fit_surface, image_noise
+from qa.measure.regions import Field, figure, uniform_field
+from qa.phantoms import Phantom
+from qa.records import Acquisition, Measurement, NotMeasured, Pose, Region
+
+__all__ = ["uniformity"]
+
+_PIU = ("percent integral uniformity (NEMA MS 3), less the effect of noise", 1)
+_NAAD = ("normalised absolute average deviation (NEMA MS 3), less the effect of noise", 1)
+_DISC_MM = math.sqrt(100 / math.pi)
+_GRID = 91
+_WRAP = 96
+_DRAWS = 16
+
+
+def uniformity(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
+    """Measure both uniformities.
+
+    Standard uncertainty: of the integral uniformity by resampling (noise of the image's own level, drawn once and for all,
+    on the fitted surface); of the average deviation by propagation of the noise of each pixel, with what the border of M
+    makes of the pixels it divides (rectangular, between counting their share and counting whole pixels).
+    """
+    field = uniform_field(scan, pose, phantom)
+    if isinstance(field, str):
+        return [NotMeasured(name, field) for name in ("uniformity_piu", "uniformity_naad")]
+    image = field.cut(scan.pixels)
+    noise = image_noise(scan, field)
+    surface = _plain_surface(image, field, noise)
+    return [_integral(image, field, noise, surface), _deviation(image, field, noise, surface)]
+
+
+def _plain_surface(image: Floats, field: Field, noise: Noise) -> Floats:
+    """Fit the plainest polynomial surface that a fourth-order one does not better by more than noise allows.
+
+    What a surface follows of the noise hides how much noise there is, so it is given no more freedom than the image asks
+    for: the sum of squares that a fourth-order surface saves is chi-square in units of the noise where it follows noise
+    alone.
+    """
+    x, y = field.grid
+    surfaces = {degree: fit_surface(image, field.inside, x, y, degree) for degree in (4, 1, 2, 3)}
+    left = {d: float((((image - evaluate(s, x, y)) * field.inside) ** 2).sum()) for d, s in surfaces.items()}
+    unit = noise.sigma**2 * noise.correlation.mean_factor
+    for degree in (1, 2, 3):
+        spare = 15 - (degree + 1) * (degree + 2) // 2
+        if left[degree] - left[4] < unit * (spare + 3 * math.sqrt(2 * spare)):
+            return surfaces[degree]
+    return surfaces[4]
+
+
+def _integral(image: Floats, field: Field, noise: Noise, surface: Floats) -> Measurement | NotMeasured:
+    reach = field.radius_mm - _DISC_MM
+    if reach < _DISC_MM:
+        return NotMeasured(
+            "uniformity_piu", f"a measurement region of radius {field.radius_mm:.0f} mm is too small for discs of 1 cm2"
+        )
+    disc = _disc(field.plane)
+    means = _convolve(image, disc)
+    at, values = _places(means, field, reach)
+    high, low = int(values.argmax()), int(values.argmin())
+    highest, lowest = float(values[high]), float(values[low])
+    if not highest + lowest > 0:
+        return NotMeasured("uniformity_piu", "there is no signal in the measurement region")
+    raw = 100 * (1 - (highest - lowest) / (highest + lowest))
+    spread = noise.sigma * math.sqrt(noise.correlation.mean_factor * float((disc**2).sum()))
+    shift, u_value = _resampled(surface, field.radius_mm, reach, spread)
+    places = {
+        name: (float(at[k, 0] + field.section.centre_mm[0]), float(at[k, 1] + field.section.centre_mm[1]))
+        for name, k in (("highest", high), ("lowest", low))
+    }
+    details = {"uncorrected": raw, "noise_correction": -shift, "highest": highest, "lowest": lowest}
+    regions = (
+        field.region,
+        *(Region(name, "circle", field.slice_index + 1, (place,), _DISC_MM) for name, place in places.items()),
+    )
+    return figure(
+        "uniformity_piu", raw - shift, u_value, _PIU, slice_index=field.slice_index, details=details, regions=regions
+    )
+
+
+def _places(means: Floats, field: Field, reach_mm: float) -> tuple[Floats, Floats]:
+    """Places (N, 2) from M's centre, mm, of discs within M, and their means: every pixel, and all round the limit.
+
+    Shading is strongest at the limit, which lies between pixels; disc means are smooth enough to read between them.
+    """
+    x, y = (v * field.radius_mm for v in field.grid)
+    rows, columns = np.nonzero(x[None, :] ** 2 + y[:, None] ** 2 <= reach_mm**2)
+    turns = np.linspace(0, 2 * np.pi, 360, endpoint=False)
+    round_x, round_y = reach_mm * np.cos(turns), reach_mm * np.sin(turns)
+    limit = sample(means[None], ((round_y - y[0]) / (y[1] - y[0]))[None], ((round_x - x[0]) / (x[1] - x[0]))[None])[0]
+    at = np.stack([np.append(x[columns], round_x), np.append(y[rows], round_y)], axis=1)
+    return at, np.append(means[rows, columns], limit)
+
+
+def _disc(plane: Plane) -> Floats:
+    """Weights, sum 1, of the pixels under a disc of 1 cm2 about the middle one."""
+    half = [math.ceil(_DISC_MM / step + 0.5) for step in plane.pixel_mm]
+    shape = (2 * half[0] + 1, 2 * half[1] + 1)
+    own = Plane((0.0, 0.0, 0.0), (1.0, 0.0, 0.0), (0.0, 1.0, 0.0), plane.pixel_mm, shape)
+    weights = disc_overlap(own, own.middle_mm, _DISC_MM)
+    normal: Floats = weights / weights.sum()
+    return normal
+
+
+def _convolve(image: Floats, kernel: Floats) -> Floats:
+    """Weighted mean about every pixel, by way of the Fourier transform; the border wraps and is not to be used."""
+    shape = tuple(_fast(n + k) for n, k in zip(image.shape, kernel.shape, strict=True))
+    middle = image.mean()
+    spectrum = np.fft.rfft2(image - middle, shape) * np.fft.rfft2(kernel, shape)
+    top, left = (k // 2 for k in kernel.shape)
+    full = np.fft.irfft2(spectrum, shape)
+    part: Floats = full[top : top + image.shape[0], left : left + image.shape[1]] + middle
+    return part
+
+
+def _fast(count: int) -> int:
+    """Return the next multiple of 16, a length that transforms fast."""
+    return -(-count // 16) * 16
+
+
+@lru_cache(maxsize=8)
+def _unit_noise(step_in_discs: float) -> NDArray[np.float32]:
+    """Disc means of white noise, unit standard deviation, shape (8 x 16 draws, points), on a grid about M's centre.
+
+    Drawn once with a fixed seed. Every draw appears in all eight turns and mirror images, so that no direction is
+    preferred: an image and its mirror image are given the same figure.
+    """
+    half = math.ceil(1 / step_in_discs + 0.5)
+    plane = Plane((0.0, 0.0, 0.0), (1.0, 0.0, 0.0), (0.0, 1.0, 0.0), (1.0, 1.0), (2 * half + 1, 2 * half + 1))
+    disc = disc_overlap(plane, plane.middle_mm, 1 / step_in_discs)
+    white = np.random.default_rng(20_061_123).standard_normal((_DRAWS, _WRAP, _WRAP))
+    wrapped = np.zeros((_WRAP, _WRAP))
+    wrapped[: 2 * half + 1, : 2 * half + 1] = disc
+    spectrum = np.fft.rfft2(white) * np.fft.rfft2(np.roll(wrapped, (-half, -half), axis=(0, 1)))
+    fields = np.fft.irfft2(spectrum, (_WRAP, _WRAP))[:, :_GRID, :_GRID] / math.sqrt(float((disc**2).sum()))
+    turned = [np.rot90(f, k, axes=(1, 2)) for f in (fields, fields[:, :, ::-1]) for k in range(4)]
+    allowed = _within_unit_disc()
+    every: NDArray[np.float32] = np.concatenate(turned)[:, allowed].astype(np.float32)
+    every.setflags(write=False)
+    return every
+
+
+def _within_unit_disc() -> NDArray[np.bool_]:
+    """Tell which points of the resampling grid, (91, 91), lie within its inscribed circle."""
+    at = np.linspace(-1, 1, _GRID)
+    return at[None, :] ** 2 + at[:, None] ** 2 <= 1 + 1e-9
+
+
+def _resampled(surface: Floats, radius_mm: float, reach_mm: float, spread: float) -> tuple[float, float]:
+    """Return what noise of the discs' means adds to the integral uniformity on average, and the scatter it causes."""
+    at = np.linspace(-reach_mm, reach_mm, _GRID)
+    smooth = evaluate(surface, at / radius_mm, at / radius_mm)[_within_unit_disc()]
+    middle = float(smooth.mean())
+    relative = (smooth / middle).astype(np.float32)
+    true = _piu(relative[None, :])[0]
+    unit = _unit_noise(round((at[1] - at[0]) / _DISC_MM, 6))
+    drawn = _piu(relative + np.float32(spread / middle) * unit)
+    return float(drawn.mean(dtype=np.float64) - true), float(drawn.std(dtype=np.float64))
+
+
+def _piu(means: NDArray[np.float32]) -> Floats:
+    high, low = (v.astype(np.float64) for v in (means.max(axis=1), means.min(axis=1)))
+    value: Floats = 100 * (1 - (high - low) / (high + low))
+    return value
+
+
+def _deviation(image: Floats, field: Field, noise: Noise, surface: Floats) -> Measurement | NotMeasured:
+    from scipy.special import erf
+
+    smooth = _low_pass(image)
+    weights = field.weights
+    total = float(weights.sum())
+    middle = float((smooth * weights).sum()) / total
+    if not middle > 0:
+        return NotMeasured("uniformity_naad", "there is no signal in the measurement region")
+    raw = float((np.abs(smooth - middle) * weights).sum()) / total
+    fitted = evaluate(surface, *field.grid)
+    away = fitted - float((fitted * weights).sum()) / total
+    spread = noise.sigma * math.sqrt(
+        math.prod(_passed(axis) for axis in (noise.correlation.along_x, noise.correlation.along_y))
+    )
+    added, variance = 0.0, 0.0
+    if spread > 0:
+        scaled = away / spread
+        folded = spread * math.sqrt(2 / math.pi) * np.exp(-0.5 * scaled**2) + away * erf(scaled / math.sqrt(2))
+        added = float(((folded - np.abs(away)) * weights).sum()) / total
+        variance = float(((away**2 + spread**2 - folded**2) * weights).sum()) / total / spread**2
+    u_mean = noise.sigma * math.sqrt(noise.correlation.mean_factor * variance / total)
+    u_added = added / math.sqrt(2 * noise.freedom)
+    whole = float((np.abs(smooth - middle) * (weights > 0.5)).sum()) / float((weights > 0.5).sum())
+    u_border = abs(whole - raw) / math.sqrt(3)
+    details = {"uncorrected": 100 * (1 - raw / middle), "noise_correction": 100 * added / middle, "mean": middle}
+    return figure(
+        "uniformity_naad",
+        100 * (1 - (raw - added) / middle),
+        100 * math.hypot(u_mean, u_added, u_border) / middle,
+        _NAAD,
+        slice_index=field.slice_index,
+        details=details,
+        regions=(field.region,),
+    )
+
+
+def _low_pass(image: Floats) -> Floats:
+    """Filter with (1 2 1, 2 4 2, 1 2 1) / 16; the outermost pixels are left alone."""
+    out = image.copy()
+    out[1:-1] = (image[:-2] + 2 * image[1:-1] + image[2:]) / 4
+    out[:, 1:-1] = (out[:, :-2] + 2 * out[:, 1:-1] + out[:, 2:]) / 4
+    return out
+
+
+def _passed(lags: tuple[float, ...]) -> float:
+    """Share of the variance that the filter passes along one axis."""
+    return max(0.0, 0.375 + 0.5 * lags[1] + 0.125 * lags[2])
