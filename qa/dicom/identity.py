@@ -28,6 +28,35 @@ _MR_IMAGES = frozenset(
     }
 )
 _SPECTRA = "1.2.840.10008.5.1.4.1.1.4.2"
+# Named in a reason; whatever else stands in Modality is not repeated.
+_OTHER_MODALITIES = frozenset(
+    [
+        "CR",
+        "CT",
+        "DX",
+        "ES",
+        "KO",
+        "MG",
+        "MS",
+        "NM",
+        "OP",
+        "OT",
+        "PR",
+        "PT",
+        "PX",
+        "REG",
+        "RF",
+        "RTDOSE",
+        "RTIMAGE",
+        "RTPLAN",
+        "RTSTRUCT",
+        "SC",
+        "SEG",
+        "SR",
+        "US",
+        "XA",
+    ]
+)
 _OTHER_OBJECTS = {
     "1.2.840.10008.5.1.4.1.1.2": "a CT image",
     "1.2.840.10008.5.1.4.1.1.2.1": "a CT image",
@@ -122,8 +151,8 @@ def refuse_people(header: Header) -> str | None:
 def unmeasurable(header: Header) -> str | None:
     """Say why a file is not an MR image, or None where it is one."""
     if header.modality not in {"MR", ""}:
-        known = header.modality.isalnum() and header.modality.isupper() and len(header.modality) <= 16
-        return f"Modality is {header.modality if known else 'not MR'}: only MR images are measured"
+        named = header.modality if header.modality in _OTHER_MODALITIES else "not MR"
+        return f"Modality is {named}: only MR images are measured"
     if header.sop_class_uid == _SPECTRA:
         return "it holds MR spectra: only MR images are measured"
     if header.sop_class_uid in _MR_IMAGES:

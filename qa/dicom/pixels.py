@@ -6,8 +6,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from qa.dicom.codestream import size_of
 from qa.dicom.elements import Elements, File
+from qa.dicom.isolated import IsolatedDecoder
 from qa.dicom.refusal import RefusalError
+from qa.errors import EvenfieldError
 
 __all__ = ["Layout", "Scaling", "Stored", "decode", "layout_of", "scale_into", "scaling_of"]
 
@@ -17,6 +20,7 @@ _NATIVE = frozenset(
 )
 _RUN_LENGTH = "1.2.840.10008.1.2.5"
 _BIG_ENDIAN = "1.2.840.10008.1.2.2"
+_JPEG_LS = frozenset({"1.2.840.10008.1.2.4.80", "1.2.840.10008.1.2.4.81"})
 _COLOURS = ("RGB", "YBR", "PALETTE", "HSV", "ARGB", "CMYK", "XYB", "ICT", "RCT")
 _MOST_ON_A_SIDE = 8192
 _MOST_PIXELS = 2**28
@@ -152,7 +156,7 @@ def scaling_of(get: Elements, layout: Layout) -> Scaling:
     return Scaling(slope, intercept, turned_about, layout.padding)
 
 
-def decode(file: File, layout: Layout) -> Stored:
+def decode(file: File, layout: Layout, isolated: IsolatedDecoder) -> Stored:
     """Decode stored values, (F, R, C), unused bits taken out and the sign carried up.
 
     Raises
@@ -169,7 +173,7 @@ def decode(file: File, layout: Layout) -> Stored:
         raise RefusalError("its floating-point pixel data are compressed, which the standard does not allow")
     # A codestream holds the value itself, whatever bit it had in the uncompressed image; run lengths hold the bytes unchanged.
     high_bit = layout.high_bit if file.transfer_syntax == _RUN_LENGTH else layout.stored - 1
-    return _clean_bits(_compressed(file, layout), layout, high_bit)
+    return _clean_bits(_compressed(file, layout, isolated), layout, high_bit)
 
 
 def scale_into(out: NDArray[np.float32], stored: Stored, scaling: Scaling) -> None:
@@ -203,24 +207,62 @@ def _native(file: File, layout: Layout) -> Stored:
     return values.reshape(layout.frames, layout.rows, layout.columns)
 
 
-def _compressed(file: File, layout: Layout) -> Stored:
+def _compressed(file: File, layout: Layout, isolated: IsolatedDecoder) -> Stored:
+    """Decode compressed pixel data with the one plug-in chosen for the transfer syntax, others than run lengths in isolation.
+
+    Plug-ins that happen to be installed besides are not tried, so that the same file gives the same pixels everywhere.
+    """
+    from pydicom.encaps import generate_frames
     from pydicom.pixels.decoders.base import get_decoder
     from pydicom.uid import UID
 
+    syntax, content = file.transfer_syntax, file.elements.bytes_of(_PIXEL_DATA)
     try:
-        decoder = get_decoder(UID(file.transfer_syntax))
+        decoder = get_decoder(UID(syntax))
     except Exception:  # noqa: BLE001 (pydicom raises whatever an unknown or malformed UID leads it to)
         raise RefusalError("its transfer syntax is not one that can be decoded") from None
+    options: dict[str, int | str] = {
+        "rows": layout.rows,
+        "columns": layout.columns,
+        "number_of_frames": layout.frames,
+        "samples_per_pixel": 1,
+        "photometric_interpretation": "MONOCHROME2",
+        "bits_allocated": layout.allocated,
+        "bits_stored": layout.stored,
+        "pixel_representation": int(layout.is_signed),
+        "pixel_keyword": "PixelData",
+    }
     try:
-        values, _ = decoder.as_array(file.dataset, raw=True, validate=True)
-    except Exception:  # noqa: BLE001 (each decoder plug-in raises what it likes)
-        raise RefusalError(
-            f"its pixel data cannot be decoded ({UID(file.transfer_syntax).name}): damaged or cut short"
-        ) from None
+        if syntax == _RUN_LENGTH:
+            # pydicom's own, in Python: it needs no isolation, as the faster one of pylibjpeg does.
+            values, _ = decoder.as_array(content, raw=True, decoding_plugin="pydicom", **_loosely(options))
+        else:
+            for frame in generate_frames(content, number_of_frames=layout.frames):
+                _check_size(frame, layout)
+            plugin = "pyjpegls" if syntax in _JPEG_LS else "pylibjpeg"
+            values = isolated.decode(content, {**options, "transfer_syntax": syntax, "plugin": plugin})
+    except (RefusalError, EvenfieldError):
+        raise
+    except Exception:  # noqa: BLE001 (pydicom raises whatever damaged encapsulation leads it to)
+        raise RefusalError(f"its pixel data cannot be decoded ({decoder.UID.name}): damaged or cut short") from None
     if values.size != layout.size:
         raise RefusalError("its pixel data do not hold as many pixels as the header says")
     decoded: Stored = values.reshape(layout.frames, layout.rows, layout.columns)
     return decoded
+
+
+def _loosely(options: dict[str, int | str]) -> dict[str, Any]:
+    return dict(options)
+
+
+def _check_size(frame: bytes, layout: Layout) -> None:
+    size = size_of(frame)
+    if size is None:
+        raise RefusalError("its compressed pixel data are damaged: they do not say what size they are")
+    if size[2] != 1:
+        raise RefusalError("its compressed pixel data are in colour: only grey images are measured")
+    if size[:2] != (layout.rows, layout.columns):
+        raise RefusalError("its compressed pixel data are of another size than the header says")
 
 
 def _clean_bits(values: Stored, layout: Layout, high_bit: int) -> Stored:

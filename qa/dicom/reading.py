@@ -4,6 +4,7 @@ import hashlib
 from collections import defaultdict
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
 
 from qa.dicom.elements import parse, quietly
@@ -13,6 +14,7 @@ from qa.dicom.group import group
 from qa.dicom.header import header_of
 from qa.dicom.identity import Header, refuse_people, unmeasurable
 from qa.dicom.images import Decode, frames_of
+from qa.dicom.isolated import IsolatedDecoder
 from qa.dicom.pixels import decode
 from qa.dicom.refusal import RefusalError
 from qa.dicom.stack import stack
@@ -34,16 +36,17 @@ def read_files(
     paths: Path | str | Iterable[Path | str],
     admit: Admit | None = None,
     progress: Callable[[int, int], None] | None = None,
-    decode_pixels: Decode = decode,
+    decode_pixels: Decode | None = None,
 ) -> Reading:
     """Do what `qa.dicom.read` promises; `decode_pixels` turns a parsed file into stored values."""
     files = find(paths)
     taken: list[_Taken] = []
     refused: list[Refused] = []
     lost: dict[str, list[Refused]] = defaultdict(list)
-    with quietly():
+    with quietly(), IsolatedDecoder() as isolated:
+        decode_one = decode_pixels or partial(decode, isolated=isolated)
         for count, file in enumerate(files, start=1):
-            outcome, series_uid = _read_one(file, admit or refuse_people, decode_pixels)
+            outcome, series_uid = _read_one(file, admit or refuse_people, decode_one)
             if isinstance(outcome, _Taken):
                 taken.append(outcome)
             elif outcome is not None:
