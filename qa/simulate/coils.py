@@ -10,6 +10,7 @@ from qa.simulate.setup import Setup
 
 __all__ = ["channel_share", "noise_mixing", "shading"]
 
+_CONDUCTOR_MM = 25.0
 Complexes = NDArray[np.complex128]
 
 
@@ -72,7 +73,7 @@ def _coefficients(contrast: float, share: float) -> tuple[float, float]:
 def channel_share(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) -> Complexes:
     """Tell each channel's complex share of the combined sensitivity, (N, ...), with squares that sum to 1 in health.
 
-    "loops": the field of N long rectangular loops evenly round the phantom, by Biot and Savart for their two long wires;
+    "loops": the field of N long rectangular loops evenly round the phantom, by Biot and Savart for their two long sides;
     "polynomial": smooth first-order maps with evenly turned directions. A failing channel's gain is applied here.
     """
     x, y = _scanner_place(setup, plane, x_mm, y_mm)
@@ -88,7 +89,7 @@ def channel_share(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) 
         if setup.coil == "loops":
             far, half = 1.35 * size + 25.0, min(0.45 * 2 * math.pi / n, 0.6)
             one, other = (far * np.exp(1j * (angle + side * half)) for side in (-1, 1))
-            field = 1 / (place - one) - 1 / (place - other)
+            field = _wire(place - one) - _wire(place - other)
         else:
             turned = place * np.exp(-1j * angle) / size
             field = (1.5 + turned.real + 0.3j * turned.imag) * np.exp(1j * angle)
@@ -96,6 +97,11 @@ def channel_share(setup: Setup, plane: Plane, x_mm: ArrayLike, y_mm: ArrayLike) 
     stack = np.stack(maps)
     stack /= np.sqrt(np.sum(stack.real**2 + stack.imag**2, axis=0))
     return np.asarray(stack * np.asarray(gains).reshape(-1, *(1,) * place.ndim))
+
+
+def _wire(away: Complexes) -> Complexes:
+    """Field of a long wire, levelled off inside the conductor's breadth."""
+    return np.asarray(away.conj() / (away.real**2 + away.imag**2 + _CONDUCTOR_MM**2))
 
 
 def noise_mixing(setup: Setup) -> Floats:

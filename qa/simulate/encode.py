@@ -5,6 +5,7 @@ it ghosts; complex Gaussian noise in every channel.
 """
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +18,8 @@ from qa.simulate.setup import Setup
 from qa.simulate.warp import jacobian
 
 __all__ = ["Scan", "acquired_window", "ghost_modulation", "object_kspace"]
+
+_SEAM_PIXELS = 4
 
 
 def object_kspace(fine: Floats, grid: FineGrid, count: tuple[int, int]) -> Complexes:
@@ -89,6 +92,42 @@ def _squeeze(setup: Setup, plane: Plane, x_mm: Floats, y_mm: Floats) -> Floats:
     return np.asarray(stretch[0, 0] * stretch[1, 1] - stretch[0, 1] * stretch[1, 0])
 
 
+def _without_seam(sensed: Callable[[Floats, Floats], Complexes], plane: Plane, x: Floats, y: Floats) -> Complexes:
+    """Evaluate a sensitivity so that it is smooth over the field of view's edge, where the transform joins its two ends.
+
+    Within a few pixels of the edge, where no object lies, what is sensed on this side passes smoothly into what is sensed on
+    the other; a jump would scatter the object's ringing over the whole image.
+    """
+    (wide, high), (dy, dx) = plane.size_mm, plane.pixel_mm
+    x_on, x_share = _past_seam(x, wide, dx)
+    y_on, y_share = _past_seam(y, high, dy)
+
+    def across(y_mm: Floats) -> Complexes:
+        whole = sensed(np.where(x_share == 1, x_on - wide, x_on), y_mm)
+        strip = ((x_share > 0) & (x_share < 1))[0]
+        share = x_share[:, strip]
+        whole[..., strip] = (1 - share) * sensed(x_on[:, strip], y_mm) + share * sensed(x_on[:, strip] - wide, y_mm)
+        return whole
+
+    whole = across(np.where(y_share == 1, y_on - high, y_on))
+    strip = ((y_share > 0) & (y_share < 1))[:, 0]
+    share = y_share[strip]
+    whole[..., strip, :] = (1 - share) * across(y_on[strip]) + share * across(y_on[strip] - high)
+    return whole
+
+
+def _past_seam(at: Floats, size: float, step: float) -> tuple[Floats, Floats]:
+    """Count places from before the seam on, and tell how far they have passed it, 0 to 1.
+
+    The seam lies half a pixel beyond the last pixel's centre; places just after it are the image's first.
+    """
+    seam = size - step / 2
+    half = _SEAM_PIXELS * step
+    onward: Floats = np.where(at < seam - size + half, at + size, at)
+    t = np.clip((onward - seam) / (2 * half) + 0.5, 0.0, 1.0)
+    return onward, np.asarray(t * t * (3 - 2 * t))
+
+
 class Scan:
     """One acquisition on the scanner: noise-free images once for slices that look the same, noise for every image.
 
@@ -133,12 +172,13 @@ class Scan:
 
     def _sensitivity(self, plane: Plane, x: Floats, y: Floats) -> Complexes:
         if self._sensed is None:
-            # Places beyond the last pixel stand, by the transform's period, for those before the first.
-            wide, high = plane.size_mm
-            x = np.where(x > wide - plane.pixel_mm[1] / 2, x - wide, x)
-            y = np.where(y > high - plane.pixel_mm[0] / 2, y - high, y)
-            bright = self._scale * shading(self.setup, plane, x, y)
-            self._sensed = channel_share(self.setup, plane, x, y) * (bright * _squeeze(self.setup, plane, x, y))
+            setup = self.setup
+
+            def sensed(x_mm: Floats, y_mm: Floats) -> Complexes:
+                bright = self._scale * shading(setup, plane, x_mm, y_mm) * _squeeze(setup, plane, x_mm, y_mm)
+                return channel_share(setup, plane, x_mm, y_mm) * bright
+
+            self._sensed = _without_seam(sensed, plane, x, y)
         return self._sensed
 
     def clean(self, slice_index: int, repeat: int = 0) -> Complexes:
