@@ -13,7 +13,7 @@ from qa.report.style import INK, letters, mm_axes, new_figure, to_svg
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-__all__ = ["DrawnPicture", "KeyEntry", "draw_picture"]
+__all__ = ["DrawnPicture", "KeyEntry", "draw_picture", "grey_window"]
 
 _SCALE_BARS_MM = (1, 2, 5, 10, 20, 50, 100, 200)
 _SCALE_STRIP_MM = 4.5
@@ -42,8 +42,8 @@ class DrawnPicture:
     grey_scale: str
 
 
-def _window(picture: Picture) -> tuple[float, float]:
-    """Pixel values shown as black and white: from zero (or the least value below it) to the 99.8th percentile."""
+def grey_window(picture: Picture) -> tuple[float, float]:
+    """Choose the pixel values shown as black and white: from zero (or the least value) to the 99.8th percentile."""
     finite = picture.pixels[np.isfinite(picture.pixels)]
     if not finite.size:
         return 0.0, 1.0
@@ -108,7 +108,9 @@ def _draw_scale_bar(figure: "Figure", width_mm: float, paper_mm_per_mm: float) -
     axes.text(paper + 1.2, 2.3, f"{length}{THIN_SPACE}mm", color=INK, ha="left", va="center", fontproperties=letters())
 
 
-def draw_picture(picture: Picture, largest_width_mm: float, largest_height_mm: float) -> DrawnPicture:
+def draw_picture(
+    picture: Picture, largest_width_mm: float, largest_height_mm: float, window: tuple[float, float] | None = None
+) -> DrawnPicture:
     """Draw an image in grey, with true proportions whatever its pixels, with regions, their numbers and a scale bar.
 
     Parameters
@@ -117,6 +119,8 @@ def draw_picture(picture: Picture, largest_width_mm: float, largest_height_mm: f
         Image and regions.
     largest_width_mm, largest_height_mm : float
         Space on paper; the image fills one of them.
+    window : tuple of float, optional
+        Pixel values shown as black and as white; `grey_window` otherwise.
 
     Returns
     -------
@@ -134,7 +138,7 @@ def draw_picture(picture: Picture, largest_width_mm: float, largest_height_mm: f
     figure = new_figure(paper_width, paper_height + _SCALE_STRIP_MM)
     axes = mm_axes(figure, 0, _SCALE_STRIP_MM, paper_width, paper_height)
     axes.set_axis_off()
-    low, high = _window(picture)
+    low, high = window or grey_window(picture)
     shown = np.nan_to_num(np.clip((picture.pixels - low) / (high - low), 0, 1), nan=0.0)
     axes.imshow(
         np.round(shown * 255).astype(np.uint8), cmap="gray", vmin=0, vmax=255, interpolation="none",

@@ -2,11 +2,13 @@
 
 import re
 import warnings
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from datetime import date, datetime, time
 from functools import lru_cache
 from typing import TYPE_CHECKING
 
 from qa.errors import FaultError
+from qa.report.data import AttachedFile
 from qa.resources import shipped_folder
 
 if TYPE_CHECKING:
@@ -14,6 +16,8 @@ if TYPE_CHECKING:
 
 __all__ = ["fill_template", "to_pdf"]
 
+
+_UNDATED = date(1970, 1, 1)
 
 # Characters that no page can hold or that turn the text around them: controls but tab and line ends, surrogates, direction
 # overrides and isolates, non-characters.
@@ -47,7 +51,15 @@ def fill_template(name: str, **content: object) -> str:
     return _environment().get_template(name).render(**content)
 
 
-def to_pdf(html: str, figures: Mapping[str, bytes], identifier: bytes, page_css: str) -> bytes:
+def to_pdf(
+    html: str,
+    figures: Mapping[str, bytes],
+    identifier: bytes,
+    page_css: str,
+    *,
+    attached: Sequence[AttachedFile] = (),
+    as_of: date = _UNDATED,
+) -> bytes:
     """Lay HTML out as an archival PDF (PDF/A-3a: tagged, fonts embedded).
 
     Parameters
@@ -60,6 +72,10 @@ def to_pdf(html: str, figures: Mapping[str, bytes], identifier: bytes, page_css:
         What the file identifier is made from; the same page with the same identifier gives the same bytes.
     page_css : str
         Rules of this paper size, added to the page's own.
+    attached : sequence of AttachedFile
+        Data files that travel inside.
+    as_of : date
+        The day they are dated with.
 
     Returns
     -------
@@ -72,7 +88,7 @@ def to_pdf(html: str, figures: Mapping[str, bytes], identifier: bytes, page_css:
         A part of the report is missing from this installation, or WeasyPrint's own libraries are.
     """
     try:
-        from weasyprint import CSS, HTML
+        from weasyprint import CSS, HTML, Attachment
         from weasyprint.text.fonts import FontConfiguration
         from weasyprint.urls import FatalURLFetchingError
     except OSError as error:
@@ -86,11 +102,21 @@ def to_pdf(html: str, figures: Mapping[str, bytes], identifier: bytes, page_css:
     fetcher = OwnFiles(shipped_folder("templates"), figures)
     sheet = CSS(string=page_css, font_config=fonts, url_fetcher=fetcher)
     document = HTML(string=html, base_url=f"{TEMPLATE_SCHEME}:/", url_fetcher=fetcher)
+    midnight = datetime.combine(as_of, time())
+    files = [
+        Attachment(
+            string=file.content, name=file.name, description=file.description, relationship="Data", created=midnight,
+            modified=midnight, url_fetcher=fetcher,
+        )
+        for file in attached
+    ]  # fmt: skip
     try:
         with warnings.catch_warnings():
             # WeasyPrint leaves closing its colour profile's file to the garbage collector.
             warnings.simplefilter("ignore", ResourceWarning)
-            pdf = document.write_pdf(stylesheets=[sheet], font_config=fonts, pdf_variant="pdf/a-3a", pdf_identifier=identifier)
+            pdf = document.write_pdf(
+                stylesheets=[sheet], attachments=files, font_config=fonts, pdf_variant="pdf/a-3a", pdf_identifier=identifier
+            )
     except FatalURLFetchingError as error:
         raise FaultError(f"The report is not complete ({error}): install this copy of evenfield again.") from error
     if not isinstance(pdf, bytes):

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from matplotlib.font_manager import FontProperties
 
 __all__ = [
+    "BAND",
     "DATA",
     "FAINT",
     "FONT_FAMILY",
@@ -35,7 +36,8 @@ __all__ = [
 INK = "#15191e"
 GREY = "#5b6470"
 FAINT = "#c3c9d1"
-MISSED = "#e9ecf0"
+MISSED = "#e6e9ed"
+BAND = "#dbe7f0"
 DATA = "#17466b"
 LIMIT = "#a3231b"
 TEXT_SIZE = 7.0

@@ -1,35 +1,51 @@
-"""The trend chart: one quantity of one scanner over time, against its limits."""
+"""The trend chart: one quantity of one scanner over time, against its limits and its own history."""
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import date, datetime, timedelta
-from typing import TYPE_CHECKING, Any, Literal
+from datetime import date, datetime
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from qa.geometry import Floats
-from qa.report.numbers import MINUS, long_date, plain_number, short_date, typeset_unit, with_unit
-from qa.report.style import DATA, FAINT, GREY, HAIRLINE, INK, LIMIT, MISSED, TEXT_SIZE, letters, mm_axes, new_figure, to_svg
+from qa.report.marks import MARKS, Mark, add_marks, add_rings, add_segments
+from qa.report.numbers import MINUS, plain_number, typeset_unit, with_unit
+from qa.report.style import (
+    BAND,
+    DATA,
+    FAINT,
+    GREY,
+    HAIRLINE,
+    INK,
+    LIMIT,
+    MISSED,
+    TEXT_SIZE,
+    letters,
+    mm_axes,
+    new_figure,
+    to_svg,
+)
+from qa.report.timeline import days, time_ticks
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
-__all__ = ["MARKS", "Mark", "TrendChart", "TrendPoint", "draw_trend"]
+__all__ = ["BaselineSpan", "EventMark", "ForecastLine", "TrendChart", "TrendPoint", "draw_trend", "marks_present"]
 
-Mark = Literal["pass", "conditional pass", "conditional fail", "fail", "no limit"]
-MARKS: tuple[Mark, ...] = ("pass", "conditional pass", "conditional fail", "fail", "no limit")
-
-_HEIGHT_MM = 33.5
-_LEFT_MM, _RIGHT_MM, _BOTTOM_MM, _TOP_MM = 18.0, 25.0, 7.0, 1.5
+_PLOT_MM = 25.0
+_LEFT_MM, _RIGHT_MM, _BOTTOM_MM, _TOP_MM, _FLAGS_MM = 18.0, 25.0, 4.8, 1.2, 3.2
 _ZOOM_BELOW = 1 / 8
 _LEAST_DAYS = 14
-_EPOCH = date(1970, 1, 1)
+_LABEL_LINE_MM = 2.6
+_FUTURE_SHARE = 0.3
 
 
 @dataclass(frozen=True)
 class TrendPoint:
-    """One measured value: when, how much, its expanded uncertainty, and the limits it was held against (None: open)."""
+    """One measured value: when, how much, its expanded uncertainty, and what it was held against (None: nothing).
+
+    `lower` and `upper` are the limits, `control_lower` and `control_upper` the control limits; `tripped` tells that a rule of
+    the control chart tripped.
+    """
 
     at: datetime
     value: float
@@ -37,11 +53,49 @@ class TrendPoint:
     mark: Mark
     lower: float | None = None
     upper: float | None = None
+    control_lower: float | None = None
+    control_upper: float | None = None
+    tripped: bool = False
+
+
+@dataclass(frozen=True)
+class BaselineSpan:
+    """A baseline over the time in which it holds; `half_width` is the half of its band, zero for none; `words` its value."""
+
+    first_day: date
+    last_day: date
+    value: float
+    half_width: float
+    words: str
+
+
+@dataclass(frozen=True)
+class EventMark:
+    """A service event: its letter in the list of events, and its day."""
+
+    letter: str
+    day: date
+
+
+@dataclass(frozen=True)
+class ForecastLine:
+    """A straight course to a limit, and the days between which it is crossed (None: open)."""
+
+    from_day: date
+    from_value: float
+    crosses_on: date
+    at_limit: float
+    earliest: date | None
+    latest: date | None
 
 
 @dataclass(frozen=True)
 class TrendChart:
-    """All that one chart shows, in order of time; `missing` are the days on which a session was due and not made."""
+    """All that one chart shows, in order of time.
+
+    `missing` are the days on which a session was due and not made; `changes` are change-points as earliest, likeliest and
+    latest day.
+    """
 
     label: str
     unit: str
@@ -51,61 +105,15 @@ class TrendChart:
     missing: tuple[date, ...] = ()
     every_days: int = 7
     grace_days: int = 2
+    baselines: tuple[BaselineSpan, ...] = ()
+    events: tuple[EventMark, ...] = ()
+    changes: tuple[tuple[date, date, date], ...] = ()
+    forecast: ForecastLine | None = None
 
-
-def _days(when: date | datetime) -> float:
-    """Days since 1970, with the fraction of the day."""
-    if isinstance(when, datetime):
-        return (when.date() - _EPOCH).days + (when.hour + when.minute / 60 + when.second / 3600) / 24
-    return float((when - _EPOCH).days)
-
-
-_DIAMOND = np.array([(0, 1), (1, 0), (0, -1), (-1, 0), (0, 1)], dtype=np.float64)
-_OCTAGON = np.array([(math.cos(turn), math.sin(turn)) for turn in np.linspace(0, 2 * math.pi, 17)])
-
-
-def _add_marks(axes: "Axes", x: Floats, y: Floats, mark: Mark, scale: float) -> None:
-    """Draw all marks of a kind as one path: a page of many points stays light.
-
-    The two common marks are ends of lines without length, a dot by a round cap and a square by a square one; the rarer ones
-    are outlines.
-    """
-    from matplotlib.patches import PathPatch
-    from matplotlib.path import Path as MarkPath
-    from matplotlib.transforms import IdentityTransform
-
-    centres = axes.transData.transform(np.column_stack([x, y]))
-    ink = LIMIT if mark in {"fail", "conditional fail"} else DATA
-    if mark in {"pass", "no limit"}:
-        _segments(
-            axes, centres, centres + np.array([0.01, 0.0]), transform=IdentityTransform(), edgecolor=ink, zorder=4,
-            linewidth=scale * (2.7 if mark == "pass" else 2.2), capstyle="round" if mark == "pass" else "projecting",
-        )  # fmt: skip
-        return
-    outline, radius = (_OCTAGON, 1.75) if mark == "conditional pass" else (_DIAMOND, 3.0 if mark == "fail" else 2.7)
-    vertices = (centres[:, None] + radius * scale * outline).reshape(-1, 2)
-    codes = np.tile([MarkPath.MOVETO, *[MarkPath.LINETO] * (len(outline) - 2), MarkPath.CLOSEPOLY], len(centres))
-    axes.add_artist(
-        PathPatch(
-            MarkPath(vertices, codes),
-            transform=IdentityTransform(),
-            facecolor=ink if mark == "fail" else "white",
-            edgecolor=ink,
-            linewidth=0.0 if mark == "fail" else 0.8,
-            zorder=4 if mark == "conditional pass" else 5,
-        )
-    )
-
-
-def _segments(axes: "Axes", starts: Floats, ends: Floats, **options: Any) -> None:  # noqa: ANN401 - matplotlib's own
-    """Draw separate lines as one path, in data coordinates."""
-    from matplotlib.patches import PathPatch
-    from matplotlib.path import Path as MarkPath
-
-    vertices = np.stack([starts, ends], axis=1).reshape(-1, 2)
-    codes = np.tile([MarkPath.MOVETO, MarkPath.LINETO], len(starts))
-    # An artist, not a patch: the axes' limits are set already and need no look at every point.
-    axes.add_artist(PathPatch(MarkPath(vertices, codes), fill=False, **options))
+    @property
+    def height_mm(self) -> float:
+        """Height on paper."""
+        return _PLOT_MM + _BOTTOM_MM + _TOP_MM + (_FLAGS_MM if self.events else 0.0)
 
 
 def _value_range(chart: TrendChart) -> tuple[float, float]:
@@ -114,105 +122,105 @@ def _value_range(chart: TrendChart) -> tuple[float, float]:
     The limits are part of it, unless the points would then shrink to less than an eighth of the height: a drift would be
     lost to the eye, so the axis goes by the points alone and the limit is named at its edge.
     """
-    low = min(p.value - p.expanded for p in chart.points)
-    high = max(p.value + p.expanded for p in chart.points)
+    seen = [v for p in chart.points for v in (p.value - p.expanded, p.value + p.expanded)]
+    seen += [v for p in chart.points for v in (p.control_lower, p.control_upper) if v is not None]
+    if chart.forecast is not None:
+        seen.append(chart.forecast.at_limit)
+    low, high = min(seen), max(seen)
     limits = [v for p in chart.points for v in (p.lower, p.upper) if v is not None]
+    if not limits:
+        span = (high - low) or max(abs(high) * 1e-6, 1e-12)
+        return low - 0.35 * span, high + 0.35 * span
     whole_low, whole_high = min([low, *limits]), max([high, *limits])
-    span = high - low
-    if span <= 0:
-        span = max(abs(high) * 1e-6, 1e-12) if not limits else 0.0
-    if limits and span < _ZOOM_BELOW * (whole_high - whole_low):
+    if high - low < _ZOOM_BELOW * (whole_high - whole_low):
         # What the limits allow sets the least that is shown, so that a steady quantity looks steady.
-        pad = max(0.5 * span, 0.02 * (whole_high - whole_low))
+        pad = max(0.5 * (high - low), 0.02 * (whole_high - whole_low))
         return low - pad, high + pad
-    if limits:
-        low, high, span = whole_low, whole_high, whole_high - whole_low
-        if span <= 0:
-            span = max(abs(high) * 1e-3, 1e-9)
-        return low - 0.1 * span, high + 0.1 * span
-    return low - 0.35 * span, high + 0.35 * span
+    span = (whole_high - whole_low) or max(abs(whole_high) * 1e-3, 1e-9)
+    return whole_low - 0.1 * span, whole_high + 0.1 * span
 
 
-def _runs(chart: TrendChart, side: Literal["lower", "upper"]) -> list[tuple[float, float, float]]:
-    """Stretches of time over which one limit held: from, to (days) and the limit."""
+def _runs(chart: TrendChart, limits: Sequence[float | None]) -> list[tuple[float, float, float]]:
+    """Stretches of time over which one limit held: from, to (days) and the limit; the first reaches back to the start."""
     runs: list[tuple[float, float, float]] = []
-    start, current = _days(chart.first_day), None
-    for point in chart.points:
-        limit = point.lower if side == "lower" else point.upper
-        if limit != current:
-            at = _days(point.at)
-            if current is not None:
-                runs.append((start, at, current))
-                start = at
-            elif runs:
-                start = at
-            current = limit
+    start, current = days(chart.first_day), None
+    for point, limit in zip(chart.points, limits, strict=True):
+        if limit == current:
+            continue
+        at = days(point.at)
+        if current is not None:
+            runs.append((start, at, current))
+        if current is not None or runs:
+            start = at
+        current = limit
     if current is not None:
-        runs.append((start, _days(chart.last_day) + 1, current))
+        runs.append((start, days(chart.last_day) + 1, current))
     return runs
 
 
-def _draw_limits(axes: "Axes", chart: TrendChart) -> None:
-    """Lines where the limits lay, each named in the right margin; one off the scale is named at the edge it lies beyond."""
+@dataclass
+class _Label:
+    height: float
+    text: str
+    ink: str
+
+
+def _draw_limits(axes: "Axes", chart: TrendChart) -> list[_Label]:
+    """Draw lines where the limits lay; return the names of the latest, for the right margin."""
     low, high = (float(v) for v in axes.get_ylim())
-    placed: list[float] = []
-    least_gap = 3.1 / (_HEIGHT_MM - _BOTTOM_MM - _TOP_MM)
-    for words, runs in (("upper limit", _runs(chart, "upper")), ("lower limit", _runs(chart, "lower"))):
+    labels = []
+    for words, limits in (("upper limit", [p.upper for p in chart.points]), ("lower limit", [p.lower for p in chart.points])):
+        runs = _runs(chart, limits)
         for start, end, limit in runs:
             if low <= limit <= high:
                 axes.plot([start, end], [limit, limit], color=LIMIT, linewidth=0.9, dashes=(5, 2.2), zorder=2)
-        if not runs:
-            continue
-        limit = runs[-1][2]
-        beyond = not low <= limit <= high
-        height = min(max((limit - low) / (high - low), 0.10), 0.90)
-        while any(abs(height - other) < 2 * least_gap for other in placed):
-            height -= 0.02
-        placed.append(height)
-        text = f"{words}\n{with_unit(plain_number(limit), chart.unit)}" + (", off scale" if beyond else "")
+        if runs:
+            limit = runs[-1][2]
+            beyond = "" if low <= limit <= high else ", off scale"
+            text = f"{words}\n{with_unit(plain_number(limit), chart.unit)}{beyond}"
+            labels.append(_Label((limit - low) / (high - low), text, LIMIT))
+    return labels
+
+
+def _draw_history(axes: "Axes", chart: TrendChart) -> list[_Label]:
+    """Draw the baseline with its band, and the control limits; return the baseline's name for the right margin."""
+    for span in chart.baselines:
+        start, end = days(span.first_day), days(span.last_day) + 1
+        if span.half_width > 0:
+            axes.fill_between(
+                [start, end], span.value - span.half_width, span.value + span.half_width, color=BAND, linewidth=0, zorder=0.5
+            )
+        axes.plot([start, end], [span.value, span.value], color=GREY, linewidth=0.6, zorder=1.5)
+    x = np.array([days(p.at) for p in chart.points])
+    for side in ("control_lower", "control_upper"):
+        y = np.array([np.nan if (v := getattr(p, side)) is None else v for p in chart.points])
+        known = np.isfinite(y)
+        if known.any():
+            axes.plot(x, y, color=INK, linewidth=0.55, linestyle=(0, (0.9, 1.6)), drawstyle="steps-mid", zorder=1.8)
+    if not chart.baselines:
+        return []
+    low, high = (float(v) for v in axes.get_ylim())
+    value = chart.baselines[-1].value
+    return [_Label((value - low) / (high - low), f"baseline\n{chart.baselines[-1].words}", GREY)]
+
+
+def _name_lines(axes: "Axes", labels: list[_Label]) -> None:
+    """Write names into the right margin, each as near its line as its neighbours allow."""
+    gap = 2.15 * _LABEL_LINE_MM / _PLOT_MM
+    half = _LABEL_LINE_MM / _PLOT_MM
+    labels = sorted(labels, key=lambda label: -label.height)
+    heights = [min(max(label.height, half), 1 - half) for label in labels]
+    for i in range(1, len(heights)):
+        heights[i] = min(heights[i], heights[i - 1] - gap)
+    if heights and heights[-1] < half:
+        heights[-1] = half
+        for i in range(len(heights) - 2, -1, -1):
+            heights[i] = max(heights[i], heights[i + 1] + gap)
+    for label, height in zip(labels, heights, strict=True):
         axes.text(
-            1.012, height, text, transform=axes.transAxes, color=LIMIT, va="center", ha="left",
+            1.012, height, label.text, transform=axes.transAxes, color=label.ink, va="center", ha="left",
             fontproperties=letters(TEXT_SIZE - 0.6), linespacing=1.15, parse_math=False,
         )  # fmt: skip
-
-
-def _time_ticks(first: date, last: date) -> tuple[list[date], list[str], list[date]]:
-    """Days that are named on the time axis, their names, and days that only get a tick."""
-    days = (last - first).days
-    if days <= 100:
-        step = 7 if days <= 56 else 14
-        start = first + timedelta(days=-first.weekday() % 7)
-        named = [start + timedelta(days=n) for n in range(0, max(1, (last - start).days + 1), step)]
-        named = [day for day in named if first <= day <= last] or [first]
-        return (
-            named,
-            [_day_name(day, number == 0 or day.year != named[number - 1].year) for number, day in enumerate(named)],
-            [],
-        )
-    months = [date(year, month, 1) for year in range(first.year, last.year + 1) for month in range(1, 13)]
-    months = [month for month in months if first <= month <= last]
-    if days <= 500:
-        named = months if days <= 430 else months[::2]
-        return named, _month_names(named), []
-    if days <= 3 * 366:
-        named = [month for month in months if month.month in {1, 4, 7, 10}]
-        return named, _month_names(named), months
-    step = max(1, round(days / 365 / 12))
-    named = [month for month in months if month.month == 1 and month.year % step == 0]
-    return named, [str(month.year) for month in named], [month for month in months if month.month in {1, 4, 7, 10}]
-
-
-def _day_name(day: date, with_year: bool) -> str:
-    return long_date(day) if with_year else short_date(day)
-
-
-def _month_names(months: Sequence[date]) -> list[str]:
-    """Name months; the year stands at each January, and at the first month where no January is near."""
-    names = [short_date(month).split()[1] for month in months]
-    for number, month in enumerate(months):
-        if month.month == 1 or (number == 0 and all(later.month != 1 for later in months[1:3])):
-            names[number] += f" {month.year}"
-    return names
 
 
 def _value_ticks(low: float, high: float) -> tuple[list[float], list[str]]:
@@ -224,14 +232,14 @@ def _value_ticks(low: float, high: float) -> tuple[list[float], list[str]]:
     return ticks, [f"{v:.{decimals}f}".replace("-", MINUS) if abs(v) > 1e-3 * step else "0" for v in ticks]
 
 
-def _draw_axes(axes: "Axes", chart: TrendChart) -> None:
+def _draw_axes(axes: "Axes", chart: TrendChart, last_shown: date) -> None:
     for side in ("top", "right", "left"):
         axes.spines[side].set_visible(False)
     axes.spines["bottom"].set(color=GREY, linewidth=HAIRLINE)
     axes.set_facecolor("none")
-    days, names, minor = _time_ticks(chart.first_day, chart.last_day)
-    axes.set_xticks([_days(day) for day in days], names, fontproperties=letters())
-    axes.set_xticks([_days(day) for day in minor], minor=True)
+    named, names, minor = time_ticks(chart.first_day, last_shown)
+    axes.set_xticks([days(day) for day in named], names, fontproperties=letters())
+    axes.set_xticks([days(day) for day in minor], minor=True)
     ticks, words = _value_ticks(*axes.get_ylim())
     axes.set_yticks(ticks, words, fontproperties=letters())
     axes.tick_params(axis="x", which="both", color=GREY, labelcolor=INK, width=HAIRLINE, length=2.5, pad=2)
@@ -239,10 +247,10 @@ def _draw_axes(axes: "Axes", chart: TrendChart) -> None:
     axes.tick_params(axis="y", length=0, labelcolor=INK, pad=3)
     axes.grid(visible=True, axis="y", color=FAINT, linewidth=0.35, zorder=0)
     axes.set_axisbelow(True)
-    unit = typeset_unit(chart.unit) or "ratio"
     axes.annotate(
-        unit, (0, 0.5), (1.4 / 25.4 * 72, 0), xycoords=("figure fraction", "axes fraction"), textcoords="offset points",
-        rotation=90, ha="center", va="center", color=GREY, fontproperties=letters(), parse_math=False,
+        typeset_unit(chart.unit) or "ratio", (0, 0.5), (1.4 / 25.4 * 72, 0), xycoords=("figure fraction", "axes fraction"),
+        textcoords="offset points", rotation=90, ha="center", va="center", color=GREY, parse_math=False,
+        fontproperties=letters(),
     )  # fmt: skip
 
 
@@ -251,7 +259,7 @@ def _draw_missing(axes: "Axes", chart: TrendChart) -> None:
     half = max(chart.every_days, 1) / 2
     stretches: list[list[float]] = []
     for day in sorted(set(chart.missing)):
-        start, end = _days(day) + 0.5 - half, _days(day) + 0.5 + half
+        start, end = days(day) + 0.5 - half, days(day) + 0.5 + half
         if stretches and start <= stretches[-1][1] + 0.01:
             stretches[-1][1] = end
         else:
@@ -262,34 +270,95 @@ def _draw_missing(axes: "Axes", chart: TrendChart) -> None:
 
 def _draw_points(axes: "Axes", chart: TrendChart) -> None:
     points = chart.points
-    x = np.array([_days(p.at) for p in points])
+    x = np.array([days(p.at) for p in points])
     y = np.array([p.value for p in points])
     half = np.array([p.expanded for p in points])
     gaps = np.flatnonzero(np.diff(x) > chart.every_days + chart.grace_days + 1) + 1
     for piece in np.split(np.arange(len(x)), gaps):
         if len(piece) > 1:
-            axes.plot(x[piece], y[piece], color=DATA, linewidth=0.55, alpha=1, zorder=3, solid_joinstyle="round")
+            axes.plot(x[piece], y[piece], color=DATA, linewidth=0.55, zorder=3, solid_joinstyle="round")
     barred = half > 0
     if barred.any():
-        _segments(
+        add_segments(
             axes, np.column_stack([x, y - half])[barred], np.column_stack([x, y + half])[barred],
             edgecolor=GREY, linewidth=0.5, zorder=2.5,
         )  # fmt: skip
-    days = max(1.0, _days(chart.last_day) - _days(chart.first_day))
-    scale = 1.0 if days < 550 else 0.8 if days < 1500 else 0.62
+    span = days(chart.last_day) - days(chart.first_day)
+    scale = 1.0 if span < 550 else 0.8 if span < 1500 else 0.62
     for mark in MARKS:
         chosen = np.array([p.mark == mark for p in points])
         if chosen.any():
-            _add_marks(
+            add_marks(
                 axes, x[chosen], y[chosen], mark, scale if mark not in {"fail", "conditional fail"} else max(scale, 0.75)
             )
+    tripped = np.array([p.tripped for p in points])
+    if tripped.any():
+        add_rings(axes, x[tripped], y[tripped])
+
+
+def _draw_happenings(axes: "Axes", chart: TrendChart, width_mm: float) -> None:
+    """Draw events as lettered lines and change-points as triangles on the time axis, with the time they may lie in."""
+    low, high = (float(v) for v in axes.get_xlim())
+    room = 3.2 * (high - low) / (width_mm - _LEFT_MM - _RIGHT_MM)
+    right_of = low - room
+    for event in sorted(chart.events, key=lambda e: e.day):
+        at = days(event.day) + 0.5
+        axes.plot(
+            [at, at], [0, 1.02], transform=axes.get_xaxis_transform(), color=INK, linewidth=0.6, clip_on=False, zorder=2.2
+        )
+        place = min(max(at, right_of + room), high)
+        right_of = place
+        axes.annotate(
+            event.letter, (place, 1), (0, 2.2), xycoords=axes.get_xaxis_transform(), textcoords="offset points",
+            ha="center", va="bottom", color=INK, fontproperties=letters(TEXT_SIZE - 0.4, 600), parse_math=False,
+        )  # fmt: skip
+    for earliest, day, latest in chart.changes:
+        axes.plot(
+            [days(earliest), days(latest) + 1], [0, 0], transform=axes.get_xaxis_transform(), color=INK, linewidth=1.8,
+            solid_capstyle="butt", clip_on=False, zorder=5,
+        )  # fmt: skip
+        axes.plot(
+            [days(day) + 0.5], [0.035], transform=axes.get_xaxis_transform(), marker="^", markersize=4.2, color=INK,
+            markeredgewidth=0, clip_on=False, zorder=5,
+        )  # fmt: skip
+
+
+def _draw_forecast(axes: "Axes", chart: TrendChart, line: ForecastLine) -> None:
+    """Draw the course to the limit, and along the limit the time in which it is crossed."""
+    end = float(axes.get_xlim()[1])
+    start, cross = days(line.from_day) + 0.5, days(line.crosses_on) + 0.5
+    stop = min(cross, end)
+    slope = (line.at_limit - line.from_value) / max(cross - start, 0.5)
+    axes.plot([start, stop], [line.from_value, line.from_value + slope * (stop - start)], color=DATA, linewidth=1.0,
+              dashes=(2.2, 1.5), zorder=3.2)  # fmt: skip
+    earliest = days(line.earliest) if line.earliest else days(chart.last_day) + 1
+    latest = min(days(line.latest) + 1, end) if line.latest else end
+    if earliest < end:
+        axes.plot(
+            [earliest, latest], [line.at_limit, line.at_limit], color=DATA, linewidth=2.4, solid_capstyle="butt", zorder=3.1
+        )
+    if cross <= end:
+        axes.plot([cross], [line.at_limit], marker="o", markersize=4, markerfacecolor="white", markeredgecolor=DATA,
+                  markeredgewidth=0.9, zorder=5)  # fmt: skip
+    today = days(chart.last_day) + 1
+    axes.plot([today, today], [0, 1], transform=axes.get_xaxis_transform(), color=GREY, linewidth=0.5, dashes=(1, 2), zorder=1)
+
+
+def _last_shown(chart: TrendChart) -> date:
+    """Last day on the axis: the end of the period, or later where a forecast reaches beyond it."""
+    if chart.forecast is None:
+        return chart.last_day
+    longest = max((chart.last_day - chart.first_day) * _FUTURE_SHARE, (chart.last_day - chart.last_day))
+    wanted = max(filter(None, (chart.forecast.crosses_on, chart.forecast.latest)))
+    return max(chart.last_day, min(wanted, chart.last_day + longest))
 
 
 def draw_trend(chart: TrendChart, width_mm: float) -> bytes:
     """Draw one quantity over time.
 
-    Points carry their expanded uncertainty as a bar and their verdict as a shape; the line between them breaks where a
-    session is missing; limits are dashed, as they were at the time, and named in the right margin.
+    Points carry their expanded uncertainty as a bar and their verdict as a shape, with a ring where a control rule tripped;
+    the line between them breaks where a session is missing. Limits are dashed, as they were at the time, control limits
+    dotted; the baseline is a line in its band.
 
     Parameters
     ----------
@@ -310,18 +379,21 @@ def draw_trend(chart: TrendChart, width_mm: float) -> bytes:
     """
     if not chart.points:
         raise ValueError("a trend chart needs at least one point, got none")
-    figure = new_figure(width_mm, _HEIGHT_MM)
-    axes = mm_axes(figure, _LEFT_MM, _BOTTOM_MM, width_mm - _LEFT_MM - _RIGHT_MM, _HEIGHT_MM - _BOTTOM_MM - _TOP_MM)
-    first, last = _days(chart.first_day), _days(chart.last_day) + 1
+    figure = new_figure(width_mm, chart.height_mm)
+    axes = mm_axes(figure, _LEFT_MM, _BOTTOM_MM, width_mm - _LEFT_MM - _RIGHT_MM, _PLOT_MM)
+    last_shown = _last_shown(chart)
+    first, last = days(chart.first_day), days(last_shown) + 1
     lack = max(0.0, _LEAST_DAYS - (last - first)) / 2
-    first, last = first - lack, last + lack
-    margin = 0.01 * (last - first)
+    margin = 0.01 * (last - first) + lack
     axes.set_xlim(first - margin, last + margin)
     axes.set_ylim(*_value_range(chart))
-    _draw_axes(axes, chart)
+    _draw_axes(axes, chart, last_shown)
     _draw_missing(axes, chart)
-    _draw_limits(axes, chart)
+    _name_lines(axes, _draw_limits(axes, chart) + _draw_history(axes, chart))
     _draw_points(axes, chart)
+    _draw_happenings(axes, chart, width_mm)
+    if chart.forecast is not None:
+        _draw_forecast(axes, chart, chart.forecast)
     return to_svg(figure)
 
 

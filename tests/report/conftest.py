@@ -9,6 +9,8 @@ import pytest
 
 from qa.geometry import Plane
 from qa.records import (
+    Baseline,
+    Event,
     Judged,
     Measurement,
     NotMeasured,
@@ -21,7 +23,19 @@ from qa.records import (
     SourceFile,
     Verdict,
 )
-from qa.report.content import RefusedSeries, ScannerReport
+from qa.report.content import (
+    Change,
+    ChangePoint,
+    Comparison,
+    ControlPoint,
+    Course,
+    Forecast,
+    LikelyCause,
+    Notice,
+    RefusedSeries,
+    ScannerReport,
+    SignOff,
+)
 
 LAST_DAY = date(2026, 11, 23)
 HEADER = Scanner("Fenwright", "Meridian", "NORTH3T", "FW-30417", 3.0, "M7.2")
@@ -105,14 +119,14 @@ def make_sessions(weeks, *, skip=(), last=LAST_DAY, ghost_step=0.75, seed=7, onl
     return tuple(sessions)
 
 
-def make_picture(*, rows=256, columns=256, pixel_mm=(0.98, 0.98), title="sphere-170, QA sphere", extra=()):
+def make_picture(*, rows=256, columns=256, pixel_mm=(0.98, 0.98), title="sphere-170, QA sphere", extra=(), ghost=0.02):
     y, x = np.mgrid[:rows, :columns]
     x_mm, y_mm = x * pixel_mm[1], y * pixel_mm[0]
     cx, cy = (columns - 1) / 2 * pixel_mm[1], (rows - 1) / 2 * pixel_mm[0]
     rng = np.random.default_rng(3)
     inside = np.clip(85.5 - np.hypot(x_mm - cx, y_mm - cy), 0, 1)
-    ghost = 0.02 * np.roll(inside, rows // 2, axis=0)
-    signal = 1000 * inside * (1 - 0.0009 * (x_mm - cx)) + 1000 * ghost
+    ghosted = ghost * np.roll(inside, rows // 2, axis=0)
+    signal = 1000 * inside * (1 - 0.0009 * (x_mm - cx)) + 1000 * ghosted
     pixels = np.abs(signal + 8 * rng.standard_normal(signal.shape) + 8j * rng.standard_normal(signal.shape)).astype(np.float32)
     plane = Plane((-125.0, -125.0, 0.0), (1.0, 0.0, 0.0), (0.0, 1.0, 0.0), pixel_mm, (rows, columns))
 
@@ -165,11 +179,97 @@ def year():
     )
 
 
+def make_course(sessions, name, **changes):
+    """A control chart learnt from the first ten sessions, as plain numbers."""
+    values = [
+        (a.identifier, j.measurement.value)
+        for s in sessions
+        for a in s.acquisitions
+        for j in a.judged
+        if j.measurement.quantity == name
+    ]
+    first = np.array([v for _, v in values[:10]])
+    centre, sigma = float(np.median(first)), float(first.std(ddof=1))
+    control = []
+    for number, (identifier, value) in enumerate(values):
+        rules = ("a session beyond the control limits",) if number >= 10 and abs(value - centre) > 3.2 * sigma else ()
+        known = (None, None, None) if number < 10 else (centre, centre - 3.2 * sigma, centre + 3.2 * sigma)
+        control.append(ControlPoint(identifier, *known, rules))
+    baseline = Baseline("north-3t", name, centre, sigma / 3, sigma, 10, sessions[0].day, method="first ten sessions")
+    course = Course(
+        name, "sphere-170", state="out of control" if control[-1].rules else "in control",
+        sentence="out of control since 5 Oct 2026: a session beyond the control limits" if control[-1].rules else "in control",
+        control=tuple(control), baselines=(baseline,),
+    )  # fmt: skip
+    return dataclasses.replace(course, **changes)
+
+
+def make_rich(weeks=52, **changes):
+    """Everything a report can hold: control charts, events, a forecast, causes, comparisons, signatures."""
+    sessions = make_sessions(weeks, skip=(17, 18, 40) if weeks > 45 else ())
+    courses = [make_course(sessions, name) for name in STEADY]
+    courses[0] = dataclasses.replace(
+        courses[0],
+        forecast=Forecast(
+            date(2026, 6, 1), 204.0, date(2026, 12, 28), 190.0, date(2026, 12, 7), date(2027, 2, 8),
+            "at this rate it falls below 190 on 28 Dec 2026 (90 % interval 7 Dec 2026 to 8 Feb 2027)",
+        ),
+    )  # fmt: skip
+    courses[4] = dataclasses.replace(
+        courses[4],
+        change_points=(
+            ChangePoint(date(2026, 8, 31), date(2026, 8, 24), date(2026, 9, 7), "changed level between 24 Aug and 7 Sep 2026"),
+        ),
+    )  # fmt: skip
+    content = make_content(
+        sessions,
+        pictures=(make_picture(),),
+        missing=(date(2026, 3, 30), date(2026, 4, 6), date(2026, 9, 7)),
+        standing="out of limits",
+        standing_sentence="Ghosting is out of limits since 16 Nov 2026: 2.61 % against at most 2.5 %.",
+        attention=(
+            Notice("out of limits", "ghosting on sphere-170, 2.61 % against at most 2.5 %, since 16 Nov 2026"),
+            Notice("drifting", "signal-to-noise ratio on sphere-170, falls below 190 on 28 Dec 2026 at this rate"),
+            Notice("due", "the next session on 30 Nov 2026"),
+        ),
+        previous_report=date(2026, 11, 16),
+        since_previous=("Ghosting went from pass to fail.", "One series was refused."),
+        courses=tuple(courses),
+        events=(
+            Event("north-3t", date(2026, 8, 27), "service", "Gradient amplifier exchanged, y axis", ("ghosting",)),
+            Event("north-3t", date(2026, 2, 12), "upgrade", "Software M7.2 installed", (), restarts_baseline=True),
+        ),
+        causes=(
+            LikelyCause(
+                "The gradient amplifier: ghosts along phase encode began with the service visit of 27 Aug 2026",
+                ("ghosting up from 0.42 % to 1.8 % between 24 Aug and 7 Sep 2026", "signal, lengths and frequency unchanged"),
+            ),
+        ),
+        changes=(Change(date(2026, 3, 2), "Echo time 20 ms became 22 ms for one session"),),
+        comparisons=(
+            Comparison(
+                "ghosting", "sphere-170", make_picture(), date(2026, 11, 9), make_picture(ghost=0.06), date(2026, 11, 16)
+            ),
+        ),
+        signatures=(
+            SignOff("A. Example", date(2026, 7, 3), date(2026, 1, 1), date(2026, 6, 30), "two weeks missed for building work"),
+        ),
+        next_due=date(2026, 11, 30),
+        refused=(RefusedSeries(date(2026, 6, 8), "inbox/series-114", "the patient ID is not one of a phantom scan"),),
+    )
+    return dataclasses.replace(content, **changes)
+
+
+@pytest.fixture(scope="session")
+def rich():
+    return make_rich()
+
+
 @pytest.fixture(scope="session")
 def made():
     """What makes invented content, for tests that need their own."""
     return SimpleNamespace(
-        content=make_content, picture=make_picture, session=make_session, sessions=make_sessions,
+        content=make_content, picture=make_picture, rich=make_rich, session=make_session, sessions=make_sessions,
         steady={name: (row[0], row[1], *row[3:]) for name, row in STEADY.items()},
         header=HEADER, settings=SETTINGS, last_day=LAST_DAY,
     )  # fmt: skip
