@@ -16,6 +16,7 @@ SIZE_TOLERANCE = 0.04
 
 _OVALITY = 0.05
 _SECOND_OBJECT = 0.04
+_NOT_A_SPHERE = 0.02
 
 
 def locate_body(acquisition: Acquisition, phantom: Phantom) -> Pose | NotLocated:
@@ -102,36 +103,31 @@ def _patient_centres(planes: tuple[Plane, ...], sections: tuple[CrossSection, ..
 
 
 def _sphere(acquisition: Acquisition, phantom: Phantom, outlines: tuple[Outline, ...]) -> Pose | NotLocated:
-    """R^2 = r^2 + (z - z0)^2 for every cross-section: linear in z0 and R^2 - z0^2."""
+    """Find a sphere's centre along the normal from its cross-sections, and in the plane from their centres."""
     planes = acquisition.planes
     sections = tuple(o.section for o in outlines)
     heights, radii = _heights(planes, sections), np.array([s.radius_mm for s in sections])
     u_height: float | None = None
     height, radius = float(heights[np.argmax(radii)]), float(radii.max())
+    remarks: tuple[str, ...] = ("too few slices to show the sphere's centre along the normal: the largest stands in",)
     if len(sections) >= 3:
-        origin = float(heights.mean())
-        z = heights - origin
-        design = np.stack([np.ones_like(z), 2 * z], axis=1)
-        weight = 1 / np.maximum(2 * radii * np.array([s.u_radius_mm for s in sections]), 1e-6)
-        target = radii**2 + z**2
-        covariance = np.linalg.inv((design * weight[:, None]).T @ (design * weight[:, None]))
-        a, b = covariance @ (design * weight[:, None]).T @ (target * weight)
-        residual = (target - design @ np.array([a, b])) * weight
-        spread = max(1.0, float(residual @ residual) / (len(z) - 2))
-        height, radius = origin + float(b), float(np.sqrt(a + b * b))
-        u_height = math.sqrt(spread * covariance[1, 1])
+        fit = _fit_sphere(heights, radii, np.array([s.u_radius_mm for s in sections]))
+        if fit is not None:
+            height, radius, u_height = fit
+            remarks = ()
+        elif phantom.radius_mm is not None:
+            return NotLocated(f"the cross-sections do not shrink as a sphere's do: this is not {phantom.name}")
+        else:
+            height = float(heights[0] + heights[-1]) / 2
+            remarks = (
+                "the cross-sections do not shrink as a sphere's do, as if this were a cylinder: the middle slice stands in",
+            )
     reason = _wrong_size(phantom, radius, one_slice=len(sections) < 3)
     if reason:
         return NotLocated(reason)
-    centre = _mean_centre(planes, sections, height)
     u_plane = _u_plane(sections)
-    remarks = (
-        ()
-        if u_height is not None
-        else ("too few slices to show the sphere's centre along the normal: the slice nearest stands in",)
-    )
     return Pose(
-        centre_patient=centre,
+        centre_patient=_mean_centre(planes, sections, height),
         orientation=np.eye(3),
         rotation_deg=0.0,
         tilt_deg=0.0,
@@ -141,6 +137,31 @@ def _sphere(acquisition: Acquisition, phantom: Phantom, outlines: tuple[Outline,
         sections=sections,
         remarks=remarks,
     )
+
+
+def _fit_sphere(heights: Floats, radii: Floats, u_radii: Floats) -> tuple[float, float, float] | None:
+    """Fit R^2 = r^2 + (z - z0)^2, linear in z0 and R^2 - z0^2, to the cross-sections.
+
+    Returns
+    -------
+    tuple of float, or None
+        Height of the centre, radius, and standard uncertainty of the height; None where the outlines are not those of a
+        sphere.
+    """
+    origin = float(heights.mean())
+    z = heights - origin
+    weight = 1 / np.maximum(2 * radii * u_radii, 1e-6)
+    design = np.stack([np.ones_like(z), 2 * z], axis=1) * weight[:, None]
+    target = (radii**2 + z**2) * weight
+    covariance = np.linalg.inv(design.T @ design)
+    a, b = (float(v) for v in covariance @ design.T @ target)
+    radius = math.sqrt(max(a + b * b, 1e-6))
+    expected = np.sqrt(np.clip(radius**2 - (z - b) ** 2, 0, None))
+    if float(np.sqrt(np.mean((radii - expected) ** 2))) > _NOT_A_SPHERE * radius:
+        return None
+    residual = target - design @ np.array([a, b])
+    spread = max(1.0, float(residual @ residual) / (len(z) - 2))
+    return origin + b, radius, math.sqrt(spread * float(covariance[1, 1]))
 
 
 def _mean_centre(planes: tuple[Plane, ...], sections: tuple[CrossSection, ...], height: float) -> Floats:

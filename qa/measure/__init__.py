@@ -11,13 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from qa.measure.background import snr_background
-from qa.measure.frequency import centre_frequency
-from qa.measure.ghosting import ghosting
-from qa.measure.lengths import lengths
-from qa.measure.setup import setup
-from qa.measure.snr import snr
-from qa.measure.uniformity import uniformity
+from qa.measure import background, frequency, ghosting, lengths, setup, snr, uniformity
 from qa.phantoms import Phantom
 from qa.records import Acquisition, Measurement, NotLocated, NotMeasured, Pose
 
@@ -34,13 +28,13 @@ class Routine:
 
 
 ROUTINES: tuple[Routine, ...] = (
-    Routine(snr, ("snr",)),
-    Routine(snr_background, ("snr_background",)),
-    Routine(uniformity, ("uniformity_piu", "uniformity_naad")),
-    Routine(ghosting, ("ghosting",)),
-    Routine(lengths, ("length_0", "length_45", "length_90", "length_135", "distortion_max", "scale_x", "scale_y")),
-    Routine(centre_frequency, ("centre_frequency",), needs_pose=False),
-    Routine(setup, ("setup_offset", "setup_tilt")),
+    Routine(snr.snr, ("snr",)),
+    Routine(background.snr_background, ("snr_background",)),
+    Routine(uniformity.uniformity, ("uniformity_piu", "uniformity_naad")),
+    Routine(ghosting.ghosting, ("ghosting",)),
+    Routine(lengths.lengths, ("length_0", "length_45", "length_90", "length_135", "distortion_max", "scale_x", "scale_y")),
+    Routine(frequency.centre_frequency, ("centre_frequency",), needs_pose=False),
+    Routine(setup.setup, ("setup_offset", "setup_tilt")),
 )
 """All routines, in the order of a report; `quantities` is what each may report on."""
 

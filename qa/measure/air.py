@@ -16,6 +16,7 @@ Box = tuple[tuple[float, float], tuple[float, float]]
 _WANTED_CM2 = 20.0
 _LEAST_CM2 = 4.0
 _GAP_PX = 3.0
+_LEAST_OF_TWO = 1.6  # two channels whose noise correlates by 0.5 act like 2 / (1 + 0.5^2)
 
 
 def is_masked(values: Floats) -> bool:
@@ -101,13 +102,17 @@ class AirNoise:
         return math.sqrt((self.chi.kurtosis - 1) / 4 * self.correlation.variance_factor / self.pixels)
 
 
-def air_noise(image: Floats, plane: Plane, boxes: dict[str, Box]) -> tuple[AirNoise, dict[str, Box]] | str:
+def air_noise(
+    image: Floats, plane: Plane, boxes: dict[str, Box], repeat: Floats | None = None
+) -> tuple[AirNoise, dict[str, Box]] | str:
     """Read the noise in air, or say why what is there is not noise of a magnitude image.
 
-    Tested in turn: masked to zero; stored in steps too coarse for its spread; corners that do not agree with each other (one
-    that stands out is left out, as something other than noise is in it); a ratio of mean to standard deviation
-    below that of one channel, 1.913; and, where neighbouring pixels correlate, a ratio that belongs to no whole number of
-    channels, which tells a filter that worked on magnitudes from one that worked before.
+    Tested in turn: masked to zero; stored in steps too coarse for its spread; corners that do not agree with each other
+    (one that stands out is left out, as something other than noise is in it); a ratio of mean to standard deviation below
+    that of one channel, 1.913, or between those of one channel and of two that correlate; where neighbouring pixels
+    correlate, a ratio that belongs to no whole number of channels, which tells a filter that worked on magnitudes from one
+    that worked before; and, where there is a second image, more spread than the difference of the two shows, because what
+    repeats is a ghost or ringing and not noise.
 
     Parameters
     ----------
@@ -117,6 +122,8 @@ def air_noise(image: Floats, plane: Plane, boxes: dict[str, Box]) -> tuple[AirNo
         Its plane.
     boxes : dict
         From `air_corners`.
+    repeat : (R, C) float, optional
+        The same image taken again.
 
     Returns
     -------
@@ -133,14 +140,30 @@ def air_noise(image: Floats, plane: Plane, boxes: dict[str, Box]) -> tuple[AirNo
         return "air is stored in steps too coarse for its noise: the images were scaled down"
     found = _sum_up(list(parts.values()), step)
     ratio = found.mean / found.sd
-    if ratio < Chi(1.0).ratio * (1 - 4 * found.u_relative) - 0.02:
-        return f"the background is not noise: mean over standard deviation is {ratio:.2f}, where noise has 1.91 or more"
     whole = Chi(float(max(1, round(found.chi.channels))))
     near = abs(ratio / whole.ratio - 1) < 3 * found.u_relative + 0.01
-    if not near and max(found.correlation.along_x[1], found.correlation.along_y[1]) > 0.15:
-        return "the background has been filtered: its noise is smoother than that of any number of channels"
+    reason = _not_noise(found, ratio, near)
+    if not reason and repeat is not None:
+        again = [part - _pixels(repeat, plane, boxes[name]) for name, part in parts.items()]
+        steady = math.sqrt(float(np.mean([p.var() for p in again])) / 2)
+        if found.sd > steady * (1.1 + 4 * found.u_relative):
+            reason = "the background holds more than noise: part of it is the same in both repeats, as a ghost or ringing is"
+    if reason:
+        return reason
     chi = whole if near else found.chi
     return AirNoise(found.mean, found.sd, chi, found.correlation, found.pixels), {name: boxes[name] for name in parts}
+
+
+def _not_noise(found: AirNoise, ratio: float, near: bool) -> str:
+    """Say why a ratio of mean to standard deviation is not that of noise; an empty string where it is."""
+    said = f"the background is not noise: mean over standard deviation is {ratio:.2f}, where"
+    if ratio < Chi(1.0).ratio * (1 - 4 * found.u_relative) - 0.02:
+        return f"{said} noise has 1.91 or more"
+    if not near and found.chi.channels < _LEAST_OF_TWO:
+        return f"{said} one channel gives 1.91 and two channels no less than {Chi(_LEAST_OF_TWO).ratio:.2f}"
+    if not near and max(found.correlation.along_x[1], found.correlation.along_y[1]) > 0.15:
+        return "the background has been filtered: its noise is smoother than that of any number of channels"
+    return ""
 
 
 def _too_little(boxes: dict[str, Box], parts: dict[str, Floats]) -> str:

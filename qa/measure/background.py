@@ -37,7 +37,8 @@ def snr_background(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[
     if scan.settings.filtered:
         return [NotMeasured("snr_background", "the images were filtered, so air does not show the noise of M")]
     boxes = air_corners(field.plane, field.section, scan.settings.phase_encode)
-    found = air_noise(scan.pixels[field.slice_index], field.plane, boxes)
+    again = scan.repeats[1].pixels[field.slice_index] if len(scan.repeats) > 1 else None
+    found = air_noise(scan.pixels[field.slice_index], field.plane, boxes, again)
     if isinstance(found, str):
         return [NotMeasured("snr_background", found)]
     air, used = found

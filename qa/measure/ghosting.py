@@ -15,7 +15,7 @@ import numpy as np
 
 from qa.geometry import Floats, Plane
 from qa.measure.air import is_masked
-from qa.measure.noise import correlation
+from qa.measure.noise import Correlation, correlation
 from qa.measure.regions import figure, rectangle, uniform_field
 from qa.phantoms import Phantom
 from qa.records import Acquisition, CrossSection, Measurement, NotMeasured, Pose
@@ -39,8 +39,9 @@ class _Mean:
 def ghosting(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
     """Measure the ghost.
 
-    Standard uncertainty: that of the four means, from the noise within each region (seen in differences of neighbouring
-    pixels, which the outline of a ghost hardly enters) and the independent pixels there are.
+    Standard uncertainty: that of the four means, from the noise within each region and the independent pixels there are.
+    Noise is seen in the difference of two repeats; with one image, in differences of neighbouring pixels, which the outline
+    of a ghost hardly enters.
     """
     field = uniform_field(scan, pose, phantom)
     if isinstance(field, str):
@@ -52,9 +53,9 @@ def ghosting(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measur
     if any(is_masked(_part(image, field.plane, box)[0]) for box in boxes.values()):
         return [NotMeasured("ghosting", "air is masked to zero")]
     signal = field.mean(field.cut(scan.pixels))
-    neighbours = _neighbours(image, field.plane, boxes)
-    means = {name: _mean(image, field.plane, box, neighbours) for name, box in boxes.items()}
-    powers = {name: _mean(image**2, field.plane, box, neighbours) for name, box in boxes.items()}
+    second = scan.repeats[1].pixels[field.slice_index].astype(np.float64) if len(scan.repeats) > 1 else None
+    means = _means(image, second, field.plane, boxes)
+    powers = _means(image**2, None if second is None else second**2, field.plane, boxes)
     difference, u_difference = _contrast(means)
     value, u_value = 100 * abs(difference) / (2 * signal), 100 * u_difference / (2 * signal)
     encoded = scan.settings.phase_encode
@@ -125,23 +126,28 @@ def _part(image: Floats, plane: Plane, box: Box) -> tuple[Floats, Floats, Floats
     return image[rows, columns], down, across
 
 
-def _neighbours(image: Floats, plane: Plane, boxes: dict[str, Box]) -> tuple[float, float, float]:
-    """Correlation of neighbours along x and y, and how many pixels make one independent value, in the quietest region."""
-    parts = [_part(image, plane, box)[0] for box in boxes.values()]
-    quiet = min(parts, key=lambda p: float(p.std()))
-    found = correlation(quiet - quiet.mean(), np.ones_like(quiet))
-    return min(found.along_x[1], 0.9), min(found.along_y[1], 0.9), found.mean_factor
+def _means(image: Floats, second: Floats | None, plane: Plane, boxes: dict[str, Box]) -> dict[str, _Mean]:
+    """Mean of each region with its standard uncertainty."""
+    parts = {name: _part(image, plane, box) for name, box in boxes.items()}
+    if second is None:
+        noise = {name: part for name, (part, _, _) in parts.items()}
+    else:
+        noise = {name: (part - _part(second, plane, boxes[name])[0]) / math.sqrt(2) for name, (part, _, _) in parts.items()}
+    quiet = min(noise.values(), key=lambda p: float(p.std()))
+    alike = correlation(quiet - quiet.mean(), np.ones_like(quiet))
+    found = {}
+    for name, (part, down, across) in parts.items():
+        total = float(down.sum() * across.sum())
+        variance = float(noise[name].var()) if second is not None else _from_neighbours(part, alike)
+        independent = total**2 / float((down**2).sum() * (across**2).sum()) / alike.mean_factor
+        found[name] = _Mean(float(down @ part @ across) / total, math.sqrt(variance / independent))
+    return found
 
 
-def _mean(image: Floats, plane: Plane, box: Box, neighbours: tuple[float, float, float]) -> _Mean:
-    part, down, across = _part(image, plane, box)
-    total = float(down.sum() * across.sum())
-    variances = [
-        float((np.diff(part, axis=axis) ** 2).mean()) / 2 / (1 - alike)
-        for axis, alike in ((1, neighbours[0]), (0, neighbours[1]))
-    ]
-    spread = math.sqrt(sum(variances) / 2 * neighbours[2] * float((down**2).sum() * (across**2).sum()))
-    return _Mean(float(down @ part @ across) / total, spread / total)
+def _from_neighbours(part: Floats, alike: Correlation) -> float:
+    """Variance of the noise from differences of neighbours along both axes, given how alike noise makes neighbours."""
+    pairs = ((1, alike.along_x[1]), (0, alike.along_y[1]))
+    return sum(float((np.diff(part, axis=axis) ** 2).mean()) / 2 / (1 - min(same, 0.9)) for axis, same in pairs) / 2
 
 
 def _contrast(means: dict[str, _Mean]) -> tuple[float, float]:

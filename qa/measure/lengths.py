@@ -31,6 +31,7 @@ _CUBIC = -0.55
 _RAYS = 180
 _ORDER = 4
 _UNSEEN_PX = 0.003
+_UNCLEAR = 0.06
 
 
 @dataclass(frozen=True, eq=False)
@@ -164,7 +165,7 @@ def _diameter(edge: _Edge, angle_deg: int, plane: Plane) -> tuple[tuple[float, f
         if not 0.05 < slope < 3 or np.abs(shifts).max() > 2 * float(np.max(plane.pixel_mm)):
             return None
     scatter = float(residual @ residual) / (residual.size - 3)
-    if scatter > 0.02:
+    if scatter > _UNCLEAR:
         return None
     u_fit = math.sqrt(scatter * float(covariance[:2, :2].sum()))
     radii, u_ghost = [], 0.0
@@ -202,7 +203,7 @@ def _height_mm(scan: Acquisition, pose: Pose, section: CrossSection) -> float:
 def _true_diameter(
     scan: Acquisition, pose: Pose, phantom: Phantom, section: CrossSection, found: dict[int, tuple[float, float]]
 ) -> tuple[float, float]:
-    """Return L0 and its standard uncertainty: the definition's, on a sphere at this slice's height; else the diameters' own mean."""
+    """Return L0 and its uncertainty: the definition's, on a sphere at this slice's height; else the mean of the diameters."""
     if phantom.radius_mm is None:
         if len(found) < len(ANGLES):
             return math.nan, 0.0

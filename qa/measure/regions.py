@@ -133,7 +133,7 @@ def uniform_field(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Fie
 
 
 def body_slice(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> CrossSection | str:
-    """Choose the outline to measure diameters on: of the uniform slice if there is one, else that nearest the body's centre."""
+    """Choose the outline to measure diameters on: the uniform slice's, or else the one nearest the body's centre."""
     reason = magnitude_only(acquisition)
     if reason:
         return reason
@@ -142,23 +142,23 @@ def body_slice(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> CrossS
         return chosen[0]
     if not pose.sections:
         return "no slice shows the body's outline"
-    heights = _heights(acquisition, pose)
+    heights = _heights(acquisition, pose, phantom)
     return min(pose.sections, key=lambda s: abs(heights[s.slice_index]))
 
 
-def _heights(acquisition: Acquisition, pose: Pose) -> dict[int, float]:
-    """Height z in the phantom of each section's centre."""
-    return {
-        s.slice_index: float(pose.to_phantom(acquisition.planes[s.slice_index].to_patient(*s.centre_mm))[2])
-        for s in pose.sections
-    }
+def _heights(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> dict[int, float]:
+    """Height of each section above the body's centre: along a cylinder's axis; along the slice normal for a sphere."""
+    planes = acquisition.planes
+    if phantom.body.shape == "sphere":
+        return {s.slice_index: -float(planes[s.slice_index].from_patient(pose.centre_patient)[2]) for s in pose.sections}
+    return {s.slice_index: float(pose.to_phantom(planes[s.slice_index].to_patient(*s.centre_mm))[2]) for s in pose.sections}
 
 
 def _uniform_section(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> tuple[CrossSection, float] | str:
     """Return the outline of the uniform slice, and the share of it that M takes in percent."""
     if not pose.sections:
         return "no slice shows the body's outline"
-    heights = _heights(acquisition, pose)
+    heights = _heights(acquisition, pose, phantom)
     if not phantom.sections:
         return min(pose.sections, key=lambda s: abs(heights[s.slice_index])), phantom.body.region_percent
     if pose.u_centre_mm[2] is None:

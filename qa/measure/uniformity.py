@@ -18,7 +18,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane, disc_overlap, sample
-from qa.measure.noise import Noise, evaluate, fit_surface, image_noise
+from qa.measure.air import air_corners, air_noise
+from qa.measure.noise import Noise, difference_noise, evaluate, fit_surface, ripple_noise
 from qa.measure.regions import Field, figure, uniform_field
 from qa.phantoms import Phantom
 from qa.records import Acquisition, Measurement, NotMeasured, Pose, Region
@@ -44,9 +45,23 @@ def uniformity(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Meas
     if isinstance(field, str):
         return [NotMeasured(name, field) for name in ("uniformity_piu", "uniformity_naad")]
     image = field.cut(scan.pixels)
-    noise = image_noise(scan, field)
+    noise = _noise(scan, field, image)
     surface = _plain_surface(image, field, noise)
     return [_integral(image, field, noise, surface), _deviation(image, field, noise, surface)]
+
+
+def _noise(scan: Acquisition, field: Field, image: Floats) -> Noise:
+    """Find the noise in M: from two repeats; from one image, as air shows it where air stands for M; else from the ripple."""
+    noise = difference_noise(scan, field)
+    if not isinstance(noise, str):
+        return noise
+    if not scan.settings.parallel_imaging and not scan.settings.filtered:
+        boxes = air_corners(field.plane, field.section, scan.settings.phase_encode)
+        found = air_noise(scan.pixels[field.slice_index], field.plane, boxes)
+        if not isinstance(found, str):
+            air, _ = found
+            return Noise(air.sigma, air.correlation, air.pixels / air.correlation.variance_factor)
+    return ripple_noise(image, field)
 
 
 def _plain_surface(image: Floats, field: Field, noise: Noise) -> Floats:
