@@ -3,10 +3,12 @@
 Importing it imports SQLAlchemy, which takes its time: do so where the record is opened.
 """
 
-from qa.store.chain import Head, Verification, Who
+from qa.store.chain import Head, Who
+from qa.store.intake import Intake
 from qa.store.lock import run_lock
 from qa.store.queries import LimitSet, Refusal
-from qa.store.record import Intake, Record, current_user, open_record
+from qa.store.record import Record, current_user, open_record
+from qa.store.verify import Verification
 
 __all__ = [
     "Head",

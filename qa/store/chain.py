@@ -4,38 +4,35 @@ An entry's hash is the SHA-256 of the JSON text
 
     ["evenfield-record-1", number, kind, written_at, user, name, why, remark, corrects, previous, [[table, rows], ...]]
 
-in ASCII without blanks, where `rows` holds the values of the table's columns in order, `entry` left out; tables without a row
+in UTF-8 without blanks, where `rows` holds the values of the table's columns in order, `entry` left out; tables without a row
 are left out. Floats are written in their shortest form that reads back to the same bits, so the text can be made again from
 the database alone, by any program.
 
 What the chain shows: a changed value, a row added or removed, an entry removed from the middle, exchanged or put in.
 What it cannot show by itself: that the *last* entries were cut off, or that somebody made the whole chain anew. For that the
 head, the number and hash of the last entry, has to be known from elsewhere: every commit writes it to a file beside the
-record (`qa.store.heads`), sign-offs and reports carry it, and `verify` holds the chain against all of them.
+record (`qa.store.heads`), sign-offs and reports carry it, and `qa.store.verify` holds the chain against all of them.
 """
 
 import hashlib
 import json
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
 
 from sqlalchemy import Connection, Table, insert, select
-from sqlalchemy.sql import Select
 
 from qa.store.tables import CONTENT_TABLES, entries
 
-__all__ = ["GENESIS", "Head", "Verification", "Who", "append", "clock_remark", "entry_hash", "head", "verify"]
+__all__ = ["GENESIS", "HEADER", "Head", "Who", "append", "clock_remark", "entry_hash", "head"]
 
 GENESIS = ""
 """What the first entry carries in place of a hash."""
 
 _FORMAT = "evenfield-record-1"
-_HEADER = ("number", "kind", "written_at", "user", "name", "why", "remark", "corrects", "previous")
-_BATCH = 4096
-_MOST_PROBLEMS = 20
-_ENCODE = json.JSONEncoder(ensure_ascii=True, separators=(",", ":"), allow_nan=False).encode
+HEADER = ("number", "kind", "written_at", "user", "name", "why", "remark", "corrects", "previous")
+_ENCODE = json.JSONEncoder(ensure_ascii=False, separators=(",", ":"), allow_nan=False).encode
 
 Rows = Mapping[Table, Sequence[Mapping[str, Any]]]
 
@@ -56,30 +53,6 @@ class Head:
     hash: str
 
 
-@dataclass(frozen=True)
-class Verification:
-    """What came of checking the chain.
-
-    Attributes
-    ----------
-    head : Head
-        The end of the chain as the database has it.
-    problems : tuple of str
-        Where the record was altered, in plain sentences; empty where it is whole.
-    remarks : tuple of str
-        What a person should know but what is no proof of an alteration.
-    """
-
-    head: Head
-    problems: tuple[str, ...]
-    remarks: tuple[str, ...]
-
-    @property
-    def whole(self) -> bool:
-        """Tell whether nothing was found altered, removed or reordered."""
-        return not self.problems
-
-
 def entry_hash(header: Sequence[Any], content: Sequence[tuple[str, Sequence[Sequence[Any]]]]) -> str:
     """Hash one entry.
 
@@ -90,7 +63,7 @@ def entry_hash(header: Sequence[Any], content: Sequence[tuple[str, Sequence[Sequ
     content : sequence of (table name, rows)
         In the order of `CONTENT_TABLES`, tables without a row left out.
     """
-    return hashlib.sha256(_ENCODE([_FORMAT, *header, content]).encode("ascii")).hexdigest()
+    return hashlib.sha256(_ENCODE([_FORMAT, *header, content]).encode("utf-8", "surrogatepass")).hexdigest()
 
 
 def head(connection: Connection) -> tuple[Head, str]:
@@ -139,7 +112,7 @@ def append(
     header = [
         number, kind, written_at, _text(who.user), _text(who.name), _text(why), clock_remark(last_at, at), corrects, last.hash
     ]  # fmt: skip
-    connection.execute(insert(entries).values(**dict(zip(_HEADER, header, strict=True)), hash=entry_hash(header, content)))
+    connection.execute(insert(entries).values(**dict(zip(HEADER, header, strict=True)), hash=entry_hash(header, content)))
     for table in CONTENT_TABLES:
         if table in clean:
             connection.execute(insert(table), [{"entry": number, **row} for row in clean[table]])
@@ -181,120 +154,3 @@ def _value(value: Any, kind: type) -> Any:  # noqa: ANN401 - a column's value
 def _text(text: str) -> str:
     """Make a text that every database can keep: no NUL, no half of a surrogate pair."""
     return text.replace("\0", "\N{REPLACEMENT CHARACTER}").encode("utf-8", "replace").decode("utf-8")
-
-
-def verify(connection: Connection, anchors: Iterable[tuple[str, Head]] = ()) -> Verification:
-    """Go through the whole record and hold every value against the chain.
-
-    Parameters
-    ----------
-    connection : Connection
-        In a reading transaction, so that it sees one state.
-    anchors : iterable of (str, Head)
-        Heads known from elsewhere, each with where it is known from.
-
-    Returns
-    -------
-    Verification
-        Where the chain breaks, if it does.
-    """
-    walk = _Walk([_Reader(connection, table) for table in CONTENT_TABLES])
-    for row in _rows(connection, select(*(entries.c[name] for name in (*_HEADER, "hash"))).order_by(entries.c.number)):
-        walk.step(row)
-    problems = [*walk.problems, *walk.strays()]
-    for where, anchor in anchors:
-        if anchor.number > walk.last.number or (anchor.number != 0 and anchor.number not in walk.hashes):
-            problems.append(
-                f"{where} knows entry {anchor.number}, but the record ends with entry {walk.last.number}: its end was cut off"
-            )
-        elif anchor.number != 0 and walk.hashes[anchor.number] != anchor.hash:
-            problems.append(
-                f"{where} knows entry {anchor.number} with another hash: the record was made anew from there or before"
-            )
-    if len(problems) > _MOST_PROBLEMS:
-        problems[_MOST_PROBLEMS:] = [f"and {len(problems) - _MOST_PROBLEMS} more"]
-    return Verification(walk.last, tuple(problems), tuple(walk.remarks))
-
-
-class _Walk:
-    """Goes from entry to entry and notes where the chain breaks."""
-
-    def __init__(self, readers: Sequence["_Reader"]) -> None:
-        self.last = Head(0, GENESIS)
-        self.hashes: dict[int, str] = {}
-        self.problems: list[str] = []
-        self.remarks: list[str] = []
-        self._readers = readers
-
-    def step(self, row: Sequence[Any]) -> None:
-        """Check one entry with all its rows."""
-        number, kind, written_at, remark, previous, stored = row[0], row[1], row[2], row[6], row[8], row[9]
-        content = [(reader.name, found) for reader in self._readers if (found := reader.take(number))]
-        what = f"entry {number} ({kind}, written {written_at})"
-        due = self.last.number + 1
-        if number != due:
-            gone = f"entry {due} is" if number == due + 1 else f"entries {due} to {number - 1} are"
-            self.problems.append(f"{gone} missing before {what}")
-        elif previous != self.last.hash:
-            self.problems.append(
-                f"{what} does not carry the hash of the entry before it: one of the two was altered or put in"
-            )
-        if _hash_or_none(row[:9], content) != stored:
-            self.problems.append(f"{what} was altered: what it holds is not what its hash was made from")
-        if remark:
-            self.remarks.append(f"{what}: {remark}")
-        self.hashes[number] = stored
-        self.last = Head(number, stored)
-
-    def strays(self) -> list[str]:
-        """Say which rows belong to no entry."""
-        return [f"table {one.name}: a row names entry {n}, which there is not" for one in self._readers for n in one.left]
-
-
-def _hash_or_none(header: Sequence[Any], content: list[tuple[str, list[Sequence[Any]]]]) -> str | None:
-    """Hash an entry read back; None where a value is of a type that was never written."""
-    try:
-        return entry_hash(header, content)
-    except (TypeError, ValueError):
-        return None
-
-
-def _rows(connection: Connection, query: Select[Any]) -> Iterator[Sequence[Any]]:
-    """Read in batches as the driver's own tuples: a record of ten years has over a million rows."""
-    cursor = connection.connection.cursor()
-    try:
-        cursor.execute(str(query.compile(dialect=connection.dialect)))
-        while batch := cursor.fetchmany(_BATCH):
-            yield from batch
-    finally:
-        cursor.close()
-
-
-class _Reader:
-    """Hands out a table's rows entry by entry, in step with the chain."""
-
-    def __init__(self, connection: Connection, table: Table) -> None:
-        self.name = table.name
-        order = [column for column in (table.c.entry, table.c.get("position")) if column is not None]
-        self._rows = _rows(connection, select(table).order_by(*order))
-        self._next = next(self._rows, None)
-        self._strays: list[int] = []
-
-    def take(self, number: int) -> list[Sequence[Any]]:
-        """Give the rows of one entry, `entry` left out."""
-        found = []
-        row = self._next
-        while row is not None and isinstance(row[0], int) and row[0] <= number:
-            if row[0] == number:
-                found.append(row[1:])
-            elif not self._strays or self._strays[-1] != row[0]:
-                self._strays.append(row[0])
-            row = next(self._rows, None)
-        self._next = row
-        return found
-
-    @property
-    def left(self) -> list[int]:
-        """Entries that rows name and that the chain does not have."""
-        rest = [] if self._next is None else [self._next[0]]
-        return [*self._strays, *rest]

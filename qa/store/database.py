@@ -3,10 +3,12 @@
 import errno
 import sqlite3
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
+from functools import cache
 from importlib.resources import files
 from pathlib import Path
+from typing import Any
 
 from sqlalchemy import Connection, Engine, create_engine, event, text
 from sqlalchemy.engine import URL, make_url
@@ -14,8 +16,9 @@ from sqlalchemy.exc import ArgumentError, DBAPIError, NoSuchModuleError, SQLAlch
 from sqlalchemy.pool import QueuePool
 
 from qa.errors import FaultError, SettingError
+from qa.store.tables import CONTENT_TABLES
 
-__all__ = ["HEAD_REVISION", "Database"]
+__all__ = ["HEAD_REVISION", "Database", "check_tables", "upgrade"]
 
 HEAD_REVISION = "0001"
 """The newest migration; a test holds it against the folder of migrations."""
@@ -26,6 +29,11 @@ _APPLICATION = 0x45766E66
 _BUSY_S = 30.0
 _PAGE_BYTES = 8192
 _WRITE = "evenfield_write"
+_SQLITE_SCHEMA = "SELECT type || ' ' || name, sql FROM sqlite_master"
+_POSTGRESQL_SCHEMA = (
+    "SELECT 'trigger ' || tgname, tgenabled::text FROM pg_trigger JOIN pg_class ON pg_class.oid = tgrelid "
+    "WHERE NOT tgisinternal AND relnamespace = current_schema()::regnamespace"
+)
 
 
 class Database:
@@ -107,6 +115,9 @@ class Database:
             raise FaultError(self._sentence(error.orig or error)) from error
         except sqlite3.Error as error:
             raise FaultError(self._sentence(error)) from error
+        except UnicodeDecodeError as error:
+            # A damaged table definition is quoted in the driver's own message, which then cannot be read either.
+            raise FaultError(self._sentence(sqlite3.DatabaseError("malformed"))) from error
         except SQLAlchemyError as error:
             raise FaultError(f"{self.name}: the database failed ({type(error).__name__}): try again.") from error
 
@@ -205,11 +216,6 @@ class Database:
             )
 
     def _migrate(self) -> None:
-        from alembic import command
-        from alembic.config import Config
-
-        config = Config()
-        config.set_main_option("script_location", str(_migrations()).replace("%", "%%"))
         with self.plainly(), self.engine.connect().execution_options(**{_WRITE: True}) as connection, connection.begin():
             if not self.sqlite:
                 # Two programs that start at once: the second waits here, and then finds nothing to do.
@@ -218,12 +224,64 @@ class Database:
                 return
             if self.sqlite:
                 connection.exec_driver_sql(f"PRAGMA application_id = {_APPLICATION}")
-            config.attributes["connection"] = connection
-            command.upgrade(config, "head")
+            upgrade(connection)
 
     def close(self) -> None:
         """Let go of all connections."""
         self.engine.dispose()
+
+
+def upgrade(connection: Connection, revision: str = HEAD_REVISION) -> None:
+    """Bring the tables to a revision, inside the transaction that the connection is in."""
+    from alembic import command
+    from alembic.config import Config
+
+    config = Config()
+    config.set_main_option("script_location", str(_migrations()).replace("%", "%%"))
+    config.attributes["connection"] = connection
+    command.upgrade(config, revision)
+
+
+def check_tables(connection: Connection) -> list[str]:
+    """Say what is wrong with the tables, triggers and indexes themselves, compared with a fresh record's.
+
+    On SQLite the file's inner order is checked too, so that a byte changed in an index is found.
+    """
+    if connection.dialect.name != "sqlite":
+        return _compare(_postgresql_guards(), _schema(_POSTGRESQL_SCHEMA, connection))
+    problems = _compare(_fresh_schema(), _schema(_SQLITE_SCHEMA, connection))
+    found = connection.exec_driver_sql("PRAGMA integrity_check(20)").scalars().all()
+    return problems + [f"the database file is damaged: {line}" for line in found if line != "ok"]
+
+
+@cache
+def _fresh_schema() -> Mapping[str, Any]:
+    fresh = create_engine("sqlite://")
+    with fresh.begin() as connection:
+        upgrade(connection)
+        found = _schema(_SQLITE_SCHEMA, connection)
+    fresh.dispose()
+    return found
+
+
+def _compare(wanted: Mapping[str, Any], found: Mapping[str, Any]) -> list[str]:
+    missing, added = sorted(wanted.keys() - found.keys()), sorted(found.keys() - wanted.keys())
+    changed = sorted(name for name in wanted.keys() & found.keys() if wanted[name] != found[name])
+    return [
+        *(f"{name} is missing: the record is not protected as it should be" for name in missing),
+        *(f"{name} was added by another hand" for name in added),
+        *(f"{name} was changed by another hand" for name in changed),
+    ]
+
+
+def _postgresql_guards() -> Mapping[str, Any]:
+    """Name every trigger that there must be, switched on ("O")."""
+    content = [name for table in CONTENT_TABLES for name in (f"{table.name}_no_change", f"{table.name}_newest")]
+    return {f"trigger {name}": "O" for name in ("entries_no_change", "entries_in_order", *content)}
+
+
+def _schema(query: str, connection: Connection) -> dict[str, Any]:
+    return {row[0]: row[1] for row in connection.exec_driver_sql(query)}
 
 
 def _migrations() -> Path:

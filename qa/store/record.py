@@ -2,11 +2,10 @@
 
 import getpass
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import asdict, dataclass, field
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 from datetime import date, datetime
-from functools import lru_cache
 from hashlib import sha256 as _sha256
-from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path, PurePath
 from types import TracebackType
 from typing import Any, Self
@@ -16,29 +15,23 @@ from sqlalchemy import Connection, Table, func, select
 from qa.errors import FaultError, UsageError
 from qa.records import Outcome, Session, Verdict
 from qa.store import queries, rows
-from qa.store.chain import Head, Verification, Who, append, clock_remark, head, verify
+from qa.store.chain import Head, Who, append, clock_remark, head
 from qa.store.database import Database
 from qa.store.heads import Heads
+from qa.store.intake import Intake, store
 from qa.store.tables import (
-    acquisitions,
-    details,
     entries,
     files,
     limit_sets,
-    measurements,
-    not_measured,
     phantom_definitions,
     refusals,
     runs,
-    series,
     sessions,
-    software,
-    verdicts,
 )
+from qa.store.verify import Verification, verify, verify_tables
 
-__all__ = ["Intake", "Record", "current_user", "open_record"]
+__all__ = ["Record", "current_user", "open_record"]
 
-_LIBRARIES = ("numpy", "scipy", "scikit-image", "pydicom")
 _NOWHERE: Mapping[str, str | PurePath] = {}
 
 
@@ -48,40 +41,6 @@ def current_user(name: str = "") -> Who:
         return Who(getpass.getuser(), name)
     except (KeyError, OSError, ImportError):
         return Who("unknown", name)
-
-
-@dataclass(frozen=True, eq=False)
-class Intake:
-    """One acquisition on its way into the record.
-
-    Attributes
-    ----------
-    outcome : Outcome
-        What was measured.
-    verdicts : sequence of Verdict or None
-        One for each measurement, in their order; None where no limit applies.
-    scanner_name : str
-        The scanner's name in site.toml.
-    phantom_sha256 : str
-        Content hash of the phantom's definition.
-    limits_version : int
-        Version of the limits that the verdicts were made by.
-    taken_in_at : datetime.datetime
-        The machine's clock.
-    software_version : str
-        Version of this program.
-    kept_at : mapping of str to path
-        Where each file is kept, by its SHA-256, from the department folder; where it was read, for those not named.
-    """
-
-    outcome: Outcome
-    verdicts: Sequence[Verdict | None]
-    scanner_name: str
-    phantom_sha256: str
-    limits_version: int
-    taken_in_at: datetime
-    software_version: str
-    kept_at: Mapping[str, str | PurePath] = field(default_factory=lambda: _NOWHERE)
 
 
 def open_record(place: str | Path, *, create: bool = True, heads: Path | None = None, busy_s: float = 30.0) -> "Record":
@@ -150,6 +109,12 @@ class Record:
         with self._database.reading() as connection:
             return queries.known(connection, files.c.sha256, sha256s)
 
+    def kept_at(self, sha256: str) -> PurePath | None:
+        """Give where a file that was taken in is kept, from the department folder; None where it was never taken in."""
+        with self._database.reading() as connection:
+            path = connection.execute(select(files.c.path).where(files.c.sha256 == sha256)).scalar()
+        return None if path is None else PurePath(path)
+
     def known_refusals(self, sha256s: Iterable[str]) -> set[str]:
         """Tell which of these files have been refused before."""
         with self._database.reading() as connection:
@@ -201,7 +166,7 @@ class Record:
             An acquisition has no date, so that it belongs to no session.
         """
         with self._database.writing() as connection:
-            numbers = tuple(_store(connection, intake, who or current_user()) for intake in intakes)
+            numbers = tuple(store(connection, intake, who or current_user()) for intake in intakes)
             end, _ = head(connection)
         if intakes:
             self._heads.add(end, intakes[-1].taken_in_at)
@@ -223,7 +188,7 @@ class Record:
         _need(why, "a correction")
         with self._database.writing() as connection:
             _correctable(connection, number, {"acquisition"})
-            made = _store(connection, intake, who or current_user(), corrects=number, why=why)
+            made = store(connection, intake, who or current_user(), corrects=number, why=why)
             end, _ = head(connection)
         self._heads.add(end, intake.taken_in_at)
         return made
@@ -369,8 +334,14 @@ class Record:
         anchors : iterable of (str, Head)
             Heads known from elsewhere, such as a printed report, each with a name for it; the heads file is read anyway.
         """
+        with ThreadPoolExecutor(max_workers=1) as beside, self._database.reading() as connection:
+            tables = beside.submit(self._verify_tables)
+            found = verify(connection, [*anchors, *self._heads.read()])
+            return replace(found, problems=tuple(dict.fromkeys((*found.problems, *tables.result()))))
+
+    def _verify_tables(self) -> tuple[str, ...]:
         with self._database.reading() as connection:
-            return verify(connection, [*anchors, *self._heads.read()])
+            return verify_tables(connection)
 
     def _add(self, kind: str, table: Table, row: Mapping[str, Any], *, when: datetime, who: Who | None, why: str = "") -> int:
         with self._database.writing() as connection:
@@ -396,78 +367,3 @@ def _correctable(connection: Connection, number: int, kinds: set[str]) -> None:
     later = connection.execute(select(entries.c.number).where(entries.c.corrects == number)).scalar()
     if later is not None:
         raise UsageError(f"Entry {number} was corrected by entry {later}: correct that one.")
-
-
-def _store(connection: Connection, intake: Intake, who: Who, *, corrects: int | None = None, why: str = "") -> int:
-    outcome, acquisition = intake.outcome, intake.outcome.acquisition
-    acquired_at = acquisition.first.acquired_at
-    if acquired_at is None:
-        raise UsageError(f"A series of {intake.scanner_name} has no date of acquisition: it cannot be put into a session.")
-    if len(intake.verdicts) != len(outcome.measurements):
-        raise ValueError(f"{len(intake.verdicts)} verdicts do not match {len(outcome.measurements)} measurements")
-    content = rows.content_sha256(acquisition)
-    before = queries.acquisition_of(connection, content)
-    if corrects is None and before is not None:
-        return before.entry
-    faults = rows.sound(outcome.measurements)
-    kept = [(m, v) for m, v, fault in zip(outcome.measurements, intake.verdicts, faults, strict=True) if fault is None]
-    figures, extras = rows.measurement_rows([m for m, _ in kept])
-    missing = [*outcome.not_measured, *(fault for fault in faults if fault is not None)]
-    repeats, paths = rows.series_and_file_rows(acquisition, intake.kept_at)
-    day = {"scanner_name": intake.scanner_name, "day": acquired_at.date().isoformat()}
-    session = queries.same(connection, sessions, day)
-    environment = {"version": intake.software_version, "libraries": _libraries()}
-    program = queries.same(connection, software, environment)
-    scanner, settings, pose = acquisition.scanner, acquisition.settings, outcome.pose
-    centre = (None,) * 3 if pose is None else tuple(float(v) for v in pose.centre_patient)
-
-    def of_entry(number: int) -> dict[Table, list[dict[str, Any]]]:
-        main = {
-            "session": session or number,
-            "content_sha256": content,
-            "revision": 0 if before is None else before.revision + 1,
-            "acquired_at": acquired_at.isoformat(),
-            "taken_in_at": intake.taken_in_at.isoformat(),
-            "phantom": outcome.phantom,
-            "phantom_sha256": intake.phantom_sha256,
-            "protocol": settings.protocol,
-            "coil": settings.receive_coil,
-            "field_strength_T": scanner.field_strength_T,
-            "scanner_software": scanner.software,
-            "scanner": rows.dump(asdict(scanner)),
-            "settings": rows.dump(asdict(settings)),
-            "centre_x_mm": centre[0],
-            "centre_y_mm": centre[1],
-            "centre_z_mm": centre[2],
-            "rotation_deg": None if pose is None else pose.rotation_deg,
-            "tilt_deg": None if pose is None else pose.tilt_deg,
-            "remarks": rows.dump([*acquisition.remarks, *outcome.remarks]),
-            "software": program or number,
-            "limits_version": intake.limits_version,
-        }
-        return {
-            software: [] if program else [environment],
-            sessions: [] if session else [day],
-            acquisitions: [main],
-            series: repeats,
-            files: paths,
-            measurements: figures,
-            details: [{"content": extras}],
-            not_measured: [
-                {"position": n, "quantity": m.quantity, "reason": m.reason} for n, m in enumerate(missing, start=1)
-            ],
-            verdicts: [rows.verdict_row(n, v) for n, (_, v) in enumerate(kept, start=1) if v is not None],
-        }
-
-    return append(connection, "acquisition", of_entry, at=intake.taken_in_at, who=who, why=why, corrects=corrects)
-
-
-@lru_cache(maxsize=1)
-def _libraries() -> str:
-    found = {}
-    for name in _LIBRARIES:
-        try:
-            found[name] = version(name)
-        except PackageNotFoundError:
-            continue
-    return rows.dump(found)
