@@ -253,15 +253,25 @@ class Mail(_Table):
 
 
 class Charts(_Table):
-    """Settings of baselines and control charts; None leaves the choice to `qa.judge`, where the defaults are reasoned."""
+    """Settings of baselines and control charts.
+
+    None leaves the choice to `qa.judge`, where the defaults are reasoned and their false-alarm rate is stated.
+    """
 
     baseline_sessions: Annotated[int, Field(strict=True, ge=2, le=1000)] | None = None
-    nelson_tests: tuple[Annotated[int, Field(strict=True, ge=1, le=8)], ...] | None = None
-    ewma_weight: Annotated[float, Field(strict=True, gt=0, le=1)] | None = None
-    ewma_limit: Positive | None = None
-    cusum_reference: Positive | None = None
-    cusum_decision: Positive | None = None
-    forecast_days: Annotated[int, Field(strict=True, ge=1, le=3660)] | None = None
+    nelson: tuple[Annotated[int, Field(strict=True, ge=1, le=8)], ...] | None = None
+    ewma: Switch | None = None
+    cusum: Switch | None = None
+    moving_range: Switch | None = None
+    weight: Annotated[float, Field(strict=True, gt=0, le=1)] | None = None
+    width: Positive | None = None
+    reference: Positive | None = None
+    decision: Positive | None = None
+    jump: Positive | None = None
+
+    def chosen(self) -> dict[str, Any]:
+        """Give the settings of the charts that the department chose itself, by their names in `qa.judge`."""
+        return self.model_dump(exclude_none=True, exclude={"baseline_sessions"})
 
 
 class ReportSettings(_Table):

@@ -36,6 +36,7 @@ def test_every_line_of_the_worked_example_that_is_commented_out_is_right_too(tmp
     assert site.downtimes[0].covers(date(2026, 3, 6))
     assert not site.downtimes[0].covers(date(2026, 3, 7))
     assert site.charts.baseline_sessions == 10
+    assert site.charts.chosen() == {"nelson": (1,), "ewma": True}
 
 
 def test_the_example_of_the_interface_is_right(tmp_path):
@@ -148,6 +149,8 @@ WRONG = [
     ("[mail]\nto = []\nhost = 'localhost'\n", None, ("[mail], to", "at least one")),
     ("[mail]\nto = ['a@b.example']\n", None, ("[mail], host: is missing",)),
     ("[report]\npage = 'A3'\n", None, ("[report], page", "'A4' or 'Letter'", "'A3'")),
+    ("[charts]\nnelson = [9]\n", None, ("[charts], nelson", "at most 8, found 9")),
+    ("[charts]\newma = 1\n", None, ("[charts], ewma", "true or false")),
     ("[record]\nurl = 'mysql://x/y'\n", None, ("[record]", "sqlite:///")),
     ("[record]\nurl = 'sqlite://'\n", None, ("[record]", "memory")),
     (

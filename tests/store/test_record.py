@@ -1,7 +1,7 @@
 import struct
 from dataclasses import replace
 from datetime import UTC, date, datetime, timedelta
-from pathlib import Path
+from pathlib import Path, PurePath
 
 import pytest
 from hypothesis import HealthCheck, given, settings
@@ -94,6 +94,8 @@ def test_a_file_taken_in_is_known(record, make):
     record.store_all([intake])
     assert record.known_files([*hashes, "f" * 64]) == hashes
     assert record.known_files(f"{n:064x}" for n in range(2000)) == set()
+    assert record.kept_at(f"{2:032x}{1:032x}") == PurePath("inbox/2-1.dcm")
+    assert record.kept_at("f" * 64) is None
 
 
 def test_the_same_acquisition_is_stored_once(record, make):
