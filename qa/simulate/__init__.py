@@ -7,12 +7,31 @@ if TYPE_CHECKING:
     from qa.simulate.acquire import simulate
     from qa.simulate.cases import random_setup
     from qa.simulate.dicom_out import write_dicom
+    from qa.simulate.encode import Scan
+    from qa.simulate.faults import FAULTS, with_fault, with_protocol
     from qa.simulate.setup import PLANES, Setup, default_setup
     from qa.simulate.truth import Truth, true_values
 
-__all__ = ["PLANES", "Setup", "Truth", "default_setup", "random_setup", "simulate", "true_values", "write_dicom"]
+__all__ = [
+    "FAULTS",
+    "PLANES",
+    "Scan",
+    "Setup",
+    "Truth",
+    "default_setup",
+    "random_setup",
+    "simulate",
+    "true_values",
+    "with_fault",
+    "with_protocol",
+    "write_dicom",
+]
 
 _HOME = {
+    "FAULTS": "faults",
+    "Scan": "encode",
+    "with_fault": "faults",
+    "with_protocol": "faults",
     "PLANES": "setup",
     "Setup": "setup",
     "Truth": "truth",

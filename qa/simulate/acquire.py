@@ -1,6 +1,7 @@
 """A described scan becomes the record that reading its DICOM files would give."""
 
 import hashlib
+from dataclasses import fields
 
 from qa.records import Acquisition, Scanner, Series, Settings
 from qa.simulate.encode import Scan
@@ -10,8 +11,22 @@ __all__ = ["simulate", "uid"]
 
 
 def uid(setup: Setup, *what: object) -> str:
-    """Return a unique identifier that depends on the scan's seed and identity alone, under the 2.25 root (PS3.5, B.2)."""
-    said = repr((setup.seed, setup.station, setup.serial, setup.acquired_at.isoformat(), setup.description, *what))
+    """Return a unique identifier that depends on the scan's settings and seed alone, under the 2.25 root (PS3.5, B.2).
+
+    Parameters
+    ----------
+    setup : Setup
+        The scan: another one, different in any setting, has other identifiers.
+    *what
+        What is identified.
+
+    Returns
+    -------
+    str
+        At most 44 characters.
+    """
+    settings = [(f.name, getattr(setup, f.name)) for f in fields(setup) if f.name != "phantom"]
+    said = repr((setup.phantom.name, setup.phantom.sha256, settings, what))
     return f"2.25.{int.from_bytes(hashlib.sha256(said.encode()).digest()[:16], 'big')}"
 
 

@@ -156,7 +156,7 @@ class Scan:
         setup = self.setup
         plane = setup.planes[(setup.slices - 1) // 2]
         centre = plane.from_patient(np.asarray(setup.centre_patient))
-        reach = math.sqrt(setup.phantom.body.region_percent / 100) * setup.body_diameter_mm / 2
+        reach = setup.region_radius_mm(setup.body_diameter_mm / 2)
         rings = np.sqrt((np.arange(48) + 0.5) / 48) * reach
         turns = np.arange(96) * 2 * math.pi / 96
         x, y = centre[0] + np.outer(rings, np.cos(turns)), centre[1] + np.outer(rings, np.sin(turns))

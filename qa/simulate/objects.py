@@ -121,11 +121,12 @@ def _cylinder(setup: Setup, cut: FineSlice) -> Floats:
     ring = np.abs(out_of - radius) < band
     X, Y = cut.X[ring], cut.Y[ring]
     unit = np.stack([X, Y, np.zeros_like(X)], axis=-1) / out_of[ring][:, None]
-    steep = cut.steepness(unit, ring)
+    steep = np.maximum(cut.steepness(unit, ring), 1e-3)  # a slice that grazes the side
+    bend = cut.blur**2 / (2 * radius) * float(setup.axis[2]) ** 2
     share = np.zeros_like(X)
     for u, w in zip(heights, weights, strict=True):
         away = np.hypot(X + u * cut.along[0], Y + u * cut.along[1])
-        share += w * step((radius - cut.blur**2 / (2 * radius) - away) / steep, cut.blur)
+        share += w * step((radius - bend - away) / steep, cut.blur)
     filled[ring] = share
     if float(np.abs(cut.Z).max()) + cut.reach > extent / 2:
         filled *= cut.between(cut.Z, cut.along[2], -extent / 2, extent / 2, cut.slope((0, 0, 1)))[0]

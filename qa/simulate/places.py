@@ -52,7 +52,7 @@ def on_plane(setup: Setup, plane: Plane, X: ArrayLike, Y: ArrayLike) -> Floats:
 
 def seen_centre(setup: Setup, plane: Plane) -> tuple[float, float]:
     """Where a slice shows the phantom's axis, or a sphere's centre projected on it: in-plane mm of the image."""
-    if setup.phantom.body.shape == "cylinder":
+    if setup.phantom.body.shape == "cylinder" and not setup.lengthwise:
         at = on_plane(setup, plane, 0.0, 0.0)
     else:
         at = plane.from_patient(np.asarray(setup.centre_patient))
@@ -82,12 +82,14 @@ def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], directio
 
     def filled(distance: float) -> bool:
         at = phantom_place(setup, plane, centre[0] + distance * direction[0], centre[1] + distance * direction[1])
+        if setup.lengthwise:
+            return bool(abs(at[2]) < (setup.phantom.extent_mm or 0.0) / 2)
         if not sphere:
             return bool(np.hypot(at[0], at[1]) < radius)
         half = np.sqrt(max(radius**2 - (float(at @ at) - height**2), 0.0))
         return bool(setup.profile.cumulative(height + half) - setup.profile.cumulative(height - half) > 0.5)
 
-    low, high = 0.0, 2.5 * radius
+    low, high = 0.0, 2.5 * max(radius, (setup.phantom.extent_mm or 0.0) / 2)
     for _ in range(60):
         middle = 0.5 * (low + high)
         low, high = (middle, high) if filled(middle) else (low, middle)

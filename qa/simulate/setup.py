@@ -16,6 +16,7 @@ import numpy as np
 from qa.errors import SettingError
 from qa.geometry import Floats, Plane
 from qa.phantoms import Phantom
+from qa.simulate.checks import check
 from qa.simulate.profile import Profile
 from qa.simulate.signal import larmor_MHz, spin_echo, spoiled_gradient_echo
 
@@ -50,7 +51,8 @@ class Setup:
     profile_edge_mm : float
         Softness of the slice profile: standard deviation of the Gaussian that blurs a rectangle; 0 is rectangular.
     centre_patient, rotation_deg, tilt_x_deg, tilt_y_deg
-        The phantom's centre, its turn about its own axis (x towards y), and its tilt about the image's x and y.
+        The phantom's centre, its turn about its own axis (x towards y), and its tilt about the image's x and y. At a tilt of
+        90 degrees the slices cut it lengthwise; the body is then exact, the inserts' edges across the slice are not.
     snr : float
         Mean noise-free signal over the measurement region of uniform fill, first repeat, channels all in health, over the
         standard deviation of the real part of one channel's noise; infinity for no noise.
@@ -214,6 +216,16 @@ class Setup:
         return turned
 
     @property
+    def axis(self) -> Floats:
+        """The phantom's axis in image axes: along rows, along columns, along the slice normal."""
+        return np.asarray(self.tilt[:, 2])
+
+    @property
+    def lengthwise(self) -> bool:
+        """Whether the slices cut a cylinder along its length, as a localiser does."""
+        return self.phantom.body.shape == "cylinder" and abs(float(self.axis[2])) < 0.5
+
+    @property
     def profile(self) -> Profile:
         """The slice profile."""
         return Profile(self.thickness_mm, self.profile_edge_mm)
@@ -230,6 +242,13 @@ class Setup:
         if self.phase_encode == "column":
             return pixels * self.pixel_mm[1], 0.0
         return 0.0, pixels * self.pixel_mm[0]
+
+    def region_radius_mm(self, body_radius_mm: float, percent: float | None = None) -> float:
+        """Radius of the measurement region in a cross-section: by area where the definition says so, else by its share."""
+        body = self.phantom.body
+        if body.region_area_cm2 is not None:
+            return math.sqrt(100 * body.region_area_cm2 / math.pi)
+        return math.sqrt((body.region_percent if percent is None else percent) / 100) * body_radius_mm
 
     def started(self, repeat: int) -> datetime:
         """Time at which a repeat (counted from 0) began."""
@@ -283,115 +302,3 @@ def default_setup(phantom: Phantom, **changes: Any) -> Setup:  # noqa: ANN401 - 
 
 def _vector(values: Floats) -> Vector:
     return float(values[0]), float(values[1]), float(values[2])
-
-
-_POSITIVE = (
-    "thickness_mm",
-    "snr",
-    "level",
-    "bandwidth_hz_per_pixel",
-    "repetition_ms",
-    "t1_ms",
-    "t2_ms",
-    "proton_density",
-    "field_strength_T",
-)
-_COUNTS = ("slices", "channels", "repeats", "averages")
-_RANGES: dict[str, tuple[float, float]] = {
-    "profile_edge_mm": (0, 10),
-    "tilt_x_deg": (-60, 60),
-    "tilt_y_deg": (-60, 60),
-    "rotation_deg": (-360, 360),
-    "shading_percent": (0, 60),
-    "shading_curvature": (-1, 1),
-    "ghost_percent": (0, 100),
-    "ghost_shift": (0, 0.5),
-    "gain_drift_percent": (-50, 50),
-    "gain_drift_slope_percent": (-50, 50),
-    "scale_x_percent": (-20, 20),
-    "scale_y_percent": (-20, 20),
-    "nonlinearity_x_mm": (-6, 6),
-    "nonlinearity_y_mm": (-6, 6),
-    "partial_fourier": (0.5, 1),
-    "acquired_fraction": (0.25, 1),
-    "echo_ms": (0, math.inf),
-    "flip_deg": (0, 180),
-    "repeat_seconds": (0, math.inf),
-}
-
-
-def check(setup: Setup) -> None:
-    """Refuse a scan that cannot be, in one sentence that names the setting."""
-    for name in _COUNTS:
-        value = getattr(setup, name)
-        if not isinstance(value, int) or value < 1:
-            raise SettingError(f"{name} is {value!r}: it must be a whole number, at least 1.")
-    for name in _POSITIVE:
-        value = getattr(setup, name)
-        if not value > 0 or (math.isinf(value) and name != "snr"):
-            raise SettingError(f"{name} is {value:g}: it must be above 0.")
-    for name, (low, high) in _RANGES.items():
-        value = getattr(setup, name)
-        if not low <= value <= high:
-            raise SettingError(f"{name} is {value:g}: it must lie from {low:g} to {high:g}.")
-    if setup.repetition_ms <= setup.echo_ms:
-        raise SettingError(f"echo_ms is {setup.echo_ms:g}: it must be below repetition_ms, {setup.repetition_ms:g}.")
-    _check_grid(setup)
-    _check_coil(setup)
-    _check_fit(setup)
-
-
-def _check_grid(setup: Setup) -> None:
-    if len(setup.matrix) != 2 or not all(isinstance(n, int) and 16 <= n <= 2048 for n in setup.matrix):
-        raise SettingError(f"matrix is {setup.matrix!r}: rows and columns must be whole numbers from 16 to 2048.")
-    if len(setup.pixel_mm) != 2 or not all(0.05 <= p <= 20 for p in setup.pixel_mm):
-        raise SettingError(f"pixel_mm is {setup.pixel_mm!r}: both spacings must lie from 0.05 to 20 mm.")
-    if setup.spacing_mm is not None and not 0 < setup.spacing_mm < math.inf:
-        raise SettingError(f"spacing_mm is {setup.spacing_mm:g}: it must be above 0.")
-    row, column = np.asarray(setup.row_direction), np.asarray(setup.column_direction)
-    if not np.allclose([row @ row, column @ column, row @ column], [1, 1, 0], atol=1e-6):
-        raise SettingError("row_direction and column_direction must be unit vectors at right angles to each other.")
-
-
-def _check_coil(setup: Setup) -> None:
-    gains = setup.channel_gains
-    if gains is not None and (len(gains) != setup.channels or min(gains) < 0 or max(gains) <= 0):
-        raise SettingError(f"channel_gains must hold {setup.channels} values, none negative and not all zero.")
-    if isinstance(setup.noise_correlation, tuple):
-        matrix = np.asarray(setup.noise_correlation, dtype=np.float64)
-        if matrix.shape != (setup.channels, setup.channels) or not np.allclose(matrix, matrix.T):
-            raise SettingError(f"noise_correlation must be a symmetric matrix of {setup.channels} by {setup.channels} values.")
-        if not np.allclose(np.diag(matrix), 1) or np.linalg.eigvalsh(matrix)[0] <= 0:
-            raise SettingError("noise_correlation must have ones on its diagonal and be positive definite.")
-    elif not 0 <= setup.noise_correlation < 1:
-        raise SettingError(f"noise_correlation is {setup.noise_correlation:g}: it must lie from 0 to below 1.")
-
-
-def _check_fit(setup: Setup) -> None:
-    if setup.diameter_mm is None and setup.phantom.body.diameter_mm is None:
-        raise SettingError(f"diameter_mm is missing: the definition of {setup.phantom.name} leaves the diameter open.")
-    if setup.diameter_mm is not None:
-        if not setup.diameter_mm > 0:
-            raise SettingError(f"diameter_mm is {setup.diameter_mm:g}: it must be above 0.")
-        if setup.phantom.body.diameter_mm not in {None, setup.diameter_mm}:
-            raise SettingError(
-                f"diameter_mm may not be set: {setup.phantom.name} is {setup.phantom.body.diameter_mm:g} mm wide."
-            )
-    radius = setup.body_diameter_mm / 2
-    (rows, columns), (dy, dx) = setup.matrix, setup.pixel_mm
-    for plane in setup.planes:
-        centre = plane.from_patient(np.asarray(setup.centre_patient))
-        axis = setup.axes.T @ setup.orientation[:, 2]
-        if setup.phantom.body.shape == "cylinder" and abs(axis[2]) > 0.1:
-            centre = centre - axis * centre[2] / axis[2]
-        shift = setup.off_resonance_shift_mm
-        for k, (count, step, scale, name) in enumerate(
-            ((columns, dx, setup.scale_x_percent, "columns"), (rows, dy, setup.scale_y_percent, "rows"))
-        ):
-            reach = radius * (1 + scale / 100)
-            at = float(centre[k]) + shift[k]
-            if at - reach < -0.5 * step + step or at + reach > (count - 0.5) * step - step:
-                raise SettingError(
-                    f"matrix and pixel_mm give a field of view of {count * step:g} mm along {name}: the phantom, "
-                    f"{2 * radius:g} mm wide, does not fit it where centre_patient puts it."
-                )

@@ -19,7 +19,7 @@ Box = tuple[float, float, float, float]
 _DISC_MM = math.sqrt(100 / math.pi)  # radius of 1 cm2
 
 
-def signal_truths(machine: Scan, slice_index: int, outline: tuple[tuple[float, float], float]) -> Found:
+def signal_truths(machine: Scan, slice_index: int, outline: tuple[tuple[float, float], float], inner: float) -> Found:
     """Return value and details of the signal quantities of one slice.
 
     Parameters
@@ -30,6 +30,8 @@ def signal_truths(machine: Scan, slice_index: int, outline: tuple[tuple[float, f
         Counted from 0.
     outline : tuple
         Centre (x, y) and radius of the body in the image, in-plane mm.
+    inner : float
+        Radius of the measurement region, mm.
 
     Returns
     -------
@@ -42,7 +44,6 @@ def signal_truths(machine: Scan, slice_index: int, outline: tuple[tuple[float, f
     clean = machine.clean(slice_index)
     amplitude = _combined(clean)
     mean, variance = _expected(setup, clean, amplitude, machine.sigma)
-    inner = math.sqrt(setup.phantom.body.region_percent / 100) * radius
     x, y = plane.grid_mm()
     region = np.hypot(x - cx, y - cy) <= inner
     bright, seen = float(amplitude[region].mean()), float(mean[region].mean())

@@ -44,6 +44,8 @@ def true_values(setup: Setup, machine: Scan | None = None) -> dict[str, Truth]:
         `on_axis_mm`; of `setup_offset` `patient_mm`; of all that are read in one slice, `slice`.
     """
     truths = {"centre_frequency": Truth(setup.frequency_MHz)}
+    if setup.lengthwise:
+        return truths | _axial_length(setup)
     truths |= _lengths(setup)
     uniform = uniform_slices(setup)
     if uniform:
@@ -60,7 +62,7 @@ def true_values(setup: Setup, machine: Scan | None = None) -> dict[str, Truth]:
 def uniform_slices(setup: Setup) -> tuple[int, ...]:
     """Numbers, from 1, of the slices in which the model shows nothing but fill, well inside the body."""
     found = []
-    axis = float(abs(setup.axes[:, 2] @ setup.orientation[:, 2]))
+    axis = abs(float(setup.axis[2]))
     half = (setup.phantom.extent_mm or setup.body_diameter_mm) / 2
     sideways = setup.body_diameter_mm / 2 * math.sqrt(max(0.0, 1 - axis**2))
     reach = setup.profile.reach_mm * axis
@@ -92,9 +94,17 @@ def _signals(machine: Scan, uniform: tuple[int, ...]) -> dict[int, Found]:
         key = number if same is None else same
         if key not in known:
             diameter = sum(_length(setup, plane, angle) for angle in _ANGLES) / len(_ANGLES)
-            known[key] = signal_truths(machine, number - 1, (seen_centre(setup, plane), diameter / 2))
+            inner = setup.region_radius_mm(diameter / 2, _section_percent(setup, plane))
+            known[key] = signal_truths(machine, number - 1, (seen_centre(setup, plane), diameter / 2), inner)
         per_slice[number] = known[key]
     return per_slice
+
+
+def _section_percent(setup: Setup, plane: Plane) -> float | None:
+    """Share of the cross-section that a uniform section asks for, None where the body's holds."""
+    height = _height(setup, plane)
+    named = (s for s in setup.phantom.sections_at(height, height + 1e-9) if isinstance(s, Uniform))
+    return next((s.region_percent for s in named if s.region_percent is not None), None)
 
 
 def _signal_slice(setup: Setup, uniform: tuple[int, ...]) -> int:
@@ -142,6 +152,19 @@ def _lengths(setup: Setup) -> dict[str, Truth]:
     }
 
 
+def _axial_length(setup: Setup) -> dict[str, Truth]:
+    """Length end to end of a cylinder cut lengthwise, along its axis as the image shows it."""
+    centre = np.asarray(setup.centre_patient)
+    number = 1 + min(range(setup.slices), key=lambda k: abs(float(setup.planes[k].from_patient(centre)[2])))
+    plane = setup.planes[number - 1]
+    if abs(float(plane.from_patient(centre)[2])) >= setup.body_diameter_mm / 2:
+        return {}
+    start = seen_centre(setup, plane)
+    direction = setup.axis[:2] / math.hypot(*setup.axis[:2])
+    length = sum(outline_mm(setup, plane, start, (s * direction[0], s * direction[1])) for s in (1, -1))
+    return {"length_axial": Truth(length, {number: length}, {"slice": number})}
+
+
 def _pose(setup: Setup) -> dict[str, Truth]:
     middle = setup.planes[(setup.slices - 1) // 2]
     centre = middle.from_patient(np.asarray(setup.centre_patient))
@@ -150,6 +173,5 @@ def _pose(setup: Setup) -> dict[str, Truth]:
     from_isocentre = middle.axes.T @ seen
     found = {"setup_offset": Truth(math.hypot(from_isocentre[0], from_isocentre[1]), {}, {"patient_mm": seen.tolist()})}
     if setup.phantom.body.shape == "cylinder":
-        axis = abs(float(setup.axes[:, 2] @ setup.orientation[:, 2]))
-        found["setup_tilt"] = Truth(math.degrees(math.acos(min(1.0, axis))))
+        found["setup_tilt"] = Truth(math.degrees(math.acos(min(1.0, abs(float(setup.axis[2]))))))
     return found
