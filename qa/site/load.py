@@ -4,6 +4,7 @@ import re
 import tomllib
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
+from datetime import date
 from fnmatch import fnmatchcase
 from pathlib import Path
 from typing import Any
@@ -115,6 +116,10 @@ class Site:
             scheme, _, path = url.partition(":///")
             return f"{scheme}:///{(self.folder / unquote(path)).resolve()}"
         return url if "+" in url.partition(":")[0] else url.replace("postgresql:", "postgresql+psycopg:", 1)
+
+    def away(self, scanner_name: str) -> tuple[tuple[date, date | None], ...]:
+        """Give the planned downtime of a scanner: first and last day, no last day meaning until further notice."""
+        return tuple((d.first_day, d.last_day) for d in self.downtimes if any(fnmatchcase(scanner_name, p) for p in d.scanner))
 
     def scanner(self, name: str) -> SiteScanner:
         """Look a scanner up by its name.
