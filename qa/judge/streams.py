@@ -1,0 +1,248 @@
+"""Histories: the values of one quantity of one scanner that belong together over time, and where they start anew.
+
+Acquisitions with the same phantom and settings form a stream. When the settings change from one day to the next for good, the
+stream goes on, in a new segment; settings that are used side by side make streams of their own. A stream has one value a
+day: measured again on the same day, the last counts.
+"""
+
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from datetime import date
+from itertools import pairwise
+from operator import attrgetter
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qa.geometry import Floats
+from qa.records import Event, Measurement, RecordedAcquisition, Session, Settings, Verdict
+
+__all__ = ["SegmentStart", "Stream", "streams"]
+
+_Values = tuple[object, ...]
+_SAME = 0.01
+_SETTING_WORDS: Mapping[str, str] = {
+    "protocol": "protocol",
+    "sequence": "sequence",
+    "slice_thickness_mm": "slice thickness (mm)",
+    "slice_spacing_mm": "slice spacing (mm)",
+    "pixel_mm": "pixel size (mm)",
+    "matrix": "matrix",
+    "repetition_ms": "repetition time (ms)",
+    "echo_ms": "echo time (ms)",
+    "flip_deg": "flip angle (degrees)",
+    "averages": "averages",
+    "bandwidth_hz_per_pixel": "bandwidth (Hz per pixel)",
+    "phase_encode": "phase-encode direction",
+    "receive_coil": "receive coil",
+    "parallel_imaging": "parallel imaging",
+    "filtered": "filter",
+}
+"""Settings whose change starts a new segment. The centre frequency is not among them: it is measured."""
+_values: Callable[[Settings], _Values] = attrgetter(*_SETTING_WORDS)
+
+
+@dataclass(frozen=True)
+class SegmentStart:
+    """Where a stream starts anew: index of its first value, its day, and why, as a clause ("the receive coil changed ...")."""
+
+    index: int
+    day: date
+    reason: str
+
+
+@dataclass(frozen=True, eq=False)
+class Stream:
+    """One quantity of one scanner, n values in order of day.
+
+    Attributes
+    ----------
+    scanner_name, quantity, phantom, unit : str
+        What it is.
+    protocol, coil : str
+        Of the latest value.
+    days : (n,) int
+        Proleptic ordinals (`date.toordinal`), strictly increasing.
+    values, uncertainties : (n,) float
+        In `unit`; standard uncertainties.
+    verdicts : tuple of Verdict or None
+        As the record keeps them.
+    acquisitions : tuple of int
+        Identifiers of the recorded acquisitions, to find the image.
+    starts : tuple of SegmentStart
+        At least one, at index 0.
+    latest : Measurement
+        The latest value with its details.
+    slice_thickness_mm, field_strength_T : float or None
+        Of the latest value, for choosing its limit.
+    """
+
+    scanner_name: str
+    quantity: str
+    phantom: str
+    protocol: str
+    coil: str
+    unit: str
+    days: NDArray[np.int64]
+    values: Floats
+    uncertainties: Floats
+    verdicts: tuple[Verdict | None, ...]
+    acquisitions: tuple[int, ...]
+    starts: tuple[SegmentStart, ...]
+    latest: Measurement
+    slice_thickness_mm: float | None = None
+    field_strength_T: float | None = None
+
+    @property
+    def last_day(self) -> date:
+        """Day of the latest value."""
+        return date.fromordinal(int(self.days[-1]))
+
+    @property
+    def segment(self) -> slice:
+        """The values of the latest segment."""
+        return slice(self.starts[-1].index, None)
+
+
+class _Conditions(NamedTuple):
+    settings: int
+    software: str
+    method: str
+    method_version: int
+
+
+class _Point(NamedTuple):
+    day: int
+    conditions: _Conditions
+    measurement: Measurement
+    verdict: Verdict | None
+    acquisition: RecordedAcquisition
+
+
+def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[Stream, ...]:
+    """Sort the sessions of one scanner into streams.
+
+    Parameters
+    ----------
+    sessions : iterable of Session
+        Of one scanner.
+    events : sequence of Event
+        Of the same scanner; one that restarts baselines starts a new segment of the quantities it concerns. What was
+        measured on the very day of an event counts as after it.
+
+    Returns
+    -------
+    tuple of Stream
+        In order of quantity, phantom and first day.
+    """
+    ways = _Ways()
+    found: dict[tuple[str, str], dict[int, dict[int, _Point]]] = {}
+    for session in sorted(sessions, key=lambda s: s.day):
+        day = session.day.toordinal()
+        for acquisition in session.acquisitions:
+            way = ways.number(acquisition.settings)
+            for judged in acquisition.judged:
+                measurement = judged.measurement
+                conditions = _Conditions(way, acquisition.scanner.software, measurement.method, measurement.method_version)
+                by_way = found.setdefault((measurement.quantity, acquisition.phantom), {})
+                by_way.setdefault(way, {})[day] = _Point(day, conditions, measurement, judged.verdict, acquisition)
+    restarts = sorted((e for e in events if e.restarts_baseline), key=lambda e: e.day)
+    return tuple(
+        _stream(chain, ways, [e for e in restarts if not e.quantities or quantity in e.quantities])
+        for (quantity, _), by_way in sorted(found.items())
+        for chain in _chains([list(points.values()) for points in by_way.values()])
+    )
+
+
+class _Ways:
+    """Settings by number; such as differ by less than 1 % in every figure are the same."""
+
+    def __init__(self) -> None:
+        self.known: list[_Values] = []
+        self.numbers: dict[_Values, int] = {}
+
+    def number(self, settings: Settings) -> int:
+        values = _values(settings)
+        found = self.numbers.get(values)
+        if found is None:
+            found = next((i for i, other in enumerate(self.known) if all(map(_same, other, values))), len(self.known))
+            if found == len(self.known):
+                self.known.append(values)
+            self.numbers[values] = found
+        return found
+
+
+def _same(a: object, b: object) -> bool:
+    if isinstance(a, tuple) and isinstance(b, tuple):
+        return len(a) == len(b) and all(map(_same, a, b))
+    if isinstance(a, float) and isinstance(b, float):
+        return abs(a - b) <= _SAME * max(abs(a), abs(b))
+    return a == b
+
+
+def _say(value: object) -> str:
+    if isinstance(value, tuple):
+        return " by ".join(_say(v) for v in value)
+    if isinstance(value, bool):
+        return "on" if value else "off"
+    if isinstance(value, float):
+        return f"{value:g}"
+    return "unknown" if value is None or value == "" else str(value)
+
+
+def _chains(groups: Iterable[list[_Point]]) -> list[list[_Point]]:
+    """Join groups that follow each other in time, those of one protocol first; such as overlap stay apart."""
+    chains: list[list[_Point]] = []
+    for group in sorted(groups, key=lambda g: (g[0].day, g[-1].day)):
+        protocol = group[0].acquisition.settings.protocol
+        ended = [chain for chain in chains if chain[-1].day < group[0].day]
+        if ended:
+            max(ended, key=lambda c: (c[-1].acquisition.settings.protocol == protocol, c[-1].day)).extend(group)
+        else:
+            chains.append(group)
+    return chains
+
+
+def _stream(points: list[_Point], ways: _Ways, restarts: Sequence[Event]) -> Stream:
+    last = points[-1]
+    starts = [SegmentStart(0, date.fromordinal(points[0].day), "the first session")]
+    for index, (old, new) in enumerate(pairwise(points), start=1):
+        reasons = [] if old.conditions == new.conditions else list(_changes(old.conditions, new.conditions, ways))
+        reasons += [
+            f"the baseline was restarted: {event.text}" for event in restarts if old.day < event.day.toordinal() <= new.day
+        ]
+        if reasons:
+            starts.append(SegmentStart(index, date.fromordinal(new.day), "; ".join(reasons)))
+    return Stream(
+        last.acquisition.scanner_name,
+        last.measurement.quantity,
+        last.acquisition.phantom,
+        last.acquisition.settings.protocol,
+        last.acquisition.settings.receive_coil,
+        last.measurement.unit,
+        np.array([p.day for p in points], dtype=np.int64),
+        np.array([p.measurement.value for p in points], dtype=float),
+        np.array([p.measurement.standard_uncertainty for p in points], dtype=float),
+        tuple(p.verdict for p in points),
+        tuple(p.acquisition.identifier for p in points),
+        tuple(starts),
+        last.measurement,
+        last.acquisition.settings.slice_thickness_mm,
+        last.acquisition.scanner.field_strength_T,
+    )
+
+
+def _changes(old: _Conditions, new: _Conditions, ways: _Ways) -> Iterator[str]:
+    if old.settings != new.settings:
+        for word, a, b in zip(_SETTING_WORDS.values(), ways.known[old.settings], ways.known[new.settings], strict=True):
+            if not _same(a, b):
+                yield f"{word} changed from {_say(a)} to {_say(b)}"
+    if old.software != new.software:
+        yield f"scanner software changed from {_say(old.software)} to {_say(new.software)}"
+    if old[2:] != new[2:]:
+        yield f"the method changed from {_method(old)} to {_method(new)}"
+
+
+def _method(conditions: _Conditions) -> str:
+    return f"{conditions.method} (version {conditions.method_version})"
