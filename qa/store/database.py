@@ -20,7 +20,7 @@ from qa.store.tables import CONTENT_TABLES
 
 __all__ = ["HEAD_REVISION", "Database", "check_tables", "upgrade"]
 
-HEAD_REVISION = "0001"
+HEAD_REVISION = "0002"
 """The newest migration; a test holds it against the folder of migrations."""
 
 _APPLICATION = 0x45766E66

@@ -25,8 +25,10 @@ from sqlalchemy import (
 __all__ = [
     "CONTENT_TABLES",
     "acquisitions",
+    "baselines",
     "details",
     "entries",
+    "events",
     "files",
     "limit_sets",
     "measurements",
@@ -37,6 +39,7 @@ __all__ = [
     "runs",
     "series",
     "sessions",
+    "sign_offs",
     "software",
     "verdicts",
 ]
@@ -232,6 +235,50 @@ runs = Table(
     Column("summary", Text, nullable=False, comment="JSON: what was done"),
 )
 
+events = Table(
+    "events",
+    metadata,
+    _entry(),
+    Column("scanner_name", Text, nullable=False),
+    Column("day", Text, nullable=False),
+    Column("until", Text, comment="last day, for what lasts"),
+    Column("kind", Text, nullable=False),
+    Column("text", Text, nullable=False),
+    Column("quantities", Text, nullable=False, comment="JSON: the quantities concerned, none meaning all"),
+    Column("restarts_baseline", Integer, nullable=False, comment="1: what came before no longer counts"),
+)
+
+baselines = Table(
+    "baselines",
+    metadata,
+    _entry(),
+    Column("scanner_name", Text, nullable=False),
+    Column("quantity", Text, nullable=False),
+    Column("value", Double, nullable=False),
+    Column("standard_uncertainty", Double, nullable=False),
+    Column("scatter", Double),
+    Column("sessions", Integer, nullable=False, comment="how many it rests on, 0 where set by hand"),
+    Column("since", Text, nullable=False),
+    Column("phantom", Text, nullable=False),
+    Column("protocol", Text, nullable=False),
+    Column("coil", Text, nullable=False),
+    Column("method", Text, nullable=False),
+    Column("rests_on", Text, nullable=False, comment="JSON: numbers of the acquisitions it was taken from"),
+)
+
+sign_offs = Table(
+    "sign_offs",
+    metadata,
+    _entry(),
+    Column("scanner_name", Text, nullable=False),
+    Column("first_day", Text, nullable=False),
+    Column("last_day", Text, nullable=False),
+    Column("comment", Text, nullable=False),
+    Column("sessions", Integer, nullable=False, comment="how many the period held when it was signed"),
+    Column("head_number", Integer, nullable=False, comment="end of the record when it was signed"),
+    Column("head_hash", Text, nullable=False),
+)
+
 CONTENT_TABLES = (
     software,
     limit_sets,
@@ -246,5 +293,8 @@ CONTENT_TABLES = (
     verdicts,
     refusals,
     runs,
+    events,
+    baselines,
+    sign_offs,
 )
 """All tables whose rows an entry's hash covers, in the order in which it covers them and in which they are written."""

@@ -1,4 +1,4 @@
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 
 import numpy as np
@@ -7,6 +7,8 @@ import pytest
 from qa.geometry import Plane
 from qa.records import (
     Acquisition,
+    Baseline,
+    Event,
     Measurement,
     NotMeasured,
     Outcome,
@@ -90,8 +92,26 @@ class Maker:
         }
         return Intake(outcome, verdicts, scanner_name, limits_version=version, **{**given, **other})
 
+    def event(self, **other):
+        given = {"scanner_name": "north-3t", "day": date(2026, 3, 1), "kind": "service", "text": "gradient amplifier replaced",
+                 "quantities": ("ghosting", "snr"), "restarts_baseline": True, "until": date(2026, 3, 2)}  # fmt: skip
+        return Event(**{**given, **other})
+
+    def baseline(self, **other):
+        given = {"scanner_name": "north-3t", "quantity": "snr", "value": 200 / 3, "standard_uncertainty": 0.1 + 0.2,
+                 "scatter": 1 / 7, "sessions": 10, "since": date(2026, 3, 2), "phantom": "sphere-170", "protocol": "QA_SE",
+                 "coil": "HEAD", "method": "median"}  # fmt: skip
+        return Baseline(**{**given, **other})
+
+    def decide(self, record):
+        """Put an event, a baseline and a sign-off into a record that has sessions."""
+        today, when = date(2026, 3, 31), self.now + timedelta(days=29)
+        record.add_event(self.event(), today=today, when=when, who=self.who)
+        record.set_baseline(self.baseline(), today=today, when=when, why="accepted", rests_on=(3, 4), who=self.who)
+        record.sign("north-3t", date(2026, 3, 1), today, comment="seen", who=self.who, today=today, when=when)
+
     def fill(self, record, sessions=3):
-        """Put one version of the limits, a phantom, some sessions and a refusal into a record."""
+        """Put one version of the limits, a phantom, some sessions, a refusal and a run into a record."""
         record.limits_version('[{"quantity":"snr","lower":190.1}]', self.who, self.now, "first limits")
         record.keep_phantom("sphere-170", "[about]\n", self.now, who=self.who)
         for n in range(sessions):
@@ -122,6 +142,7 @@ def filled(tmp_path_factory):
     place = tmp_path_factory.mktemp("filled") / "evenfield.db"
     with open_record(place) as opened:
         Maker().fill(opened)
+        Maker().decide(opened)
     return place
 
 

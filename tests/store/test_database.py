@@ -11,8 +11,9 @@ from alembic.migration import MigrationContext
 from alembic.script import ScriptDirectory
 
 from qa.errors import FaultError, SettingError
-from qa.store import open_record
+from qa.store import Record, open_record
 from qa.store.database import HEAD_REVISION, Database, upgrade
+from qa.store.heads import Heads
 from qa.store.tables import metadata
 
 
@@ -256,15 +257,27 @@ def test_two_programs_that_write_at_once_lose_nothing(path, make):
 
 def test_a_record_of_the_first_version_is_brought_up_to_date(path, make):
     database = Database(path)
-    database._make_empty(path)
-    database._write_ahead()
+    database._prepare_file(create=True)
     with database.writing() as connection:
         upgrade(connection, "0001")
-    with open_record(path) as record:
-        assert record.head().number == 0
+    with Record(database, Heads(path.with_name("evenfield.db.heads"))) as record:
         make.fill(record)
+        before = record.head()
+        assert "sign_offs" not in tables(path)
+    with open_record(path) as record:
+        assert record.head() == before
         assert record.verify().whole
-    database.close()
+        assert len(record.sessions()) == 3
+        make.decide(record)
+        assert record.verify().whole
+        assert len(record.sign_offs()) == 1
+
+
+def tables(path):
+    connection = sqlite3.connect(path)
+    found = {name for (name,) in connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
+    connection.close()
+    return found
 
 
 def test_migrations_travel_in_the_wheel(tmp_path):

@@ -215,12 +215,12 @@ def test_a_missing_changed_or_added_trigger_is_found(copy):
 
 
 def test_any_byte_changed_in_the_file_is_found_or_changes_nothing(copy):
-    """350 bytes anywhere: the record does not open, or is not whole, or still says every word that it said."""
+    """240 bytes anywhere: the record does not open, or is not whole, or still says every word that it said."""
     whole, said = copy.read_bytes(), dump(copy)
     rng = random.Random(7)  # noqa: S311 - the same places every time
     # As many where text and numbers are as anywhere else: most of a young file is empty.
     used = [place for place, byte in enumerate(whole) if byte]
-    places = [*(rng.randrange(len(whole)) for _ in range(100)), *(rng.choice(used) for _ in range(250))]
+    places = [*(rng.randrange(len(whole)) for _ in range(60)), *(rng.choice(used) for _ in range(180))]
     silent = 0
     for place in places:
         changed = bytearray(whole)
@@ -235,4 +235,4 @@ def test_any_byte_changed_in_the_file_is_found_or_changes_nothing(copy):
         if not found:
             silent += 1
             assert dump(copy) == said, place
-    assert silent < 150
+    assert silent < 100
