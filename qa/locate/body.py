@@ -15,7 +15,7 @@ SIZE_TOLERANCE = 0.04
 """How far the size may be from the definition before it is taken for another phantom: gradients are out by less."""
 
 _OVALITY = 0.05
-_SECOND_OBJECT = 0.04
+_SECOND_OBJECT = 0.01
 _NOT_A_SPHERE = 0.02
 
 
@@ -85,7 +85,7 @@ def _not_round(silhouettes: tuple[Silhouette, ...], outlines: tuple[Outline, ...
             "it does not lie across its axis, or the image is grossly distorted"
         )
     if (
-        np.median([o.section.edge_fraction for o in seen]) < 0.6
+        np.median([o.section.edge_fraction for o in seen]) < 0.75
         or np.median([o.section.rms_mm / o.section.radius_mm for o in seen]) > 0.04
     ):
         return "the object has no round outline: this is not the phantom, or the image is grossly distorted"

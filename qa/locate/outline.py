@@ -149,7 +149,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
         middle = centre + fit[1:3]
         off_circle = edge[kept] - harmonics(angles[kept], 1) @ fit[:3]
         off_shape = edge[kept] - harmonics(angles[kept], 2) @ fit
-        independent = min(float(kept.sum()), 2 * np.pi * radius * kept.mean() / (2.5 * pixel))
+        independent = min(kept.sum() / 1.5, 2 * np.pi * radius * kept.mean() / (2.5 * pixel))
         scatter = float(np.sqrt(np.mean(off_shape**2)))
         x, y = middle[0] + radius * np.cos(angles), middle[1] + radius * np.sin(angles)
         far = [(-1.5 * mm, (n + 0.5) * mm) for mm, n in zip(plane.pixel_mm[::-1], plane.shape[::-1], strict=True)]

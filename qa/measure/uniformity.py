@@ -4,10 +4,10 @@ NEMA MS 3. Percent integral uniformity is 100 (1 - (max - min) / (max + min)), m
 of a 1 cm2 disc that lies wholly in M. The normalised absolute average deviation is 100 (1 - mean of abs(Y - Ybar) / Ybar)
 over M after the 3 by 3 low-pass filter (1 2 1, 2 4 2, 1 2 1) / 16.
 
-Both are stated with the scatter of noise taken out, as the mean of many repeats would show them. In one image scatter
-drives the highest disc up, the lowest down and every deviation away from zero; how far is worked out from the noise found
-in the image and a plain surface through it, and taken out. Details give the figure before that (`uncorrected`) and the
-correction.
+Both are stated as an image without noise would show them. Noise lifts magnitudes, dark ones most, which is taken off by
+what air shows; its scatter drives the highest disc up, the lowest down and every deviation away from zero, and how far is
+worked out from the noise found in the image and a plain surface through it. Details give the figure before the second
+(`uncorrected`) and the correction.
 """
 
 import math
@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane, disc_overlap, sample
-from qa.measure.air import air_corners, air_noise
+from qa.measure.air import AirNoise, air_corners, air_noise
 from qa.measure.noise import Noise, difference_noise, evaluate, fit_surface, ripple_noise
 from qa.measure.regions import Field, figure, uniform_field
 from qa.phantoms import Phantom
@@ -29,39 +29,47 @@ __all__ = ["uniformity"]
 _PIU = ("percent integral uniformity (NEMA MS 3), less the effect of noise", 1)
 _NAAD = ("normalised absolute average deviation (NEMA MS 3), less the effect of noise", 1)
 _DISC_MM = math.sqrt(100 / math.pi)
-_GRID = 91
-_WRAP = 96
-_DRAWS = 16
+_GRID = 121
+_WRAP = 128
+_DRAWS = 12
+_DOUBT = 0.2
 
 
 def uniformity(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
     """Measure both uniformities.
 
     Standard uncertainty: of the integral uniformity by resampling (noise of the image's own level, drawn once and for all,
-    on the fitted surface); of the average deviation by propagation of the noise of each pixel, with what the border of M
-    makes of the pixels it divides (rectangular, between counting their share and counting whole pixels).
+    on the fitted surface) with a fifth of the correction, for what the surface hides of the noise; of the average deviation by
+    by propagation of the noise of each pixel, with what the border of M makes of the pixels it divides (rectangular,
+    between counting whole pixels and counting their share).
     """
     field = uniform_field(scan, pose, phantom)
     if isinstance(field, str):
         return [NotMeasured(name, field) for name in ("uniformity_piu", "uniformity_naad")]
     image = field.cut(scan.pixels)
-    noise = _noise(scan, field, image)
+    noise, lift = _noise(scan, field, image)
+    image = np.sqrt(np.clip(image**2 - lift, 0, None))
     surface = _plain_surface(image, field, noise)
     return [_integral(image, field, noise, surface), _deviation(image, field, noise, surface)]
 
 
-def _noise(scan: Acquisition, field: Field, image: Floats) -> Noise:
-    """Find the noise in M: from two repeats; from one image, as air shows it where air stands for M; else from the ripple."""
+def _noise(scan: Acquisition, field: Field, image: Floats) -> tuple[Noise, float]:
+    """Find the noise in M, and how much it lifts the square of a magnitude where there is signal.
+
+    The noise is read from two repeats; from one image, as air shows it where air stands for M; else from the image's ripple.
+    Of n channels the 2 n - 1 parts of the noise that do not lie along the signal lift it (to second order); air shows 2 n.
+    """
     noise = difference_noise(scan, field)
-    if not isinstance(noise, str):
-        return noise
+    found: str | tuple[AirNoise, object] = "processed"
     if not scan.settings.parallel_imaging and not scan.settings.filtered:
         boxes = air_corners(field.plane, field.section, scan.settings.phase_encode)
         found = air_noise(scan.pixels[field.slice_index], field.plane, boxes)
-        if not isinstance(found, str):
-            air, _ = found
-            return Noise(air.sigma, air.correlation, air.pixels / air.correlation.variance_factor)
-    return ripple_noise(image, field)
+    if isinstance(found, str):
+        return ripple_noise(image, field) if isinstance(noise, str) else noise, 0.0
+    air = found[0]
+    if isinstance(noise, str):
+        noise = Noise(air.sigma, air.correlation, air.pixels / air.correlation.variance_factor)
+    return noise, (air.mean**2 + air.sd**2) * (1 - 1 / (2 * air.chi.channels))
 
 
 def _plain_surface(image: Floats, field: Field, noise: Noise) -> Floats:
@@ -97,7 +105,8 @@ def _integral(image: Floats, field: Field, noise: Noise, surface: Floats) -> Mea
         return NotMeasured("uniformity_piu", "there is no signal in the measurement region")
     raw = 100 * (1 - (highest - lowest) / (highest + lowest))
     spread = noise.sigma * math.sqrt(noise.correlation.mean_factor * float((disc**2).sum()))
-    shift, u_value = _resampled(surface, field.radius_mm, reach, spread)
+    shift, u_scatter = _resampled(surface, field.radius_mm, reach, spread)
+    u_value = math.hypot(u_scatter, _DOUBT * shift)
     places = {
         name: (float(at[k, 0] + field.section.centre_mm[0]), float(at[k, 1] + field.section.centre_mm[1]))
         for name, k in (("highest", high), ("lowest", low))
@@ -154,7 +163,7 @@ def _fast(count: int) -> int:
 
 @lru_cache(maxsize=8)
 def _unit_noise(step_in_discs: float) -> NDArray[np.float32]:
-    """Disc means of white noise, unit standard deviation, shape (8 x 16 draws, points), on a grid about M's centre.
+    """Disc means of white noise, unit standard deviation, shape (8 x 12 draws, points), on a grid about M's centre.
 
     Drawn once with a fixed seed. Every draw appears in all eight turns and mirror images, so that no direction is
     preferred: an image and its mirror image are given the same figure.
@@ -175,7 +184,7 @@ def _unit_noise(step_in_discs: float) -> NDArray[np.float32]:
 
 
 def _within_unit_disc() -> NDArray[np.bool_]:
-    """Tell which points of the resampling grid, (91, 91), lie within its inscribed circle."""
+    """Tell which points of the resampling grid, (121, 121), lie within its inscribed circle."""
     at = np.linspace(-1, 1, _GRID)
     return at[None, :] ** 2 + at[:, None] ** 2 <= 1 + 1e-9
 
@@ -202,7 +211,7 @@ def _deviation(image: Floats, field: Field, noise: Noise, surface: Floats) -> Me
     from scipy.special import erf
 
     smooth = _low_pass(image)
-    weights = field.weights
+    weights = (field.weights > 0.5).astype(np.float64)
     total = float(weights.sum())
     middle = float((smooth * weights).sum()) / total
     if not middle > 0:
@@ -221,8 +230,8 @@ def _deviation(image: Floats, field: Field, noise: Noise, surface: Floats) -> Me
         variance = float(((away**2 + spread**2 - folded**2) * weights).sum()) / total / spread**2
     u_mean = noise.sigma * math.sqrt(noise.correlation.mean_factor * variance / total)
     u_added = added / math.sqrt(2 * noise.freedom)
-    whole = float((np.abs(smooth - middle) * (weights > 0.5)).sum()) / float((weights > 0.5).sum())
-    u_border = abs(whole - raw) / math.sqrt(3)
+    shared = float((np.abs(smooth - middle) * field.weights).sum()) / float(field.weights.sum())
+    u_border = abs(shared - raw) / math.sqrt(3)
     details = {"uncorrected": 100 * (1 - raw / middle), "noise_correction": 100 * added / middle, "mean": middle}
     return figure(
         "uniformity_naad",
