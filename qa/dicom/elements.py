@@ -12,7 +12,7 @@ import re
 import struct
 import warnings
 import zlib
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, MutableSequence
 from datetime import date, datetime, time
 from io import BytesIO
 from typing import Any
@@ -27,7 +27,8 @@ from qa.dicom.refusal import RefusalError
 
 __all__ = ["Elements", "File", "parse", "quietly"]
 
-_TRANSFER_SYNTAX = 0x00020010
+_STORAGE_CLASS, _TRANSFER_SYNTAX = 0x00020002, 0x00020010
+_DIRECTORY = "1.2.840.10008.1.3.10"
 _EXPLICIT = "1.2.840.10008.1.2.1"
 _DEFLATED = "1.2.840.10008.1.2.1.99"
 _BIG_ENDIAN = "1.2.840.10008.1.2.2"
@@ -47,6 +48,9 @@ _BINARY = {
     "OF": "f",
     "OD": "d",
 }
+_TEXTUAL = frozenset(
+    {"AE", "AS", "CS", "DA", "DS", "DT", "IS", "LO", "LT", "PN", "SH", "ST", "TM", "UC", "UI", "UR", "UT", "UN", None}
+)
 _PREFIX_END = 132
 _DATE = re.compile(r"(\d{4})[.-]?(\d\d)[.-]?(\d\d)")
 _TIME = re.compile(r"(\d\d):?(\d\d)?:?(\d\d)?(?:\.(\d{1,6})\d*)?")
@@ -119,17 +123,18 @@ class Elements:
     def strings(self, tag: int) -> tuple[str, ...]:
         """Return the values of a text element, trimmed, without control characters."""
         element = self._elements.get(tag)
-        if element is None:
+        if element is None or element.VR not in _TEXTUAL:
             return ()
         value = element.value
-        if isinstance(element, RawDataElement) and isinstance(value, bytes):
+        if isinstance(value, bytes):
             if value.isascii() and b"\x1b" not in value:
-                texts: list[str] = value.decode("ascii").split("\\")
-            else:
-                converted = self._converted(element)
-                texts = [str(each) for each in converted] if _is_list(converted) else [str(converted or "")]
-        else:
-            texts = [str(each) for each in value] if _is_list(value) else [str(value or "")]
+                return tuple([_clean(text) for text in value.decode("ascii").split("\\")])
+            value = self._converted(element)
+        if isinstance(value, Sequence):
+            return ()
+        if isinstance(value, bytes):
+            value = value.decode("utf-8", "replace")
+        texts = [str(each) for each in value] if _is_list(value) else [str(value or "")]
         return tuple([_clean(text) for text in texts])
 
     def text(self, tag: int) -> str:
@@ -224,6 +229,11 @@ class File:
         self.meta = Elements.of(meta)
         self.transfer_syntax = transfer_syntax
 
+    @property
+    def is_directory(self) -> bool:
+        """Whether the file is a DICOMDIR, under whatever name."""
+        return self.meta.text(_STORAGE_CLASS) == _DIRECTORY
+
 
 def parse(content: bytes) -> File:
     """Parse a file's header and leave its pixels alone.
@@ -297,7 +307,7 @@ def _numbers(element: _Raw) -> tuple[float, ...]:
 
 
 def _is_list(value: object) -> bool:
-    return isinstance(value, list | tuple) or (hasattr(value, "__iter__") and not isinstance(value, str | bytes))
+    return isinstance(value, MutableSequence | tuple) and not isinstance(value, Sequence)
 
 
 def _clean(text: str) -> str:

@@ -1,5 +1,6 @@
 """From series to acquisitions: repeats of one series are measured together."""
 
+from collections import defaultdict
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 
@@ -25,25 +26,15 @@ def group(stacks: Sequence[Stacked]) -> tuple[Acquisition, ...]:
     be taken for a noiseless scan. Series that differ in the receive coil alone stay apart too, and say so.
     """
     acquisitions: list[_Growing] = []
+    by_study: dict[str, list[_Growing]] = defaultdict(list)
     for each in sorted(stacks, key=lambda one: (one.order, one.series.series_instance_uid, one.series.temporal_position)):
-        notes = []
-        for known in acquisitions:
-            if not _same_scan(known.repeats[0], each):
-                continue
-            if not same_settings(known.repeats[0].series.settings, each.series.settings):
-                notes.append(_coil_note(known.repeats[0], each))
-                continue
-            if (
-                twin := next((r for r in known.repeats if np.array_equal(r.series.pixels, each.series.pixels)), None)
-            ) is not None:
-                notes.append(
-                    f"it holds the same pixels as series {twin.series.series_instance_uid}: stored twice, so not a repeat"
-                )
-                continue
-            known.repeats.append(each)
-            break
-        else:
-            acquisitions.append(_Growing([each], notes))
+        of_study = by_study[each.series.study_instance_uid]
+        home, notes = _home(of_study, each)
+        if home is None:
+            home = _Growing([], notes)
+            acquisitions.append(home)
+            of_study.append(home)
+        home.repeats.append(each)
     return tuple(
         Acquisition(
             tuple(one.series for one in each.repeats), tuple(dict.fromkeys([*each.remarks, *_scaled_differently(each)]))
@@ -52,12 +43,28 @@ def group(stacks: Sequence[Stacked]) -> tuple[Acquisition, ...]:
     )
 
 
+def _home(known: Sequence[_Growing], each: Stacked) -> tuple[_Growing | None, list[str]]:
+    """Return the acquisition of a study that a series repeats, or None and why it repeats none that are nearly like it."""
+    notes = []
+    for acquisition in known:
+        first = acquisition.repeats[0]
+        if not _same_scan(first, each):
+            continue
+        if not same_settings(first.series.settings, each.series.settings):
+            notes.append(_coil_note(first, each))
+            continue
+        twin = next((one for one in acquisition.repeats if _same_pixels(one, each)), None)
+        if twin is None:
+            return acquisition, []
+        notes.append(f"it holds the same pixels as series {twin.series.series_instance_uid}: stored twice, so not a repeat")
+    return None, notes
+
+
 def _same_scan(first: Stacked, second: Stacked) -> bool:
-    """Tell whether two series agree in study, kind, planes and all settings but the receive coil."""
+    """Tell whether two series of a study agree in kind, planes and all settings but the receive coil."""
     a, b = first.series, second.series
     return (
-        a.study_instance_uid == b.study_instance_uid
-        and a.kind == b.kind
+        a.kind == b.kind
         and first.contrast == second.contrast
         and len(a.planes) == len(b.planes)
         and same_settings_but_coil(a.settings, b.settings)

@@ -3,6 +3,7 @@
 import math
 from datetime import datetime
 from functools import lru_cache
+from pathlib import Path
 from typing import Literal
 
 import numpy as np
@@ -87,7 +88,7 @@ _COMPONENTS: dict[str, ImageKind] = {
 _GE_COMPONENTS: dict[int, ImageKind] = {0: "magnitude", 1: "phase", 2: "real", 3: "imaginary"}
 
 
-def header_of(file: File) -> Header:
+def header_of(file: File, path: Path, sha256: str) -> Header:
     """Read what admission decides on; no pixel is touched."""
     get = file.elements
     name, number, scanned = get.text(0x00100010), get.text(0x00100020), acquired_at(get)
@@ -111,6 +112,8 @@ def header_of(file: File) -> Header:
         names_a_person=is_name_of_a_person(name, number),
         gives_birth_date=is_plausible_birth_date(get.text(0x00100030), get.day(0x00100030), scanned),
         sex_is_other=get.code(0x00100040) == "O",
+        path=path,
+        sha256=sha256,
     )
 
 

@@ -63,6 +63,7 @@ _OTHER_OBJECTS = {
     "1.2.840.10008.5.1.4.1.1.7": "a secondary capture",
     "1.2.840.10008.5.1.4.1.1.66": "raw data",
     "1.2.840.10008.5.1.4.1.1.104.1": "a PDF document",
+    "1.2.840.10008.1.3.10": "a DICOM directory",
 }
 
 # What departments register phantoms under (common practice, no source): "phantom" anywhere, the others as whole words, so

@@ -1,6 +1,7 @@
 """From a parsed file to its frames: a classic image is one, a mosaic one a tile, an enhanced object one a functional group."""
 
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 
 from qa.dicom.elements import Elements, File
 from qa.dicom.enhanced import is_enhanced, of_each_frame
@@ -81,8 +82,11 @@ def _frames(
     planes: Sequence[Plane],
     scalings: Sequence[Scaling],
 ) -> list[Frame]:
-    frames = []
+    frames: list[Frame] = []
     for number, (get, plane, scaling) in enumerate(zip(heads, planes, scalings, strict=True)):
+        if number and get is heads[number - 1]:  # the tiles of a mosaic share their header
+            frames.append(replace(frames[-1], plane=plane, number=number, stored=stored[number]))
+            continue
         kinds = image_type(get)
         temporal = get.whole(0x00209128)  # Temporal Position Index; the classic element is the Identifier
         acquisition = get.whole(0x00209156)  # Frame Acquisition Number; the classic element is Acquisition Number

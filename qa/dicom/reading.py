@@ -18,9 +18,13 @@ from qa.dicom.isolated import IsolatedDecoder
 from qa.dicom.pixels import decode
 from qa.dicom.refusal import RefusalError
 from qa.dicom.stack import stack
+from qa.errors import EvenfieldError
 from qa.records import Reading, Refused, SourceFile
 
-__all__ = ["Admit", "read_files"]
+__all__ = ["UNFORESEEN", "Admit", "read_files"]
+
+UNFORESEEN = "it could not be read for a reason this program does not know"
+"""How the reason begins where reading a file failed in a way that was not thought of."""
 
 Admit = Callable[[Header], str | None]
 
@@ -61,30 +65,28 @@ def read_files(
 
 
 def _read_one(file: Found, admit: Admit, decode_pixels: Decode) -> tuple[_Taken | Refused | None, str]:
-    """Read one file; the Series Instance UID goes with it as far as it is known."""
+    """Read one file; the Series Instance UID goes with it where the file is of an admitted series."""
     series_uid = ""
     try:
         content = read_bytes(file)
-        if content is None:
+        parsed = None if content is None else parse(content)
+        if content is None or parsed is None or (not file.asked_for and parsed.is_directory):
             return None, ""
-        parsed = parse(content)
-        sha256 = hashlib.sha256(content).hexdigest()
-        header = replace(header_of(parsed), path=file.path, sha256=sha256)
-        if header.sop_class_uid == _DIRECTORY:
-            return (Refused(file.path, "it is a DICOM directory, which holds no image") if file.asked_for else None), ""
+        header = header_of(parsed, file.path, hashlib.sha256(content).hexdigest())
         reason = unmeasurable(header) or _without_identifiers(header) or admit(header)
-        if reason is not None:
-            return Refused(file.path, reason), ""
-        series_uid = header.series_instance_uid
-        source = SourceFile(file.path, header.sop_instance_uid, sha256)
-        return _Taken(source, series_uid, tuple(frames_of(parsed, header, source, decode_pixels))), series_uid
+        if reason is None:
+            series_uid = header.series_instance_uid
+            source = SourceFile(file.path, header.sop_instance_uid, header.sha256)
+            return _Taken(source, series_uid, tuple(frames_of(parsed, header, source, decode_pixels))), series_uid
     except RefusalError as refusal:
-        return Refused(file.path, str(refusal)), series_uid
+        reason = str(refusal)
     except (MemoryError, RecursionError):
-        return Refused(file.path, "the file asks for more memory than a phantom image needs"), series_uid
-
-
-_DIRECTORY = "1.2.840.10008.1.3.10"
+        reason = "it asks for more memory than a phantom image needs"
+    except EvenfieldError:
+        raise
+    except Exception as error:  # noqa: BLE001 (the last net: one file, whatever it holds, must not end the run)
+        reason = f"{UNFORESEEN} ({type(error).__name__})"
+    return Refused(file.path, reason), series_uid
 
 
 def _without_identifiers(header: Header) -> str | None:
