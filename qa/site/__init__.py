@@ -3,18 +3,15 @@
 from qa.site.limits import limits_json, limits_sha256, parse_limits, shipped_limits
 from qa.site.load import FILE_NAME, Site, load_site
 from qa.site.matching import changed_settings, expectation_for, is_phantom_identity, match_scanner
-from qa.site.schedule import Away, Due, missed_days, when_due
 from qa.site.tables import Charts, Department, Downtime, Expectation, Mail, Match, ReportSettings, SiteScanner
 from qa.site.template import SUBFOLDERS, write_site_template
 
 __all__ = [
     "FILE_NAME",
     "SUBFOLDERS",
-    "Away",
     "Charts",
     "Department",
     "Downtime",
-    "Due",
     "Expectation",
     "Mail",
     "Match",
@@ -28,9 +25,7 @@ __all__ = [
     "limits_sha256",
     "load_site",
     "match_scanner",
-    "missed_days",
     "parse_limits",
     "shipped_limits",
-    "when_due",
     "write_site_template",
 ]

@@ -117,7 +117,7 @@ class Site:
             return f"{scheme}:///{(self.folder / unquote(path)).resolve()}"
         return url if "+" in url.partition(":")[0] else url.replace("postgresql:", "postgresql+psycopg:", 1)
 
-    def away(self, scanner_name: str) -> tuple[tuple[date, date | None], ...]:
+    def downtimes_of(self, scanner_name: str) -> tuple[tuple[date, date | None], ...]:
         """Give the planned downtime of a scanner: first and last day, no last day meaning until further notice."""
         return tuple((d.first_day, d.last_day) for d in self.downtimes if any(fnmatchcase(scanner_name, p) for p in d.scanner))
 

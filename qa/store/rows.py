@@ -34,15 +34,6 @@ __all__ = [
     "verdict_row",
 ]
 
-_VERDICT_COLUMNS = {
-    "conformity": "conformity",
-    "lower": "lower",
-    "upper": "upper",
-    "limit": "limit_text",
-    "rule": "rule",
-    "source": "source",
-}
-_VERDICT_FIELDS = {f.name for f in fields(Verdict)}
 _SCANNER_FIELDS = {f.name for f in fields(Scanner)}
 _SETTINGS_FIELDS = {f.name for f in fields(Settings)}
 
@@ -157,11 +148,10 @@ def _region_in(values: Sequence[Any]) -> Region:
 
 
 def verdict_row(position: int, verdict: Verdict) -> dict[str, Any]:
-    """Give the row of a verdict; what has no column of its own goes into `more`."""
-    known = asdict(verdict)
-    row = {column: known.pop(field) for field, column in _VERDICT_COLUMNS.items()}
-    known.pop("quantity")
-    return {"position": position, **row, "more": dump(known)}
+    """Give the row of a verdict, whose quantity is that of its measurement."""
+    row = asdict(verdict)
+    del row["quantity"]
+    return {"position": position, "limit_text": row.pop("limit"), **row}
 
 
 def judged_from_rows(measurements: Sequence[Any], details: str, verdicts: Sequence[Any]) -> tuple[Judged, ...]:
@@ -187,8 +177,21 @@ def judged_from_rows(measurements: Sequence[Any], details: str, verdicts: Sequen
 
 
 def _verdict(quantity: str, row: Any) -> Verdict:  # noqa: ANN401 - a row
-    more = {key: value for key, value in json.loads(row.more).items() if key in _VERDICT_FIELDS}
-    return Verdict(quantity=quantity, **{field: getattr(row, column) for field, column in _VERDICT_COLUMNS.items()}, **more)
+    return Verdict(
+        quantity=quantity,
+        conformity=row.conformity,
+        lower=row.lower,
+        upper=row.upper,
+        limit=row.limit_text,
+        rule=row.rule,
+        source=row.source,
+        probability=row.probability,
+        guard_band=row.guard_band,
+        warn_lower=row.warn_lower,
+        warn_upper=row.warn_upper,
+        warned=bool(row.warned),
+        limit_key=row.limit_key,
+    )
 
 
 def recorded(

@@ -211,7 +211,12 @@ verdicts = Table(
     Column("limit_text", Text, nullable=False),
     Column("rule", Text, nullable=False),
     Column("source", Text, nullable=False),
-    Column("more", Text, nullable=False, comment="JSON: whatever else the verdict holds"),
+    Column("probability", Double, comment="of conformity"),
+    Column("guard_band", Double, nullable=False),
+    Column("warn_lower", Double),
+    Column("warn_upper", Double),
+    Column("warned", Integer, nullable=False, comment="1: within the limits, at or beyond a warning level"),
+    Column("limit_key", Text, nullable=False),
     sqlite_with_rowid=False,
 )
 

@@ -35,6 +35,8 @@ def test_every_line_of_the_worked_example_that_is_commented_out_is_right_too(tmp
     assert site.mail.to == ("physics@saltmarsh.example",)
     assert site.downtimes[0].covers(date(2026, 3, 6))
     assert not site.downtimes[0].covers(date(2026, 3, 7))
+    assert site.downtimes_of("south-15t") == ((date(2026, 3, 2), date(2026, 3, 6)),)
+    assert site.downtimes_of("north-3t") == ()
     assert site.charts.baseline_sessions == 10
     assert site.charts.chosen() == {"nelson": (1,), "ewma": True}
 

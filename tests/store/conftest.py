@@ -75,7 +75,7 @@ class Maker:
     def verdict(self, quantity="snr", **other):
         given = {
             "conformity": "conditional pass", "lower": 190.1, "upper": None, "limit": "at least 190.1", "rule": "guarded",
-            "source": "invented", "probability": 0.9876543210123456, "guard_band": 0.2, "warn_lower": 200.0,
+            "source": "invented", "probability": 0.9876543210123456, "guard_band": 0.2, "warn_lower": 200.0, "warned": True,
         }  # fmt: skip
         return Verdict(quantity, **{**given, **other})
 

@@ -110,7 +110,13 @@ def upgrade() -> None:
         _text("conformity"),
         _real("lower"),
         _real("upper"),
-        *(_text(name) for name in ("limit_text", "rule", "source", "more")),
+        *(_text(name) for name in ("limit_text", "rule", "source")),
+        _real("probability"),
+        _real("guard_band", nullable=False),
+        _real("warn_lower"),
+        _real("warn_upper"),
+        _whole("warned"),
+        _text("limit_key"),
         several=True,
     )
     _table("refusals", *(_text(name) for name in ("path", "reason", "sha256")))
