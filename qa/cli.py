@@ -232,6 +232,55 @@ def report(
 
 
 @app.command()
+def commission(
+    *,
+    phantom: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--phantom", help="A shipped phantom's name or your own definition (.toml); all shipped ones when not given."
+        ),
+    ] = None,
+    cases: Annotated[int | None, typer.Option("--cases", help="Digital scans of each phantom; 200 when not given.")] = None,
+    seed: Annotated[
+        int | None, typer.Option("--seed", help="Seed of the first scan; without --cases that one scan is made and printed.")
+    ] = None,
+    report: Annotated[Path | None, typer.Option("--report", help="Write the evidence to this new PDF file.")] = None,
+    as_of: Annotated[
+        str | None, typer.Option("--as-of", help="The day the report is dated with; today when not given.")
+    ] = None,
+    page: Annotated[str, typer.Option("--page", help="A4 or Letter.")] = "A4",
+    jobs: Annotated[int | None, typer.Option("--jobs", help="Processes to run on; all cores when not given.")] = None,
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+) -> None:
+    """Measure digital phantoms of known truth on this machine: error and stated uncertainty side by side.
+
+    Exit status 1 where a bar of accuracy or coverage is missed.
+
+    Example: evenfield commission --phantom sphere-170 --cases 500 --report commissioning.pdf
+    """
+    from qa.commission import check_target, run_commission, write_evidence
+    from qa.report.commission import page_size, render_commission_report
+    from qa.report.commission_words import commission_document, commission_text
+
+    day, paper = _day(as_of, "--as-of"), page_size(page)
+    if report is not None:
+        check_target(report)
+    result = run_commission(phantom, cases, seed, jobs, _progress(quiet=quiet))
+    if as_json:
+        from qa.report.figures_json import to_json
+
+        put(to_json(commission_document(result)))
+    else:
+        put(commission_text(result, each_case=seed is not None and cases is None))
+    if report is not None:
+        write_evidence(report, render_commission_report(result, day, paper))
+        if not quiet:
+            say(f"{report} is the evidence for the file.")
+    _finish(ExitStatus.DONE if result.met else ExitStatus.OUT_OF_LIMITS)
+
+
+@app.command()
 def demo(
     folder: Annotated[Path, typer.Argument(help="Where to build it: a new or an empty folder.")] = Path("evenfield-demo"),
     *,

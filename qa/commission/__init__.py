@@ -5,7 +5,20 @@ adds the cases up, `run` does so for many phantoms on all cores.
 """
 
 from qa.commission.cases import Measurer, run_case
-from qa.commission.run import commission
+from qa.commission.evidence import check_target, write_evidence
+from qa.commission.run import commission, run_commission
 from qa.report.commission_content import CampaignResult, Case, CommissionResult, Figure, Tally
 
-__all__ = ["CampaignResult", "Case", "CommissionResult", "Figure", "Measurer", "Tally", "commission", "run_case"]
+__all__ = [
+    "CampaignResult",
+    "Case",
+    "CommissionResult",
+    "Figure",
+    "Measurer",
+    "Tally",
+    "check_target",
+    "commission",
+    "run_case",
+    "run_commission",
+    "write_evidence",
+]

@@ -8,13 +8,15 @@ from typing import Any, Literal
 from qa.quantities import QUANTITIES, quantity
 from qa.simulate import Setup, Truth
 
-__all__ = ["COVERAGE", "ROD_CENTRES", "Row", "row_of", "rows"]
+__all__ = ["BAR_CASES", "COVERAGE", "COVERAGE_CASES", "NORMAL_95", "ROD_CENTRES", "Row", "row_of", "rows"]
 
 Scale = Literal["absolute", "pixels", "percent"]
 
 COVERAGE = (0.93, 0.98)
 """Share of the intervals of k = 2 that may hold the truth, over at least `COVERAGE_CASES` cases."""
 COVERAGE_CASES = 500
+BAR_CASES = 200
+"""Cases over which bias and 95 % point are promised; fewer miss a bar only where chance cannot be the reason."""
 ROD_CENTRES = "rod_centres"
 NORMAL_95 = 1.959964
 

@@ -10,6 +10,7 @@ import numpy as np
 from qa.commission.bars import ROD_CENTRES, Row, row_of
 from qa.commission.limits import least_deviation
 from qa.phantoms import Phantom
+from qa.quantities import QUANTITIES
 from qa.records import Acquisition, Measurement, NotLocated, NotMeasured, Pose
 from qa.report.commission_content import Case, Figure, Missing
 from qa.simulate import Setup, Truth, random_setup, simulate, true_values
@@ -106,7 +107,7 @@ def run_case(phantom: Phantom, seed: int, measurer: Measurer = locate_and_measur
     reasons = {one.quantity: one.reason for one in not_measured}
     figures: list[Figure] = []
     missing: list[Missing] = []
-    for name, truth in truths.items():
+    for name, truth in sorted(truths.items(), key=lambda item: list(QUANTITIES).index(item[0])):
         row = row_of(name, setup, truth)
         if name in found:
             figures.append(_figure(row, found[name], truth, machine))

@@ -8,13 +8,14 @@ from pathlib import Path
 from typing import Any
 
 from qa import __version__
+from qa.commission.bars import BAR_CASES
 from qa.commission.cases import Measurer, locate_and_measure, run_case
 from qa.commission.tally import tally_cases
 from qa.errors import UsageError
-from qa.phantoms import Phantom, load_phantom
+from qa.phantoms import Phantom, load_phantom, phantom_names
 from qa.report.commission_content import CampaignResult, Case, CommissionResult
 
-__all__ = ["commission", "machine_facts"]
+__all__ = ["commission", "machine_facts", "run_commission"]
 
 Progress = Callable[[Sequence[Any], str], Iterable[Any]]
 _BATCH = 2
@@ -64,9 +65,7 @@ def commission(
         raise UsageError(f"seed is {seed}: it must not be negative.")
     if jobs is not None and jobs < 1:
         raise UsageError(f"jobs is {jobs}: it must be at least 1.")
-    definitions = [one if isinstance(one, Phantom) else load_phantom(one) for one in phantoms]
-    if not definitions:
-        raise UsageError("phantoms is empty: name at least one.")
+    definitions = _once_each([one if isinstance(one, Phantom) else load_phantom(one) for one in phantoms])
     seeds = range(seed, seed + cases)
     tasks = [(phantom, number) for phantom in definitions for number in seeds]
     done: dict[str, list[Case]] = {phantom.name: [] for phantom in definitions}
@@ -84,6 +83,16 @@ def commission(
         for phantom in definitions
     )
     return CommissionResult(software_version=__version__, machine=machine_facts(), campaigns=campaigns)
+
+
+def _once_each(phantoms: Sequence[Phantom]) -> list[Phantom]:
+    held: dict[str, Phantom] = {}
+    for phantom in phantoms:
+        if held.setdefault(phantom.name, phantom).sha256 != phantom.sha256:
+            raise UsageError(f"two phantoms are called {phantom.name} and differ: give one of the files another name.")
+    if not held:
+        raise UsageError("phantoms is empty: name at least one.")
+    return list(held.values())
 
 
 def _run(tasks: Sequence[tuple[Phantom, int]], measurer: Measurer, jobs: int) -> Iterator[Case]:
@@ -105,9 +114,17 @@ def _on_one_thread(phantom: Phantom, seed: int, measurer: Measurer) -> Case:
 def machine_facts() -> dict[str, str]:
     """Say what computes here, as far as figures may depend on it; no name of a computer or person."""
     return {
-        "Python": f"{platform.python_implementation()} {platform.python_version()}",
+        "Python": f"{platform.python_version()} ({platform.python_implementation()})",
         "numpy": version("numpy"),
         "scipy": version("scipy"),
-        "System": platform.system(),
-        "Processor": platform.machine(),
+        "on": f"{platform.system()}, {platform.machine()}",
     }
+
+
+def run_commission(
+    phantoms: Sequence[str] | None, cases: int | None, seed: int | None, jobs: int | None, progress: Progress | None
+) -> CommissionResult:
+    """Run what the command line asks for; what it leaves out is all shipped phantoms, and 200 cases or the one of a seed."""
+    if cases is None:
+        cases = BAR_CASES if seed is None else 1
+    return commission(phantoms or phantom_names(), cases, seed or 0, jobs, progress)

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from qa.commission.bars import COVERAGE, COVERAGE_CASES, NORMAL_95, ROD_CENTRES, Row, rows
+from qa.commission.bars import BAR_CASES, COVERAGE, COVERAGE_CASES, NORMAL_95, ROD_CENTRES, Row, rows
 from qa.geometry import Floats
 from qa.report.commission_content import Case, Figure, Missing, Tally
 
@@ -54,6 +54,7 @@ def _tally(row: Row, found: list[tuple[Case, Figure]], missing: list[tuple[Case,
     has_bar = row.within is not None or row.limits is not None
     coverage, interval, coverage_met = _coverage(row, [f for _, f in found])
     limits = [f.limit for _, f in found if f.limit is not None]
+    allowed = [f.allowed for _, f in found if f.allowed is not None]
     worst = max(found, key=_badness, default=None)
     return Tally(
         row=row.key,
@@ -69,12 +70,13 @@ def _tally(row: Row, found: list[tuple[Case, Figure]], missing: list[tuple[Case,
         bias_bar=row.bias,
         point=point,
         bar_words=_bar_words(row),
+        allowed=(min(allowed), max(allowed)) if allowed else None,
         share=share if has_bar else None,
         limit=NORMAL_95 * float(np.median(limits)) if limits else None,
         coverage=coverage,
         coverage_range=interval,
-        bias_met=None if row.bias is None else bias is not None and abs(bias) <= row.bias,
-        point_met=None if not has_bar or share is None else share >= _SHARE,
+        bias_met=None if row.bias is None else _bias_met(bias, u_bias, row.bias, len(found)),
+        point_met=_point_met(int(np.sum(inside)), whole, len(found) + len(missing)) if has_bar else None,
         coverage_met=coverage_met,
         worst=None if worst is None else worst[1],
         worst_seed=None if worst is None else worst[0].seed,
@@ -87,6 +89,17 @@ def _mean(errors: Floats) -> tuple[float | None, float | None]:
         return None, None
     spread = float(errors.std(ddof=1)) / math.sqrt(errors.size) if errors.size > 1 else None
     return float(errors.mean()), spread
+
+
+def _bias_met(bias: float | None, u_bias: float | None, bar: float, cases: int) -> bool:
+    if bias is None:
+        return False
+    chance = 0.0 if cases >= BAR_CASES else math.inf if u_bias is None else 2 * u_bias
+    return abs(bias) <= bar + chance
+
+
+def _point_met(inside: int, whole: int, cases: int) -> bool:
+    return (inside / whole if cases >= BAR_CASES else coverage_interval(inside, whole)[1]) >= _SHARE
 
 
 def _rods(cases: list[Case]) -> tuple[Floats, Floats, float | None, float | None]:

@@ -106,6 +106,8 @@ class Tally:
         more than 5 % were not measured.
     bar_words : str
         The bar of the 95 % point in words; empty where there is none.
+    allowed : tuple of float or None
+        The least and the most that this bar allows among the cases.
     share : float or None
         Share of the cases within the bar.
     limit : float or None
@@ -135,6 +137,7 @@ class Tally:
     bias_bar: float | None
     point: float | None
     bar_words: str
+    allowed: tuple[float, float] | None
     share: float | None
     limit: float | None
     coverage: float | None
