@@ -46,6 +46,7 @@ class Forecast:
     """When the mean would cross a limit if it goes on as it does.
 
     `earliest` to `latest` hold the date with a probability of `CONFIDENCE`; `earliest` is never before the last session.
+    `from_day` and `from_value` are the last session's day and the mean on it, where a line to the crossing starts.
     """
 
     limit: float
@@ -53,6 +54,8 @@ class Forecast:
     crossing: date
     earliest: date
     latest: date
+    from_day: date
+    from_value: float
 
 
 @dataclass(frozen=True)
@@ -144,7 +147,8 @@ def forecast(
     if chance[0] > 0.5 or chance[-1] < 1 - tail:
         return None
     early, middle, late = np.interp((tail, 0.5, 1 - tail), chance, ahead)
-    return Forecast(limit, rising, *(_day(t[-1] + d) for d in (middle, early, late)))
+    mean = float(course.weight @ (course.level + course.change))
+    return Forecast(limit, rising, _day(t[-1] + middle), _day(t[-1] + early), _day(t[-1] + late), _day(t[-1]), mean)
 
 
 def onset(days: ArrayLike, values: ArrayLike, *, alarmed: bool = False) -> Onset | None:

@@ -17,7 +17,6 @@ from qa.records import Baseline, Limit, Measurement
 __all__ = ["Bounds", "Choice", "Context", "Unresolved", "baseline_for", "bounds", "choose", "describe", "problems"]
 
 _SELECTORS = ("scanner", "coil", "phantom", "protocol")
-_BOUNDS = ("lower", "upper", "plus_minus", "lower_percent_of_baseline", "upper_percent_of_baseline", "per_day")
 _FIELD_TOLERANCE = 0.1
 _NO_TRUTH: Mapping[str, float] = MappingProxyType({})
 
@@ -124,7 +123,7 @@ def choose(limits: Sequence[Limit], quantity: str, context: Context) -> Choice:
 
 
 def bounds(limit: Limit, measurement: Measurement, context: Context) -> Bounds | Unresolved:
-    """Bring a limit down to figures for one measurement.
+    """Bring a limit down to figures for one measurement; a limit that names no bound switches limits off.
 
     Parameters
     ----------
@@ -155,7 +154,7 @@ def bounds(limit: Limit, measurement: Measurement, context: Context) -> Bounds |
         if part is not None:
             parts.append(part)
     if not parts:
-        return Unresolved(f"the limit for {limit.quantity} names no bound")
+        return Unresolved(f"no limit applies to {measurement.quantity}: it is switched off")
     lower, u_lower = max(((p.lower, p.u_lower) for p in parts if p.lower is not None), default=(None, 0.0))
     upper, u_upper = min(((p.upper, p.u_upper) for p in parts if p.upper is not None), default=(None, 0.0))
     if lower is not None and upper is not None and lower > upper:
@@ -210,8 +209,6 @@ def problems(limits: Sequence[Limit]) -> tuple[str, ...]:
         name = f"the limit on {limit.quantity}" + (f" ({limit.key})" if limit.key else "")
         if not any(fnmatchcase(q, limit.quantity) for q in QUANTITIES):
             found.append(f"{name} fits no quantity: known are {', '.join(QUANTITIES)}")
-        if all(getattr(limit, bound) is None for bound in _BOUNDS):
-            found.append(f"{name} has no bound: give one of {', '.join(_BOUNDS)}")
         found += [f"{name}: {text}" for text in _contradictions(limit)]
         selectors = (limit.shipped, limit.quantity, *_selector_values(limit))
         if selectors in seen:

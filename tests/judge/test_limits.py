@@ -3,7 +3,7 @@ from datetime import date
 
 import pytest
 
-from qa.judge import Context, Unresolved, baseline_for, bounds, choose, judge, problems
+from qa.judge import Context, Unresolved, baseline_for, bounds, choose, judge, problems, why_not_judged
 from qa.records import Baseline, Limit, Measurement
 
 DAY = date(2026, 11, 23)
@@ -133,7 +133,6 @@ def test_the_baseline_in_force_is_the_latest_that_fits_and_has_begun():
     ("limit", "sentence"),
     [
         (Limit("snrr", lower=1.0), "fits no quantity"),
-        (Limit("snr"), "has no bound"),
         (Limit("snr", lower=2.0, upper=1.0), "lower 2 lies above upper 1"),
         (Limit("snr", lower=2.0, warn_lower=1.0), "lower 2 lies above warn_lower 1"),
         (Limit("ghosting", upper=2.0, warn_upper=3.0), "warn_upper 3 lies above upper 2"),
@@ -156,3 +155,12 @@ def test_two_limits_for_the_same_thing_are_named_and_sound_sets_pass():
         "the limit on ghosting is set twice for every scanner: keep one of them",
     )
     assert problems([one, replace(one, shipped=True), replace(one, scanner="north-3t")]) == ()
+
+
+def test_a_limit_without_bounds_switches_limits_off():
+    off = [Limit("ghosting", upper=2.5, shipped=True), Limit("ghosting", scanner="north-3t")]
+    assert problems(off) == ()
+    assert judge(measured(9.0, quantity="ghosting", unit="%"), off, WHERE) is None
+    assert why_not_judged(measured(9.0, quantity="ghosting", unit="%"), off, WHERE) == (
+        "no limit applies to ghosting: it is switched off"
+    )

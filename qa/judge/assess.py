@@ -1,0 +1,197 @@
+"""A scanner as of a day: every quantity's state, the scanner's standing, what is due, and what to look at first."""
+
+from collections.abc import Iterable, Sequence
+from dataclasses import replace
+from datetime import date
+
+import numpy as np
+
+from qa.judge.causes import Movement, likely_causes
+from qa.judge.quantity import figure, quantity_state
+from qa.judge.records import Assessment, Grounds, QuantityState, Standing
+from qa.judge.schedule import Schedule, completeness, days_overdue, due_day
+from qa.judge.streams import Stream, streams
+from qa.quantities import QUANTITIES
+from qa.records import Session
+
+__all__ = ["assess", "assess_streams"]
+
+_RECENT = 3
+"""Sessions for which a new segment is news."""
+_TREND_SIGMAS = 2.0
+
+
+def assess(scanner_name: str, history: Iterable[Session], grounds: Grounds, today: date) -> Assessment:
+    """Judge a scanner.
+
+    Parameters
+    ----------
+    scanner_name : str
+        Whose history it is.
+    history : iterable of Session
+        All its sessions; none may be missing, or charts begin too late. Sessions of other scanners are left out.
+    grounds : Grounds
+        Limits, baselines, events and schedule.
+    today : datetime.date
+        The day to judge as of; sessions and events after it are left out, so that an earlier day can be looked at again.
+
+    Returns
+    -------
+    Assessment
+        See there.
+    """
+    sessions = [s for s in history if s.scanner_name == scanner_name and s.day <= today]
+    known = [e for e in grounds.events if e.scanner_name == scanner_name and e.day <= today]
+    return assess_streams(scanner_name, streams(sessions, known), [s.day for s in sessions], grounds, today)
+
+
+def assess_streams(
+    scanner_name: str, histories: Sequence[Stream], days: Sequence[date], grounds: Grounds, today: date
+) -> Assessment:
+    """Judge a scanner from streams that were made before, as `assess` does; `days` are those of all its sessions."""
+    events = tuple(e for e in grounds.events if e.scanner_name == scanner_name)
+    # Downtime may be planned ahead; of the rest only what has happened counts.
+    schedule = grounds.schedule.with_events(events)
+    events = tuple(e for e in events if e.day <= today)
+    grounds = replace(grounds, events=events, schedule=schedule)
+    last = max(days, default=None)
+    states = _in_use([quantity_state(s, grounds, today) for s in histories], last, schedule)
+    order = list(QUANTITIES)
+    states.sort(key=lambda s: (order.index(s.quantity) if s.quantity in QUANTITIES else len(order), s.stream.phantom))
+    counting = [s for s in states if not s.superseded]
+    late = days_overdue(schedule, last, today)
+    out, drifting = [s for s in counting if s.out], [s for s in counting if s.drifting]
+    overdue = _overdue(schedule, last, late, today)
+    standing: Standing = "out of limits" if out else "overdue" if overdue else "drifting" if drifting else "within limits"
+    reasons = [_out_sentence(s) for s in out] + overdue + [text for s in drifting for text in s.drifting]
+    sentence = f"{standing[0].upper()}{standing[1:]}"
+    sentence += f": {reasons[0]}." if reasons else f" in the session of {last.isoformat()}." if last else "."
+    movements = [m for s in counting if (m := _movement(s)) is not None]
+    return Assessment(
+        scanner_name=scanner_name,
+        today=today,
+        standing=standing,
+        sentence=sentence,
+        reasons=tuple(reasons),
+        out=_names(out),
+        drifting=_names(drifting),
+        out_of_control=_names([s for s in counting if s.control == "out of control"]),
+        quantities=tuple(states),
+        last_session=last,
+        due=due_day(schedule, last),
+        days_overdue=late,
+        kept=completeness(schedule, days, min(days, default=today), today),
+        causes=likely_causes(movements, events, _changes(counting)),
+        remarks=tuple(_remarks(counting)),
+    )
+
+
+def _names(states: Iterable[QuantityState]) -> tuple[str, ...]:
+    return tuple(dict.fromkeys(s.quantity for s in states))
+
+
+def _in_use(states: list[QuantityState], last: date | None, schedule: Schedule) -> list[QuantityState]:
+    """Mark what was measured otherwise since, and what has not been measured for too long.
+
+    A quantity that is out stays out when it is no longer measured: only another measurement of it can say that it is well.
+    On the same phantom one later by a whole interval does; on another phantom, which may be scanned in turn with it, one
+    later by three.
+    """
+    found = []
+    for state in states:
+        days = state.stream.days
+        usual = max(float(np.median(np.diff(days[-_RECENT * 4 :]))) if days.size > 1 else 0.0, float(schedule.every_days))
+        others = [s for s in states if s is not state and s.quantity == state.quantity]
+        superseded = any(
+            int(o.stream.days[-1] - days[-1])
+            > (1 if o.stream.phantom == state.stream.phantom else 3) * (usual + schedule.grace_days)
+            for o in others
+        )
+        absent = last is not None and last.toordinal() - int(days[-1]) > 2 * usual + schedule.grace_days
+        found.append(
+            replace(state, superseded=superseded, absent_since=state.stream.last_day if absent and not superseded else None)
+        )
+    return found
+
+
+def _overdue(schedule: Schedule, last: date | None, late: int, today: date) -> list[str]:
+    if last is None and not schedule.down(today) and (schedule.since is None or late):
+        return ["no session has been taken in yet"]
+    if not late or last is None:
+        return []
+    due = due_day(schedule, last)
+    days = "1 day" if late == 1 else f"{late} days"
+    return [f"the session due on {due.isoformat() if due else ''} is {days} late; the last was on {last.isoformat()}"]
+
+
+def _out_sentence(state: QuantityState) -> str:
+    stream, verdict = state.stream, state.verdict
+    now = figure(stream.latest.value, stream.quantity, stream.unit)
+    limit = "" if verdict is None else f", limit {verdict.limit}"
+    word = (
+        " (conditional fail: its uncertainty reaches the limit)"
+        if verdict and verdict.conformity == "conditional fail"
+        else ""
+    )
+    since = "" if state.out_since in {None, stream.last_day} else f", since {state.out_since}"
+    return f"{state.title} is {now}{limit}{word}{since}"
+
+
+def _movement(state: QuantityState) -> Movement | None:
+    """Tell whether a quantity has moved, for the table of causes: alarmed, out of limits, or in a trend of two sigma."""
+    stream, chart = state.stream, state.chart
+    if not (chart.out[-2:].any() or state.out or _trending(state)):
+        return None
+    rising = _rising(state)
+    centre = float(chart.centre[-1])
+    since = state.onset.begun if state.onset else state.alarm_since or state.out_since or stream.last_day
+    now = figure(stream.latest.value, stream.quantity, stream.unit)
+    was = "" if np.isnan(centre) else f" from {figure(centre, stream.quantity, stream.unit)}"
+    sentence = f"{state.title} has {'risen' if rising else 'fallen'}{was} to {now}, since about {since.isoformat()}"
+    return Movement(stream.quantity, "up" if rising else "down", since, sentence, stream.latest.details)
+
+
+def _trending(state: QuantityState) -> bool:
+    if state.trend is None or not state.trend.real:
+        return False
+    days = state.stream.days[-state.trend.sessions :]
+    change = abs(state.trend.per_year) * float(days[-1] - days[0]) / 365.25
+    return change > _TREND_SIGMAS * float(state.chart.sigma[-1])
+
+
+def _rising(state: QuantityState) -> bool:
+    if state.shift:
+        return state.shift > 0
+    verdict, value = state.verdict, state.stream.latest.value
+    if verdict is not None and state.out:
+        return verdict.upper is not None and value > verdict.upper
+    return state.trend is not None and state.trend.per_year > 0
+
+
+def _recently_restarted(state: QuantityState) -> bool:
+    start = state.stream.starts[-1].index
+    return start > 0 and state.stream.days.size - start <= _RECENT
+
+
+def _changes(states: Iterable[QuantityState]) -> list[str]:
+    found = [
+        f"on {s.stream.starts[-1].day.isoformat()} {s.stream.starts[-1].reason}"
+        for s in states
+        if _recently_restarted(s) and " changed from " in s.stream.starts[-1].reason
+    ]
+    return list(dict.fromkeys(found))
+
+
+def _remarks(states: Sequence[QuantityState]) -> Iterable[str]:
+    restarted: dict[str, list[str]] = {}
+    for state in states:
+        if _recently_restarted(state):
+            start = state.stream.starts[-1]
+            restarted.setdefault(f"on {start.day.isoformat()} {start.reason}", []).append(state.title)
+    for why, titles in restarted.items():
+        yield f"{', '.join(dict.fromkeys(titles))}: charts start anew, because {why}"
+    for state in states:
+        if state.absent_since is not None:
+            yield f"{state.title} on {state.stream.phantom} has not been measured since {state.absent_since.isoformat()}"
+        if state.not_judged and "no limit for" not in state.not_judged:
+            yield f"{state.title} is not judged: {state.not_judged}"
