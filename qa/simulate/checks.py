@@ -67,6 +67,23 @@ def check(setup: "Setup") -> None:
     SettingError
         The first impossible setting found; the sentence names it, its value and what is allowed.
     """
+    _check_numbers(setup)
+    for name, allowed in _CHOICES.items():
+        if getattr(setup, name) not in allowed:
+            raise SettingError(f"{name} is {getattr(setup, name)!r}: it must be one of {', '.join(allowed)}.")
+    if setup.repetition_ms <= setup.echo_ms:
+        raise SettingError(f"echo_ms is {setup.echo_ms:g}: it must be below repetition_ms, {setup.repetition_ms:g}.")
+    if setup.profile_edge_mm > setup.thickness_mm / 4:
+        raise SettingError(
+            f"profile_edge_mm is {setup.profile_edge_mm:g}: it must be at most a quarter of thickness_mm, "
+            f"{setup.thickness_mm:g}, or the profile's width is no longer that."
+        )
+    _check_grid(setup)
+    _check_coil(setup)
+    _check_fit(setup)
+
+
+def _check_numbers(setup: "Setup") -> None:
     for name in (f.name for f in fields(setup)):
         value = getattr(setup, name)
         numbers = value if isinstance(value, tuple) else (value,)
@@ -84,19 +101,6 @@ def check(setup: "Setup") -> None:
         value = getattr(setup, name)
         if not low <= value <= high:
             raise SettingError(f"{name} is {value:g}: it must lie from {low:g} to {high:g}.")
-    if setup.repetition_ms <= setup.echo_ms:
-        raise SettingError(f"echo_ms is {setup.echo_ms:g}: it must be below repetition_ms, {setup.repetition_ms:g}.")
-    for name, allowed in _CHOICES.items():
-        if getattr(setup, name) not in allowed:
-            raise SettingError(f"{name} is {getattr(setup, name)!r}: it must be one of {', '.join(allowed)}.")
-    if setup.profile_edge_mm > setup.thickness_mm / 4:
-        raise SettingError(
-            f"profile_edge_mm is {setup.profile_edge_mm:g}: it must be at most a quarter of thickness_mm, "
-            f"{setup.thickness_mm:g}, or the profile's width is no longer that."
-        )
-    _check_grid(setup)
-    _check_coil(setup)
-    _check_fit(setup)
 
 
 def _check_grid(setup: "Setup") -> None:
