@@ -7,7 +7,7 @@ from datetime import date
 import numpy as np
 
 from qa.judge.causes import Movement, likely_causes
-from qa.judge.quantity import figure, quantity_state
+from qa.judge.quantity import figure, lasting_alarm, quantity_state
 from qa.judge.records import Assessment, Grounds, QuantityState, Standing
 from qa.judge.schedule import Schedule, completeness, days_overdue, due_day
 from qa.judge.streams import Stream, streams
@@ -18,7 +18,10 @@ __all__ = ["assess", "assess_streams"]
 
 _RECENT = 3
 """Sessions for which a new segment is news."""
-_TREND_SIGMAS = 2.0
+_USUAL = 12
+"""Sessions that tell how often a quantity is usually measured."""
+_TREND_LEVEL, _TREND_SESSIONS, _TREND_SIGMAS = 0.001, 16, 2.0
+_FAR = 4.5
 
 
 def assess(scanner_name: str, history: Iterable[Session], grounds: Grounds, today: date) -> Assessment:
@@ -100,7 +103,7 @@ def _in_use(states: list[QuantityState], last: date | None, schedule: Schedule) 
     found = []
     for state in states:
         days = state.stream.days
-        usual = max(float(np.median(np.diff(days[-_RECENT * 4 :]))) if days.size > 1 else 0.0, float(schedule.every_days))
+        usual = max(float(np.median(np.diff(days[-_USUAL:]))) if days.size > 1 else 0.0, float(schedule.every_days))
         others = [s for s in states if s is not state and s.quantity == state.quantity]
         superseded = any(
             int(o.stream.days[-1] - days[-1])
@@ -138,21 +141,36 @@ def _out_sentence(state: QuantityState) -> str:
 
 
 def _movement(state: QuantityState) -> Movement | None:
-    """Tell whether a quantity has moved, for the table of causes: alarmed, out of limits, or in a trend of two sigma."""
+    """Say how a quantity has moved, for the table of causes; None where it has not."""
     stream, chart = state.stream, state.chart
-    if not (chart.out[-2:].any() or state.out or _trending(state)):
+    if not _moved(state):
         return None
     rising = _rising(state)
     centre = float(chart.centre[-1])
-    since = state.onset.begun if state.onset else state.alarm_since or state.out_since or stream.last_day
+    begun = state.onset
+    since = begun.begun if begun else state.alarm_since or state.out_since or stream.last_day
     now = figure(stream.latest.value, stream.quantity, stream.unit)
     was = "" if np.isnan(centre) else f" from {figure(centre, stream.quantity, stream.unit)}"
     sentence = f"{state.title} has {'risen' if rising else 'fallen'}{was} to {now}, since about {since.isoformat()}"
-    return Movement(stream.quantity, "up" if rising else "down", since, sentence, stream.latest.details)
+    earliest, latest = (begun.earliest, begun.latest) if begun else (since, since)
+    return Movement(stream.quantity, "up" if rising else "down", earliest, latest, sentence, stream.latest.details)
+
+
+def _moved(state: QuantityState) -> bool:
+    """Tell a movement from a chance alarm: out, drifting, trending, in a lasting alarm, or at once far from the centre.
+
+    Of the set-up every alarm counts: it is made anew each time, so a single odd one is what is looked for.
+    """
+    chart = state.chart
+    far = abs(float(chart.standardised[-1])) > _FAR
+    setup = state.quantity in QUANTITIES and QUANTITIES[state.quantity].setup
+    return (
+        state.out or bool(state.drifting) or _trending(state) or lasting_alarm(chart) or far or (setup and bool(chart.out[-1]))
+    )
 
 
 def _trending(state: QuantityState) -> bool:
-    if state.trend is None or not state.trend.real:
+    if state.trend is None or state.trend.probability > _TREND_LEVEL or state.trend.sessions < _TREND_SESSIONS:
         return False
     days = state.stream.days[-state.trend.sessions :]
     change = abs(state.trend.per_year) * float(days[-1] - days[0]) / 365.25

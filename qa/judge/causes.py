@@ -21,11 +21,15 @@ _MOST = 3
 
 @dataclass(frozen=True)
 class Movement:
-    """A quantity that has moved: which way, since when, the sentence that says so, and details of its latest measurement."""
+    """A quantity that has moved.
+
+    Which way; between which days that began; the sentence that says so; and details of its latest measurement.
+    """
 
     quantity: str
     direction: Direction
-    since: date
+    earliest: date
+    latest: date
     sentence: str
     details: Mapping[str, Any]
 
@@ -148,14 +152,17 @@ def _moving(movements: Iterable[Movement], names: str, way: str) -> list[Movemen
 
 
 def _before(events: Iterable[Event], pattern: Pattern, used: Sequence[Movement]) -> Event | None:
-    """Find the latest event that can have set off what moved: not after it began, and not long before."""
-    began = min(m.since for m in used)
+    """Find the latest event that can have set off what moved: a movement may have begun on its day or soon after."""
     fitting = [
         e
         for e in events
         if e.kind in pattern.after
-        and e.day <= began <= e.day + timedelta(days=pattern.days)
-        and (not e.quantities or any(m.quantity in e.quantities for m in used))
+        and any(
+            m.latest >= e.day
+            and m.earliest <= e.day + timedelta(days=pattern.days)
+            and (not e.quantities or m.quantity in e.quantities)
+            for m in used
+        )
     ]
     return max(fitting, key=lambda e: e.day, default=None)
 

@@ -167,6 +167,12 @@ def normal_score(t: float, freedom: float) -> float:
     return math.copysign(scale * math.sqrt(math.log1p(t * t / freedom)), t)
 
 
+def _scores(t: Floats, freedom: float) -> Floats:
+    """Do as `normal_score` for many at once; one at a time plain Python is faster."""
+    scale = (freedom - 2 / 3 + 0.1 / freedom) / math.sqrt(freedom - 5 / 6)
+    return np.copysign(scale * np.sqrt(np.log1p(t * t / freedom)), t)
+
+
 def student_bound(z: float, freedom: Floats) -> Floats:
     """Turn a standard normal value into the value of Student's distribution: the inverse of `normal_score`."""
     scale = (freedom - 2 / 3 + 0.1 / freedom) / np.sqrt(freedom - 5 / 6)
@@ -362,12 +368,12 @@ def _walk(x: Floats, steps: list[float], outlier: NDArray[np.bool_], rules: Cont
         scores.append(z)
         course.append((smoothed, deviation))
         models.append(model)
-    rest = [normal_score((value - model.mean) / model.spread, model.freedom) for value in values[settled:]]
-    course += smooth.course(rest, steps[settled:], model)
+    rest = _scores((x[settled:] - model.mean) / model.spread, model.freedom)
+    course += smooth.course(rest.tolist(), steps[settled:], model)
     by_session = np.empty((len(_Model._fields), x.size - LEARNING))
     by_session[:, : len(models)] = np.array(models).T
     by_session[:, len(models) :] = np.array(model)[:, np.newaxis]
-    return by_session, np.array(scores + rest), np.array(course).T
+    return by_session, np.concatenate((scores, rest)), np.array(course).T
 
 
 def _steps(day: Floats) -> list[float]:

@@ -1,9 +1,10 @@
 """One quantity of one scanner: from its history to its state on a day."""
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterable
 from dataclasses import replace
 from datetime import date
+from itertools import takewhile
 
 import numpy as np
 
@@ -17,7 +18,7 @@ from qa.judge.streams import Stream
 from qa.quantities import QUANTITIES, Sense
 from qa.records import Limit, Verdict
 
-__all__ = ["figure", "quantity_state"]
+__all__ = ["figure", "lasting_alarm", "quantity_state"]
 
 _MARGIN = 0.25
 """Share of the margin to a limit that must be used up before an alarm counts as drifting towards it."""
@@ -63,7 +64,7 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
     fixed = verdict is not None and (limit is None or limit.per_day is None)
     chart = control_chart(stream.days, stream.values, [start.index for start in stream.starts], grounds.rules)
     days, values = stream.days[stream.segment], stream.values[stream.segment]
-    alarm, out = bool(chart.out[-1]), _row(stream, [v is not None and is_out(v.conformity) for v in stream.verdicts])
+    alarm, out = bool(chart.out[-1]), _row(stream, (v is not None and is_out(v.conformity) for v in reversed(stream.verdicts)))
     moving = trend(days, values)
     coming = None
     if fixed and verdict is not None and moving is not None and moving.real:
@@ -79,7 +80,7 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
         chart=chart,
         control=_control(chart),
         rules=tuple(text for rule, text in RULES.items() if rule in chart.tripped and chart.tripped[rule][-1]),
-        alarm_since=_row(stream, chart.out.tolist()),
+        alarm_since=_row(stream, reversed(chart.out.tolist())),
         shift=shift,
         shift_sigmas=sigmas,
         worse=worse,
@@ -97,12 +98,10 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
     return replace(state, drifting=tuple(_drifting(state, fixed=fixed, awaiting=awaiting)))
 
 
-def _row(stream: Stream, flags: Sequence[bool]) -> date | None:
+def _row(stream: Stream, latest_first: Iterable[bool]) -> date | None:
     """Give the first day of the unbroken row of flags that ends with the latest value; None where that has none."""
-    first = len(flags)
-    while first and flags[first - 1]:
-        first -= 1
-    return None if first == len(flags) else date.fromordinal(int(stream.days[first]))
+    length = sum(1 for _ in takewhile(bool, latest_first))
+    return date.fromordinal(int(stream.days[-length])) if length else None
 
 
 def _control(chart: ControlChart) -> ControlState:
@@ -126,6 +125,11 @@ def _shift(stream: Stream, chart: ControlChart, verdict: Verdict | None) -> tupl
     else:
         worse = shift < 0 if sense is Sense.HIGHER_IS_BETTER else shift > 0 if sense is Sense.LOWER_IS_BETTER else shift != 0
     return shift, shift / float(chart.sigma[-1]), worse, used
+
+
+def lasting_alarm(chart: ControlChart) -> bool:
+    """Tell whether a rule that a single odd session does not trip trips at the latest."""
+    return any(rule in _LASTING and bool(where[-1]) for rule, where in chart.tripped.items())
 
 
 def _bounded(limit: Limit) -> bool:
@@ -155,7 +159,7 @@ def _drifting(state: QuantityState, *, fixed: bool, awaiting: bool) -> list[str]
         return found
     if state.forecast is not None:
         found.append(_foretold(state, state.forecast))
-    lasting = any(rule in _LASTING and bool(where[-1]) for rule, where in state.chart.tripped.items())
+    lasting = lasting_alarm(state.chart)
     if lasting and state.worse and fixed and state.margin_used is not None and state.margin_used >= _MARGIN:
         found.append(
             f"{state.title} has been out of control since {_iso(state.alarm_since)} and has gone "

@@ -10,13 +10,12 @@ from dataclasses import dataclass
 from datetime import date
 from itertools import pairwise
 from operator import attrgetter
-from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats
-from qa.records import Event, Measurement, RecordedAcquisition, Session, Settings, Verdict
+from qa.records import Event, Judged, Measurement, RecordedAcquisition, Session, Settings, Verdict
 
 __all__ = ["SegmentStart", "Stream", "streams"]
 
@@ -105,19 +104,9 @@ class Stream:
         return slice(self.starts[-1].index, None)
 
 
-class _Conditions(NamedTuple):
-    settings: int
-    software: str
-    method: str
-    method_version: int
-
-
-class _Point(NamedTuple):
-    day: int
-    conditions: _Conditions
-    measurement: Measurement
-    verdict: Verdict | None
-    acquisition: RecordedAcquisition
+_Conditions = tuple[int, str, str, int]
+"""Settings by number, scanner software, method and its version: plain tuples, because there are as many as figures."""
+_Point = tuple[int, _Conditions, Judged, RecordedAcquisition]
 
 
 def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[Stream, ...]:
@@ -141,12 +130,12 @@ def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[
     for session in sorted(sessions, key=lambda s: s.day):
         day = session.day.toordinal()
         for acquisition in session.acquisitions:
-            way = ways.number(acquisition.settings)
+            way, software = ways.number(acquisition.settings), acquisition.scanner.software
             for judged in acquisition.judged:
                 measurement = judged.measurement
-                conditions = _Conditions(way, acquisition.scanner.software, measurement.method, measurement.method_version)
+                conditions = (way, software, measurement.method, measurement.method_version)
                 by_way = found.setdefault((measurement.quantity, acquisition.phantom), {})
-                by_way.setdefault(way, {})[day] = _Point(day, conditions, measurement, judged.verdict, acquisition)
+                by_way.setdefault(way, {})[day] = (day, conditions, judged, acquisition)
     restarts = sorted((e for e in events if e.restarts_baseline), key=lambda e: e.day)
     return tuple(
         _stream(chain, ways, [e for e in restarts if not e.quantities or quantity in e.quantities])
@@ -194,55 +183,59 @@ def _say(value: object) -> str:
 def _chains(groups: Iterable[list[_Point]]) -> list[list[_Point]]:
     """Join groups that follow each other in time, those of one protocol first; such as overlap stay apart."""
     chains: list[list[_Point]] = []
-    for group in sorted(groups, key=lambda g: (g[0].day, g[-1].day)):
-        protocol = group[0].acquisition.settings.protocol
-        ended = [chain for chain in chains if chain[-1].day < group[0].day]
+    for group in sorted(groups, key=lambda g: (g[0][0], g[-1][0])):
+        ended = [chain for chain in chains if chain[-1][0] < group[0][0]]
         if ended:
-            max(ended, key=lambda c: (c[-1].acquisition.settings.protocol == protocol, c[-1].day)).extend(group)
+            max(ended, key=lambda c: (_protocol(c[-1]) == _protocol(group[0]), c[-1][0])).extend(group)
         else:
             chains.append(group)
     return chains
 
 
+def _protocol(point: _Point) -> str:
+    return point[3].settings.protocol
+
+
 def _stream(points: list[_Point], ways: _Ways, restarts: Sequence[Event]) -> Stream:
-    last = points[-1]
-    starts = [SegmentStart(0, date.fromordinal(points[0].day), "the first session")]
-    for index, (old, new) in enumerate(pairwise(points), start=1):
-        reasons = [] if old.conditions == new.conditions else list(_changes(old.conditions, new.conditions, ways))
-        reasons += [
-            f"the baseline was restarted: {event.text}" for event in restarts if old.day < event.day.toordinal() <= new.day
-        ]
+    days, conditions, judged, acquisitions = zip(*points, strict=True)
+    starts = [SegmentStart(0, date.fromordinal(days[0]), "the first session")]
+    events = [(event.day.toordinal(), event.text) for event in restarts]
+    for index, (old, new) in enumerate(pairwise(conditions), start=1):
+        reasons = [] if old == new else list(_changes(old, new, ways))
+        reasons += [f"the baseline was restarted: {text}" for day, text in events if days[index - 1] < day <= days[index]]
         if reasons:
-            starts.append(SegmentStart(index, date.fromordinal(new.day), "; ".join(reasons)))
+            starts.append(SegmentStart(index, date.fromordinal(days[index]), "; ".join(reasons)))
+    measurements = [j.measurement for j in judged]
+    latest, last = measurements[-1], acquisitions[-1]
     return Stream(
-        last.acquisition.scanner_name,
-        last.measurement.quantity,
-        last.acquisition.phantom,
-        last.acquisition.settings.protocol,
-        last.acquisition.settings.receive_coil,
-        last.measurement.unit,
-        np.array([p.day for p in points], dtype=np.int64),
-        np.array([p.measurement.value for p in points], dtype=float),
-        np.array([p.measurement.standard_uncertainty for p in points], dtype=float),
-        tuple(p.verdict for p in points),
-        tuple(p.acquisition.identifier for p in points),
+        last.scanner_name,
+        latest.quantity,
+        last.phantom,
+        last.settings.protocol,
+        last.settings.receive_coil,
+        latest.unit,
+        np.array(days, dtype=np.int64),
+        np.array([m.value for m in measurements], dtype=float),
+        np.array([m.standard_uncertainty for m in measurements], dtype=float),
+        tuple([j.verdict for j in judged]),
+        tuple([a.identifier for a in acquisitions]),
         tuple(starts),
-        last.measurement,
-        last.acquisition.settings.slice_thickness_mm,
-        last.acquisition.scanner.field_strength_T,
+        latest,
+        last.settings.slice_thickness_mm,
+        last.scanner.field_strength_T,
     )
 
 
 def _changes(old: _Conditions, new: _Conditions, ways: _Ways) -> Iterator[str]:
-    if old.settings != new.settings:
-        for word, a, b in zip(_SETTING_WORDS.values(), ways.known[old.settings], ways.known[new.settings], strict=True):
+    if old[0] != new[0]:
+        for word, a, b in zip(_SETTING_WORDS.values(), ways.known[old[0]], ways.known[new[0]], strict=True):
             if not _same(a, b):
                 yield f"{word} changed from {_say(a)} to {_say(b)}"
-    if old.software != new.software:
-        yield f"scanner software changed from {_say(old.software)} to {_say(new.software)}"
+    if old[1] != new[1]:
+        yield f"scanner software changed from {_say(old[1])} to {_say(new[1])}"
     if old[2:] != new[2:]:
         yield f"the method changed from {_method(old)} to {_method(new)}"
 
 
 def _method(conditions: _Conditions) -> str:
-    return f"{conditions.method} (version {conditions.method_version})"
+    return f"{conditions[2]} (version {conditions[3]})"
