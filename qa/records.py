@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from qa.geometry import Floats, Plane
 
 __all__ = [
+    "CONFORMITIES",
     "Acquisition",
     "Baseline",
     "Conformity",
@@ -25,6 +26,7 @@ __all__ = [
     "DecisionRule",
     "Event",
     "EventKind",
+    "History",
     "ImageKind",
     "Judged",
     "Limit",
@@ -48,6 +50,7 @@ __all__ = [
 
 ImageKind = Literal["magnitude", "phase", "real", "imaginary", "other"]
 Conformity = Literal["pass", "conditional pass", "conditional fail", "fail"]
+CONFORMITIES: tuple[Conformity, ...] = ("pass", "conditional pass", "conditional fail", "fail")
 DecisionRule = Literal["simple", "guarded"]
 EventKind = Literal["service", "repair", "replacement", "upgrade", "calibration", "protocol change", "downtime", "note"]
 _NOTHING: Mapping[str, Any] = MappingProxyType({})
@@ -500,6 +503,45 @@ class Session:
     scanner_name: str
     day: date
     acquisitions: tuple[RecordedAcquisition, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class History:
+    """Many acquisitions and their n figures as columns, so that ten years of a fleet can be judged at once.
+
+    Rows stand in order of scanner, day, time and place in the acquisition. What is not here (details, regions, the verdict's
+    sentence) is read for single rows by acquisition and position.
+
+    Attributes
+    ----------
+    acquisitions : tuple of RecordedAcquisition
+        Without figures, files, series and what was not measured; equal settings and scanners are one object.
+    quantities, methods : tuple
+        Names of the quantities, and (method, version) pairs, that the rows point to.
+    acquisition, quantity, method : (n,) int
+        Indices into these.
+    position : (n,) int
+        Place in the acquisition, from 1.
+    values, uncertainties : (n,) float
+        In the quantity's unit; standard uncertainties.
+    conformity : (n,) int
+        Index into `CONFORMITIES`; -1 where no limit was applied.
+    lower, upper : (n,) float
+        Bounds that were applied; NaN where open.
+    """
+
+    acquisitions: tuple[RecordedAcquisition, ...]
+    quantities: tuple[str, ...]
+    methods: tuple[tuple[str, int], ...]
+    acquisition: NDArray[np.int64]
+    position: NDArray[np.int64]
+    quantity: NDArray[np.int64]
+    method: NDArray[np.int64]
+    values: Floats
+    uncertainties: Floats
+    conformity: NDArray[np.int64]
+    lower: Floats
+    upper: Floats
 
 
 @dataclass(frozen=True, eq=False)

@@ -1,13 +1,13 @@
 """What is read from the record; each function works on an open connection and sees one state."""
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime
 from itertools import groupby
-from operator import attrgetter
+from operator import attrgetter, itemgetter
 from typing import Any
 
-from sqlalchemy import Column, Connection, Select, Table, select
+from sqlalchemy import Column, Connection, Row, Select, Table, select
 
 from qa.records import RecordedAcquisition, Session
 from qa.store import rows
@@ -28,19 +28,23 @@ from qa.store.tables import (
 )
 
 __all__ = [
+    "MOST_NAMES",
     "LimitSet",
     "Refusal",
     "acquisition_of",
+    "acquisition_rows",
+    "by_entry",
     "known",
     "latest_limits",
     "limit_versions",
     "refusals_since",
     "same",
     "sessions_between",
+    "standing_acquisitions",
 ]
 
 
-_MOST_NAMES = 500
+MOST_NAMES = 500
 """Values in one IN list; SQLite takes more, but not in every build."""
 
 
@@ -79,8 +83,8 @@ def known(connection: Connection, column: Column[str], values: Iterable[str]) ->
     """Tell which of these values the column holds."""
     wanted = sorted(set(values) - {""})
     found: set[str] = set()
-    for start in range(0, len(wanted), _MOST_NAMES):
-        found.update(connection.execute(select(column).where(column.in_(wanted[start : start + _MOST_NAMES]))).scalars())
+    for start in range(0, len(wanted), MOST_NAMES):
+        found.update(connection.execute(select(column).where(column.in_(wanted[start : start + MOST_NAMES]))).scalars())
     return found
 
 
@@ -151,11 +155,10 @@ def standing_acquisitions(scanner_name: str | None, from_day: date | None, to_da
     return query
 
 
-def sessions_between(
+def acquisition_rows(
     connection: Connection, scanner_name: str | None, from_day: date | None, to_day: date | None
-) -> tuple[Session, ...]:
-    """Give the sessions of a period in order of scanner and day, with all that was recorded of them."""
-    wanted = standing_acquisitions(scanner_name, from_day, to_day)
+) -> Sequence[Row[Any]]:
+    """Give the acquisitions of a period, with what the tables beside say of them, in order of scanner, day and time."""
     query = (
         select(
             acquisitions,
@@ -167,34 +170,38 @@ def sessions_between(
         .join(sessions, sessions.c.entry == acquisitions.c.session)
         .join(software, software.c.entry == acquisitions.c.software)
         .join(limit_sets, limit_sets.c.version == acquisitions.c.limits_version)
-        .where(acquisitions.c.entry.in_(wanted))
+        .where(acquisitions.c.entry.in_(standing_acquisitions(scanner_name, from_day, to_day)))
         .order_by(sessions.c.scanner_name, sessions.c.day, acquisitions.c.acquired_at, acquisitions.c.entry)
     )
-    parts = {table: _by_entry(connection, table, wanted) for table in (series, files, measurements, not_measured, verdicts)}
-    texts = dict(connection.execute(select(details.c.entry, details.c.content).where(details.c.entry.in_(wanted))).all())
-    found: list[tuple[str, str, RecordedAcquisition]] = []
-    for row in connection.execute(query):
+    return connection.execute(query).all()
+
+
+def sessions_between(
+    connection: Connection, scanner_name: str | None, from_day: date | None, to_day: date | None
+) -> tuple[Session, ...]:
+    """Give the sessions of a period in order of scanner and day, with all that was recorded of them."""
+    wanted = standing_acquisitions(scanner_name, from_day, to_day)
+    parts = {table: by_entry(connection, table, wanted) for table in (series, files, measurements, not_measured, verdicts)}
+    texts = {
+        row.entry: row.content
+        for row in connection.execute(select(details.c.entry, details.c.content).where(details.c.entry.in_(wanted)))
+    }
+    build = rows.Builder()
+    found: list[tuple[tuple[str, str], RecordedAcquisition]] = []
+    for row in acquisition_rows(connection, scanner_name, from_day, to_day):
         of = {table: rows_of.get(row.entry, ()) for table, rows_of in parts.items()}
-        acquisition = rows.recorded(
-            row,
-            series_uids=list(dict.fromkeys(one.series_instance_uid for one in of[series])),
-            files=of[files],
-            judged=rows.judged_from_rows(of[measurements], texts[row.entry], of[verdicts]),
-            not_measured=of[not_measured],
-        )
-        found.append((row.scanner_name, row.day, acquisition))
+        judged = rows.judged_from_rows(of[measurements], texts[row.entry], of[verdicts])
+        acquisition = build.acquisition(row, series=of[series], files=of[files], judged=judged, not_measured=of[not_measured])
+        found.append(((row.scanner_name, row.day), acquisition))
     return tuple(
-        Session(name, date.fromisoformat(day), tuple(acquisition for _, _, acquisition in group))
-        for (name, day), group in _grouped(found)
+        Session(name, date.fromisoformat(day), tuple(acquisition for _, acquisition in group))
+        for (name, day), group in groupby(found, key=itemgetter(0))
     )
 
 
-def _grouped(
-    found: list[tuple[str, str, RecordedAcquisition]],
-) -> Iterator[tuple[tuple[str, str], Iterator[tuple[str, str, RecordedAcquisition]]]]:
-    return groupby(found, key=lambda item: item[:2])
-
-
-def _by_entry(connection: Connection, table: Table, wanted: Select[tuple[int]]) -> dict[int, Sequence[Any]]:
+def by_entry(
+    connection: Connection, table: Table, wanted: Select[tuple[int]] | Sequence[int]
+) -> dict[int, Sequence[Row[Any]]]:
+    """Give the rows of a table for these entries, each entry's in order."""
     query = select(table).where(table.c.entry.in_(wanted)).order_by(table.c.entry, table.c.position)
     return {entry: list(group) for entry, group in groupby(connection.execute(query), key=attrgetter("entry"))}

@@ -24,11 +24,11 @@ from qa.records import (
 )
 
 __all__ = [
+    "Builder",
     "content_sha256",
     "dump",
     "judged_from_rows",
     "measurement_rows",
-    "recorded",
     "series_and_file_rows",
     "sound",
     "verdict_row",
@@ -194,40 +194,55 @@ def _verdict(quantity: str, row: Any) -> Verdict:  # noqa: ANN401 - a row
     )
 
 
-def recorded(
-    row: Any,  # noqa: ANN401 - a row
-    *,
-    series_uids: Sequence[str],
-    files: Sequence[Any],
-    judged: tuple[Judged, ...],
-    not_measured: Sequence[Any],
-) -> RecordedAcquisition:
-    """Put an acquisition together again from the rows of all its tables."""
-    centre = (row.centre_x_mm, row.centre_y_mm, row.centre_z_mm)
-    scanner = {key: value for key, value in json.loads(row.scanner).items() if key in _SCANNER_FIELDS}
-    settings: dict[str, Any] = {
-        key: tuple(value) if isinstance(value, list) else value
-        for key, value in json.loads(row.settings).items()
-        if key in _SETTINGS_FIELDS
-    }
-    return RecordedAcquisition(
-        identifier=row.entry,
-        scanner_name=row.scanner_name,
-        phantom=row.phantom,
-        phantom_sha256=row.phantom_sha256,
-        acquired_at=datetime.fromisoformat(row.acquired_at),
-        taken_in_at=datetime.fromisoformat(row.taken_in_at),
-        scanner=Scanner(**scanner),
-        settings=Settings(**settings),
-        series_uids=tuple(series_uids),
-        files=tuple(SourceFile(Path(file.path), file.sop_instance_uid, file.sha256) for file in files),
-        centre_patient=None if row.centre_x_mm is None else centre,
-        rotation_deg=row.rotation_deg,
-        tilt_deg=row.tilt_deg,
-        judged=judged,
-        not_measured=tuple(NotMeasured(one.quantity, one.reason) for one in not_measured),
-        remarks=tuple(json.loads(row.remarks)),
-        software_version=row.software_version,
-        limits_version=row.limits_version,
-        limits_sha256=row.limits_sha256,
-    )
+class Builder:
+    """Puts acquisitions together again from their rows; equal scanners and settings become one object."""
+
+    def __init__(self) -> None:
+        self._scanners: dict[str, Scanner] = {}
+        self._settings: dict[str, Settings] = {}
+
+    def acquisition(
+        self,
+        row: Any,  # noqa: ANN401 - a row
+        *,
+        series: Sequence[Any] = (),
+        files: Sequence[Any] = (),
+        judged: tuple[Judged, ...] = (),
+        not_measured: Sequence[Any] = (),
+    ) -> RecordedAcquisition:
+        """Make the record of one row of acquisitions and the rows of other tables that belong to it."""
+        centre = (row.centre_x_mm, row.centre_y_mm, row.centre_z_mm)
+        return RecordedAcquisition(
+            identifier=row.entry,
+            scanner_name=row.scanner_name,
+            phantom=row.phantom,
+            phantom_sha256=row.phantom_sha256,
+            acquired_at=datetime.fromisoformat(row.acquired_at),
+            taken_in_at=datetime.fromisoformat(row.taken_in_at),
+            scanner=self._scanner(row.scanner),
+            settings=self._setting(row.settings),
+            series_uids=tuple(dict.fromkeys(one.series_instance_uid for one in series)),
+            files=tuple(SourceFile(Path(file.path), file.sop_instance_uid, file.sha256) for file in files),
+            centre_patient=None if row.centre_x_mm is None else centre,
+            rotation_deg=row.rotation_deg,
+            tilt_deg=row.tilt_deg,
+            judged=judged,
+            not_measured=tuple(NotMeasured(one.quantity, one.reason) for one in not_measured),
+            remarks=() if row.remarks == "[]" else tuple(json.loads(row.remarks)),
+            software_version=row.software_version,
+            limits_version=row.limits_version,
+            limits_sha256=row.limits_sha256,
+        )
+
+    def _scanner(self, text: str) -> Scanner:
+        if text not in self._scanners:
+            self._scanners[text] = Scanner(**{k: v for k, v in json.loads(text).items() if k in _SCANNER_FIELDS})
+        return self._scanners[text]
+
+    def _setting(self, text: str) -> Settings:
+        if text not in self._settings:
+            given: dict[str, Any] = {
+                k: tuple(v) if isinstance(v, list) else v for k, v in json.loads(text).items() if k in _SETTINGS_FIELDS
+            }
+            self._settings[text] = Settings(**given)
+        return self._settings[text]

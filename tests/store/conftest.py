@@ -76,6 +76,7 @@ class Maker:
         given = {
             "conformity": "conditional pass", "lower": 190.1, "upper": None, "limit": "at least 190.1", "rule": "guarded",
             "source": "invented", "probability": 0.9876543210123456, "guard_band": 0.2, "warn_lower": 200.0, "warned": True,
+            "limit_key": "snr, phantom sphere-170",
         }  # fmt: skip
         return Verdict(quantity, **{**given, **other})
 

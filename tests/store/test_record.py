@@ -1,5 +1,5 @@
 import struct
-from dataclasses import replace
+from dataclasses import fields, replace
 from datetime import UTC, date, datetime, timedelta
 from pathlib import Path, PurePath
 
@@ -8,8 +8,9 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from qa.errors import UsageError
-from qa.records import Judged, NotMeasured, SourceFile
+from qa.records import Baseline, Event, Judged, NotMeasured, SourceFile, Verdict
 from qa.store import Who
+from qa.store.tables import baselines, events, verdicts
 
 
 def test_a_session_comes_back_as_it_went_in(record, make):
@@ -259,3 +260,10 @@ def test_a_run_is_noted(record, make):
 def test_a_local_time_without_zone_is_kept_as_the_machines(record, make):
     record.limits_version("[1]", make.who, datetime(2026, 3, 2, 9, 0), "first")  # noqa: DTZ001
     assert record.limit_sets()[0].when == datetime(2026, 3, 2, 9, 0).astimezone(UTC)
+
+
+def test_every_field_of_a_verdict_has_its_column():
+    renamed = {"limit": "limit_text", "quantity": None}
+    assert {renamed.get(f.name, f.name) for f in fields(Verdict)} - {None} == set(verdicts.c.keys()) - {"entry", "position"}
+    assert {f.name for f in fields(Event)} == set(events.c.keys()) - {"entry"}
+    assert {f.name for f in fields(Baseline)} == set(baselines.c.keys()) - {"entry", "rests_on"}
