@@ -12,22 +12,23 @@ import re
 import struct
 import warnings
 import zlib
-from collections.abc import Iterator, Mapping, MutableSequence
+from collections.abc import Callable, Iterator, Mapping, MutableSequence
 from datetime import date, datetime, time
-from io import BytesIO
+from io import SEEK_CUR, BytesIO
 from typing import Any
 
+from pydicom.charset import convert_encodings
 from pydicom.datadict import dictionary_VR
 from pydicom.dataelem import RawDataElement, convert_raw_data_element
 from pydicom.dataset import Dataset
-from pydicom.filereader import read_dataset
+from pydicom.filereader import data_element_generator
 from pydicom.sequence import Sequence
 
 from qa.dicom.refusal import RefusalError
 
 __all__ = ["Elements", "File", "parse", "quietly"]
 
-_STORAGE_CLASS, _TRANSFER_SYNTAX = 0x00020002, 0x00020010
+_CHARACTER_SET, _STORAGE_CLASS, _TRANSFER_SYNTAX = 0x00080005, 0x00020002, 0x00020010
 _DIRECTORY = "1.2.840.10008.1.3.10"
 _EXPLICIT = "1.2.840.10008.1.2.1"
 _DEFLATED = "1.2.840.10008.1.2.1.99"
@@ -83,7 +84,7 @@ class Elements:
     elements : mapping
         Elements as pydicom holds them, raw where they were never looked at, by tag.
     encoding
-        The character set of the data set they stand in, as pydicom gives it.
+        The character set of an item's data set, as pydicom gives it; without it, the elements' own.
     """
 
     __slots__ = ("_creators", "_elements", "_encoding")
@@ -96,7 +97,6 @@ class Elements:
     @classmethod
     def of(cls, dataset: Dataset) -> "Elements":
         """Return the look-ups in one of pydicom's data sets, as it stands now."""
-        # Plain integers as keys: pydicom's tags compare in Python code, which would be half the cost of reading a header.
         return cls({int(tag): element for tag, element in dataset.items()}, dataset.original_character_set)
 
     def raw(self, tag: int) -> _Raw:
@@ -213,20 +213,20 @@ class Elements:
         if not isinstance(element, RawDataElement):
             return element.value
         try:
-            return convert_raw_data_element(element, encoding=self._encoding).value
+            encoding = self._encoding or convert_encodings(list(self.strings(_CHARACTER_SET)))
+            return convert_raw_data_element(element, encoding=encoding).value
         except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged element leads it to)
             return None
 
 
 class File:
-    """One parsed file: its elements, its transfer syntax, and the data set for the pixel decoders."""
+    """One parsed file: its elements, those of its meta information, and its transfer syntax."""
 
-    __slots__ = ("dataset", "elements", "meta", "transfer_syntax")
+    __slots__ = ("elements", "meta", "transfer_syntax")
 
-    def __init__(self, dataset: Dataset, meta: Dataset, transfer_syntax: str) -> None:
-        self.dataset = dataset
-        self.elements = Elements.of(dataset)
-        self.meta = Elements.of(meta)
+    def __init__(self, elements: Elements, meta: Elements, transfer_syntax: str) -> None:
+        self.elements = elements
+        self.meta = meta
         self.transfer_syntax = transfer_syntax
 
     @property
@@ -238,39 +238,52 @@ class File:
 def parse(content: bytes) -> File:
     """Parse a file's header and leave its pixels alone.
 
+    Of a file that is damaged or cut short, what stands before the damage is given.
+
     Raises
     ------
     RefusalError
         The bytes are no DICOM data set.
     """
     stream = BytesIO(content)
+    if content[128:_PREFIX_END] == b"DICM":
+        stream.seek(_PREFIX_END)
+    meta = Elements(_read(stream, is_implicit=False, is_little=True, stop_when=_is_past_meta))
+    syntax = meta.text(_TRANSFER_SYNTAX)
+    if syntax == _DEFLATED:
+        stream = BytesIO(_inflated(content[stream.tell() :]))
+    start = stream.read(6)
+    stream.seek(-len(start), SEEK_CUR)
+    if not syntax:
+        is_big = _is_explicit(start) and start[:1] == b"\0"
+        syntax = _BIG_ENDIAN if is_big else _EXPLICIT if _is_explicit(start) else _IMPLICIT[0]
+    # Where transfer syntax and first element disagree on whether value representations are written, the element is right.
+    elements = _read(stream, is_implicit=not _is_explicit(start), is_little=syntax != _BIG_ENDIAN)
+    if not elements:
+        raise RefusalError("the file is damaged: its header cannot be read")
+    return File(Elements(elements), meta, syntax)
+
+
+def _read(
+    stream: BytesIO, *, is_implicit: bool, is_little: bool, stop_when: Callable[[int, str | None, int], bool] | None = None
+) -> dict[int, _Raw]:
+    """Read elements up to the end, a stop, or damage. Keys are plain integers: pydicom's tags compare in Python code."""
+    elements: dict[int, _Raw] = {}
     try:
-        if content[128:_PREFIX_END] == b"DICM":
-            stream.seek(_PREFIX_END)
-        meta = read_dataset(stream, is_implicit_VR=False, is_little_endian=True, stop_when=_is_past_meta)
-        syntax = Elements.of(meta).text(_TRANSFER_SYNTAX)
-        if syntax == _DEFLATED:
-            stream = BytesIO(_inflated(content[stream.tell() :]))
-        syntax = syntax or _guessed_syntax(content[stream.tell() : stream.tell() + 6])
-        dataset = read_dataset(
-            stream, is_implicit_VR=syntax in _IMPLICIT, is_little_endian=syntax != _BIG_ENDIAN, stop_when=None
-        )
-    except RefusalError:
-        raise
+        for element in data_element_generator(stream, is_implicit, is_little, stop_when):
+            elements[int(element.tag)] = element
     except Exception:  # noqa: BLE001 (pydicom raises whatever a damaged file leads it to, and may quote it)
-        raise RefusalError("the file is damaged: its header cannot be read") from None
-    return File(dataset, meta, syntax)
+        return elements
+    return elements
+
+
+def _is_explicit(start: bytes) -> bool:
+    """Tell from its first six bytes whether a data set writes value representations."""
+    return start[4:6].isalpha() and start[4:6].isupper()
 
 
 def _is_past_meta(tag: int, _vr: str | None, _length: int) -> bool:
     return tag >> 16 != 2
-
-
-def _guessed_syntax(start: bytes) -> str:
-    """Guess the encoding of a data set without file meta information from its first element."""
-    if start[4:6].isalpha() and start[4:6].isupper():
-        return _BIG_ENDIAN if start[:1] == b"\x00" else _EXPLICIT
-    return _IMPLICIT[0]
 
 
 def _inflated(deflated: bytes) -> bytes:

@@ -4,7 +4,7 @@ import math
 from collections import Counter, defaultdict
 from collections.abc import Callable, Hashable, Mapping, Sequence
 from dataclasses import dataclass, replace
-from statistics import median
+from statistics import median, median_low
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +17,7 @@ from qa.records import Refused, Series
 __all__ = ["Stacked", "stack"]
 
 _UNEVEN = 0.1  # share of the usual step by which a step may differ from a whole number of them
+_EXACTLY = 0.005
 _NAMED_AT_MOST = 6
 _NEGATIVE_SHARE = 0.05
 
@@ -189,11 +190,11 @@ def _gaps(places: Sequence[float], frames: Sequence[Frame]) -> list[str]:
         return []
     steps = np.diff(places)
     nominal, thickness = frames[0].settings.slice_spacing_mm, frames[0].settings.slice_thickness_mm or 0.0
-    usual = float(median(steps))
+    usual = float(median_low(steps))
     # Where every other slice is missing the usual step is twice the nominal one; but some scanners give the gap as nominal.
     skipped = round(usual / nominal) if nominal is not None and nominal > SAME_PLACE_MM else 1
-    if skipped > 1 and math.isclose(usual, skipped * (nominal or 0.0), rel_tol=_UNEVEN / 2):
-        is_gap = math.isclose(usual, (nominal or 0.0) + thickness, rel_tol=_UNEVEN / 2)
+    if skipped > 1 and math.isclose(usual, skipped * (nominal or 0.0), rel_tol=_EXACTLY):
+        is_gap = math.isclose(usual, (nominal or 0.0) + thickness, rel_tol=_EXACTLY)
         usual = usual if is_gap else usual / skipped
     said = []
     for number, step in enumerate(steps, start=1):

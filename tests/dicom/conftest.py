@@ -153,9 +153,8 @@ def save(dataset, path, syntax=None):
     path.parent.mkdir(parents=True, exist_ok=True)
     if syntax is not None:
         dataset.file_meta.TransferSyntaxUID = syntax
-    if syntax == ExplicitVRBigEndian and "PixelData" in dataset:
-        size = dataset.BitsAllocated // 8
-        dataset.PixelData = np.frombuffer(dataset.PixelData, f"<u{max(size, 2)}").byteswap().tobytes()
+    if syntax == ExplicitVRBigEndian and dataset.BitsAllocated > 8:
+        dataset.PixelData = np.frombuffer(dataset.PixelData, f"<u{dataset.BitsAllocated // 8}").byteswap().tobytes()
     dataset.save_as(path, enforce_file_format=True)
     return path
 
