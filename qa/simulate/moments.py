@@ -28,33 +28,29 @@ def magnitude_mean(amplitude: ArrayLike, sigma: ArrayLike, channels: int) -> Flo
     Returns
     -------
     ndarray
-        The closed form, with the confluent hypergeometric function 1F1(-1/2; channels; -amplitude^2 / (2 sigma^2)); above
-        25 sigma its asymptotic series.
+        The closed form, with the confluent hypergeometric function 1F1(-1/2; channels; -amplitude^2 / (2 sigma^2)), and for
+        strong signals its asymptotic series (Abramowitz and Stegun 13.5.1).
     """
     from scipy.special import gammaln, hyp1f1
 
     a, s = np.broadcast_arrays(np.asarray(amplitude, dtype=np.float64), np.asarray(sigma, dtype=np.float64))
     ratio = a / s
-    many = channels
-    front = math.sqrt(2.0) * math.exp(gammaln(many + 0.5) - gammaln(many))
-    low = front * hyp1f1(-0.5, many, -0.5 * np.minimum(ratio, 25.0) ** 2)
-    big = np.maximum(ratio, 25.0)
-    # powers of 1 / ratio^2 in the expansion of 1F1(-1/2; n; -ratio^2 / 2)
-    high = big * (1 + (many - 0.5) / big**2 - (many - 0.5) * (many - 1.5) / (2 * big**4))
-    mean: Floats = np.where(ratio < 25.0, low, high) * s
+    strong = 12 + 4 * math.sqrt(channels)
+    front = math.sqrt(2.0) * math.exp(gammaln(channels + 0.5) - gammaln(channels))
+    exact = front * hyp1f1(-0.5, channels, -0.5 * np.minimum(ratio, strong) ** 2)
+    large = np.maximum(ratio, strong)
+    term, series = np.ones_like(large), np.ones_like(large)
+    for k in range(10):
+        term = term * (k - 0.5) * (k + 0.5 - channels) / (k + 1) * 2 / large**2
+        series = series + term
+    mean: Floats = np.where(ratio < strong, exact, large * series) * s
     return mean
 
 
 def magnitude_variance(amplitude: ArrayLike, sigma: ArrayLike, channels: int) -> Floats:
-    """Variance that belongs to `magnitude_mean`: the mean square is amplitude^2 + 2 channels sigma^2.
-
-    Above 25 sigma from the series, where the difference of two large numbers would lose its digits.
-    """
+    """Variance that belongs to `magnitude_mean`: the mean square is amplitude^2 + 2 channels sigma^2."""
     a, s = np.broadcast_arrays(np.asarray(amplitude, dtype=np.float64), np.asarray(sigma, dtype=np.float64))
-    ratio = a / s
-    exact = np.minimum(ratio, 25.0) ** 2 + 2 * channels - (magnitude_mean(np.minimum(ratio, 25.0), 1.0, channels)) ** 2
-    series = 1 - (channels - 0.5) / np.maximum(ratio, 25.0) ** 2
-    variance: Floats = np.where(ratio < 25.0, exact, series) * s * s
+    variance: Floats = a**2 + 2 * channels * s**2 - magnitude_mean(a, s, channels) ** 2
     return variance
 
 

@@ -18,7 +18,7 @@ CROOKED = {"tilt_x_deg": 1.3, "tilt_y_deg": -1.4, "centre_patient": (3.0, 2.0, 1
         pytest.param(("lattice-200", 0, CROOKED | {"rotation_deg": 3.0}, (170, 195, 120, 150), 8), id="rods"),
         pytest.param(("sphere-170", 0, {"centre_patient": (0.3, 0.2, 60.0)}, (180, 195, 120, 140), 40), id="sphere"),
         pytest.param(
-            "cylinder-200", 0, {"centre_patient": (0.3, 0.2, 149.0)}, (238, 256, 120, 140), 40, id="end of a cylinder"
+            ("cylinder-200", 0, {"centre_patient": (0.3, 0.2, 149.0)}, (238, 256, 120, 140), 40), id="end of a cylinder"
         ),
     ],
 )
