@@ -35,6 +35,7 @@ _DEFLATED = "1.2.840.10008.1.2.1.99"
 _BIG_ENDIAN = "1.2.840.10008.1.2.2"
 _IMPLICIT = ("1.2.840.10008.1.2", "1.2.840.113619.5.2")
 _LARGEST_INFLATED = 2**30
+_INFLATED_AT_ONCE, _INFLATED_TIMES = 2**26, 100
 _LONGEST_TEXT = 200
 _BINARY = {
     "US": "H",
@@ -288,15 +289,14 @@ def _is_past_meta(tag: int, _vr: str | None, _length: int) -> bool:
 
 def _inflated(deflated: bytes) -> bytes:
     """Inflate a deflated data set (PS3.5, A.5), up to a bound: a few bytes can ask for gigabytes."""
+    most = min(max(_INFLATED_AT_ONCE, _INFLATED_TIMES * len(deflated)), _LARGEST_INFLATED)
     inflater = zlib.decompressobj(-zlib.MAX_WBITS)
     try:
-        content = inflater.decompress(deflated, _LARGEST_INFLATED)
+        content = inflater.decompress(deflated, most)
     except zlib.error:
         raise RefusalError("the file is damaged: its deflated content cannot be inflated") from None
     if inflater.unconsumed_tail:
-        raise RefusalError(
-            f"its deflated content is larger than {_LARGEST_INFLATED // 2**30} GiB: too large for a phantom series"
-        )
+        raise RefusalError("its deflated content swells to more than an image of its size can hold")
     if not inflater.eof:
         raise RefusalError("the file is cut short: its deflated content does not end")
     return content

@@ -77,7 +77,7 @@ def item(**values):
     return dataset
 
 
-def enhanced_object(positions, pixels, number=1, series=1, temporal=None, echoes=None, components=None):
+def enhanced_object(positions, pixels, *, number=1, series=1, temporal=None, echoes=None, components=None):
     """An Enhanced MR object with one frame a position."""
     dataset = header(number, series, EnhancedMRImageStorage)
     del dataset.AcquisitionDate, dataset.AcquisitionTime
@@ -126,7 +126,7 @@ def text_header(**fields):
     return content
 
 
-def mosaic_image(tiles, normal=(0.0, 0.0, 1.0), corner=(-10.0, -12.0, -20.0), number=1, series=1, count_in="tag"):
+def mosaic_image(tiles, *, normal=(0.0, 0.0, 1.0), corner=(-10.0, -12.0, -20.0), number=1, series=1, count_in="tag"):
     """Tiles, (S, R, C), in one image; `corner` is the first tile's; `count_in` is where the number of tiles stands."""
     slices, rows, columns = tiles.shape
     side = int(np.ceil(np.sqrt(slices)))
@@ -163,7 +163,13 @@ def save(dataset, path, syntax=None):
 def make():
     """The makers of data sets, and `save`."""
     return SimpleNamespace(
-        image=mr_image, enhanced=enhanced_object, mosaic=mosaic_image, pattern=pattern, put_pixels=put_pixels, save=save, item=item
+        image=mr_image,
+        enhanced=enhanced_object,
+        mosaic=mosaic_image,
+        pattern=pattern,
+        put_pixels=put_pixels,
+        save=save,
+        item=item,
     )
 
 

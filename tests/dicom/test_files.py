@@ -125,7 +125,7 @@ def test_a_sparse_giant_is_refused_unread(tmp_path):
     assert reasons(read(tmp_path)) == {"giant.dcm": "larger than 2 GiB: too large for a phantom series"}
 
 
-def test_progress_counts_every_file(tmp_path, write_series):
+def test_progress_counts_every_file(write_series):
     folder = write_series(3)
     (folder / "bad.dcm").write_text("no")
     told = []

@@ -65,7 +65,9 @@ def test_a_birth_date_that_cannot_be_read_still_counts():
     assert not looks_like_a_person(Header(gives_birth_date=True))
 
 
-@pytest.mark.parametrize("name", ["Shimizu^Kenji", "Waters^Ann", "Quality^Joe", "Testa^Maria", "Coiler^B", "Acree^Tom", "Mri^"])
+@pytest.mark.parametrize(
+    "name", ["Shimizu^Kenji", "Waters^Ann", "Quality^Joe", "Testa^Maria", "Coiler^B", "Acree^Tom", "Mri^"]
+)
 def test_surnames_that_hold_a_phantoms_word_are_no_phantoms(name):
     assert is_phantom_word(name) == (name == "Mri^")
 
@@ -132,7 +134,7 @@ def test_nothing_of_a_damaged_header_is_logged_warned_or_raised(tmp_path, make, 
     assert not any(secret in everything_said(reading) for secret in SECRETS)
 
 
-def test_the_loggers_are_given_back_as_they_were(tmp_path, write_series):
+def test_the_loggers_are_given_back_as_they_were(write_series):
     logger = logging.getLogger("pydicom")
     before = logger.level
     read(write_series(1))

@@ -19,6 +19,7 @@ from qa.dicom import read
 from qa.dicom.elements import parse
 from qa.dicom.isolated import IsolatedDecoder
 from qa.dicom.refusal import RefusalError
+from qa.errors import FaultError
 
 
 def values(path):
@@ -195,21 +196,27 @@ def test_a_compressed_file_cut_short_or_of_another_size_is_refused(tmp_path, mak
     assert "pixel data" in reason(tmp_path)
 
 
-def test_a_decoder_that_crashes_costs_one_file(make, tmp_path):
-    crash = "import os, sys; sys.stdin.buffer.read(8); sys.stdout.buffer.write(b'\\5\\0\\0\\0ready'); sys.stdout.flush(); os.abort()"
-    options = {"rows": 1, "columns": 1, "number_of_frames": 1}
-    with IsolatedDecoder(command=(sys.executable, "-c", crash)) as decoder:
+READY = "import os, sys, time; sys.stdin.buffer.read(8); sys.stdout.buffer.write(b'\\5\\0\\0\\0ready'); sys.stdout.flush(); "
+ONE_PIXEL = {"rows": 1, "columns": 1, "number_of_frames": 1}
+
+
+def test_a_decoder_that_crashes_costs_one_file():
+    with IsolatedDecoder(command=(sys.executable, "-c", READY + "os.abort()")) as decoder:
         for _ in range(2):
             with pytest.raises(RefusalError, match="crash or hang"):
-                decoder.decode(b"x", options)
+                decoder.decode(b"x", ONE_PIXEL)
 
 
-def test_a_decoder_that_hangs_is_ended(make):
-    hang = "import sys, time; sys.stdout.buffer.write(b'\\5\\0\\0\\0ready'); sys.stdout.flush(); time.sleep(60)"
-    options = {"rows": 1, "columns": 1, "number_of_frames": 1}
-    with IsolatedDecoder(seconds=0.3, command=(sys.executable, "-c", hang)) as decoder:
-        with pytest.raises(RefusalError, match="crash or hang"):
-            decoder.decode(b"x", options)
+def test_a_decoder_that_hangs_is_ended():
+    command = (sys.executable, "-c", READY + "time.sleep(60)")
+    with IsolatedDecoder(seconds=0.3, command=command) as decoder, pytest.raises(RefusalError, match="crash or hang"):
+        decoder.decode(b"x", ONE_PIXEL)
+
+
+def test_a_decoder_that_cannot_be_started_is_a_fault_of_the_machine():
+    for command in [("/no/such/program",), (sys.executable, "-c", "raise SystemExit(1)")]:
+        with IsolatedDecoder(command=command) as decoder, pytest.raises(FaultError, match="the decoding process"):
+            decoder.decode(b"x", ONE_PIXEL)
 
 
 def test_what_decoders_print_does_not_spoil_the_answer(tmp_path, make, capfd):
