@@ -58,7 +58,11 @@ def open_record(place: str | Path, *, create: bool = True, heads: Path | None = 
             f"{database.name}: is missing or empty, but {last.number} entries were written to it: restore it from a backup, "
             f"or move {known.path} away to begin anew."
         )
-    database.prepare(create=create)
+    try:
+        database.prepare(create=create)
+    except BaseException:
+        database.close()
+        raise
     return Record(database, known)
 
 
