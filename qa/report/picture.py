@@ -1,5 +1,6 @@
 """The image of a session with the regions drawn on it that figures were read in."""
 
+import base64
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -8,7 +9,8 @@ import numpy as np
 
 from qa.records import Picture, Region
 from qa.report.numbers import THIN_SPACE, plain_number
-from qa.report.style import INK, letters, mm_axes, new_figure, to_svg
+from qa.report.plot import Plot
+from qa.report.style import CAP_HEIGHT, INK, MM, TEXT_SIZE, grey_png, new_figure, to_svg
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -18,9 +20,9 @@ __all__ = ["DrawnPicture", "KeyEntry", "draw_picture", "grey_window"]
 _SCALE_BARS_MM = (1, 2, 5, 10, 20, 50, 100, 200)
 _SCALE_STRIP_MM = 4.5
 _NUMBER_SIZE = 6.2
-_CAP_HEIGHT = 0.714
 _CASING = "#000000"
 _LINE = "#ffffff"
+_ROUND = 4.1 * np.array([(math.cos(turn), math.sin(turn)) for turn in np.linspace(0, 2 * math.pi, 25)])
 
 
 @dataclass(frozen=True)
@@ -100,12 +102,21 @@ def _draw_scale_bar(figure: "Figure", width_mm: float, paper_mm_per_mm: float) -
     """Draw a bar of a round length under the image."""
     length = max((bar for bar in _SCALE_BARS_MM if bar <= 0.4 * width_mm), default=_SCALE_BARS_MM[0])
     paper = length * paper_mm_per_mm
-    axes = mm_axes(figure, 0, 0, width_mm * paper_mm_per_mm, _SCALE_STRIP_MM)
-    axes.set_axis_off()
-    axes.set_xlim(0, width_mm * paper_mm_per_mm)
-    axes.set_ylim(0, _SCALE_STRIP_MM)
-    axes.plot([0.1, 0.1, paper, paper], [2.9, 1.9, 1.9, 2.9], color=INK, linewidth=0.7, solid_joinstyle="miter")
-    axes.text(paper + 1.2, 2.3, f"{length}{THIN_SPACE}mm", color=INK, ha="left", va="center", fontproperties=letters())
+    box = (0.0, 0.0, width_mm * paper_mm_per_mm, _SCALE_STRIP_MM)
+    plot = Plot(figure, box, (0.0, box[2]), (0.0, _SCALE_STRIP_MM))
+    plot.path([plot.at([0.1, 0.1, paper, paper], [2.9, 1.9, 1.9, 2.9])], edgecolor=INK, linewidth=0.7, joinstyle="miter")
+    baseline = 2.3 * MM - CAP_HEIGHT / 2 * TEXT_SIZE
+    plot.text((paper + 1.2) * MM, baseline, f"{length}{THIN_SPACE}mm", TEXT_SIZE, ha="left", va="baseline")
+
+
+def _underlay(picture: Picture, low: float, high: float, width: float, height: float) -> bytes:
+    """Write the image as an SVG element of a size in points: each pixel keeps its edges, whatever its proportions."""
+    shown = np.nan_to_num(np.clip((picture.pixels - low) / (high - low), 0, 1), nan=0.0)
+    png = base64.b64encode(grey_png(np.round(shown * 255).astype(np.uint8))).decode()
+    return (
+        f'<image x="0" y="0" width="{width:.3f}" height="{height:.3f}" preserveAspectRatio="none" '
+        f'style="image-rendering: pixelated" xlink:href="data:image/png;base64,{png}"/>'
+    ).encode()
 
 
 def draw_picture(
@@ -127,8 +138,6 @@ def draw_picture(
     DrawnPicture
         SVG and what stands beside it.
     """
-    from matplotlib.patches import Circle
-
     rows, columns = picture.pixels.shape
     row_mm, column_mm = picture.plane.pixel_mm
     width, height = columns * column_mm, rows * row_mm
@@ -136,42 +145,28 @@ def draw_picture(
     scale = min(largest_width_mm / width, (largest_height_mm - _SCALE_STRIP_MM) / height)
     paper_width, paper_height = width * scale, height * scale
     figure = new_figure(paper_width, paper_height + _SCALE_STRIP_MM)
-    axes = mm_axes(figure, 0, _SCALE_STRIP_MM, paper_width, paper_height)
-    axes.set_axis_off()
+    plot = Plot(figure, (0.0, _SCALE_STRIP_MM, paper_width, paper_height), (left, right), (bottom, top))
     low, high = window or grey_window(picture)
-    shown = np.nan_to_num(np.clip((picture.pixels - low) / (high - low), 0, 1), nan=0.0)
-    axes.imshow(
-        np.round(shown * 255).astype(np.uint8), cmap="gray", vmin=0, vmax=255, interpolation="none",
-        extent=(left, right, bottom, top), aspect="auto",
-    )  # fmt: skip
-    axes.set_xlim(left, right)
-    axes.set_ylim(bottom, top)
 
-    mm_per_point = 25.4 / 72 / scale
-    names: list[str] = []
-    anchors: list[tuple[float, float]] = []
-    numbers: list[int] = []
-    for region in picture.regions:
-        if region.name not in names:
-            names.append(region.name)
-        x, y = _outline(region)
-        for ink, thickness in ((_CASING, 1.7), (_LINE, 0.75)):
-            axes.plot(x, y, color=ink, linewidth=thickness, solid_joinstyle="round", zorder=3)
-        anchors.append(_anchor(region, x, y, 4.6 * mm_per_point))
-        numbers.append(names.index(region.name) + 1)
+    names = list(dict.fromkeys(region.name for region in picture.regions))
+    outlines = [_outline(region) for region in picture.regions]
+    lines = [plot.at(x, y) for x, y in outlines]
+    for ink, thickness in ((_CASING, 1.7), (_LINE, 0.75)):
+        plot.path(lines, edgecolor=ink, linewidth=thickness, joinstyle="round", zorder=3)
+    mm_per_point = 1 / (MM * scale)
     inset = 5.5 * mm_per_point
     box = (left + inset, right - inset, top + inset, bottom - inset)
+    anchors = [_anchor(region, x, y, 4.6 * mm_per_point) for region, (x, y) in zip(picture.regions, outlines, strict=True)]
     anchors = [(min(max(x, box[0]), box[1]), min(max(y, box[2]), box[3])) for x, y in anchors]
-    for (at_x, at_y), number in zip(_spread(anchors, 9.5 * mm_per_point, box), numbers, strict=True):
-        radius = 4.1 * mm_per_point
-        axes.add_patch(Circle((at_x, at_y), radius, facecolor=_LINE, edgecolor=_CASING, linewidth=0.5, zorder=7))
-        axes.annotate(
-            str(number), (at_x, at_y), (0, -_CAP_HEIGHT / 2 * _NUMBER_SIZE), textcoords="offset points",
-            ha="center", va="baseline", color=_CASING, fontproperties=letters(_NUMBER_SIZE, 600), zorder=8,
-        )  # fmt: skip
+    places = [plot.at(x, y)[0] for x, y in _spread(anchors, 9.5 * mm_per_point, box)]
+    plot.path([place + _ROUND for place in places], closed=True, facecolor=_LINE, edgecolor=_CASING, linewidth=0.5, zorder=7)
+    for (x, y), region in zip(places, picture.regions, strict=True):
+        number = str(names.index(region.name) + 1)
+        baseline = float(y) - CAP_HEIGHT / 2 * _NUMBER_SIZE
+        plot.text(float(x), baseline, number, _NUMBER_SIZE, weight=600, color=_CASING, ha="center", va="baseline", zorder=8)
     _draw_scale_bar(figure, width, scale)
     return DrawnPicture(
-        svg=to_svg(figure),
+        svg=to_svg(figure, _underlay(picture, low, high, paper_width * MM, paper_height * MM)),
         width_mm=paper_width,
         height_mm=paper_height + _SCALE_STRIP_MM,
         key=tuple(KeyEntry(number, name) for number, name in enumerate(names, start=1)),

@@ -9,14 +9,17 @@ from typing import TYPE_CHECKING
 
 from qa.errors import FaultError
 from qa.report.data import AttachedFile
+from qa.report.numbers import THIN_SPACE
 from qa.resources import shipped_folder
 
 if TYPE_CHECKING:
     from jinja2 import Environment
+    from markupsafe import Markup
 
 __all__ = ["fill_template", "to_pdf"]
 
 
+_JOINED = re.compile(f"(\\S{{1,24}}(?:{THIN_SPACE}\\S{{1,24}})+)")
 _UNDATED = date(1970, 1, 1)
 
 # Characters that no page can hold or that turn the text around them: controls but tab and line ends, surrogates, direction
@@ -31,12 +34,23 @@ def _printable(content: object) -> object:
     return _UNPRINTABLE.sub("?", content) if type(content) is str else content
 
 
+def _tied(text: str) -> "Markup":
+    """Escape a text and keep what a thin space joins, a number and its unit, on one line."""
+    from markupsafe import Markup, escape
+
+    parts = _JOINED.split(str(_printable(text)))
+    return Markup("").join(
+        Markup('<span class="tied">{}</span>').format(part) if number % 2 else escape(part)
+        for number, part in enumerate(parts)
+    )
+
+
 @lru_cache(maxsize=1)
 def _environment() -> "Environment":
     """Templates with escaping on for whatever is put in, and an error for whatever was forgotten."""
     from jinja2 import Environment, FileSystemLoader, StrictUndefined
 
-    return Environment(
+    environment = Environment(
         loader=FileSystemLoader(shipped_folder("templates")),
         autoescape=True,
         undefined=StrictUndefined,
@@ -44,6 +58,8 @@ def _environment() -> "Environment":
         trim_blocks=True,
         lstrip_blocks=True,
     )
+    environment.filters["tied"] = _tied
+    return environment
 
 
 def fill_template(name: str, **content: object) -> str:

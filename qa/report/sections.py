@@ -4,6 +4,7 @@ from collections import Counter
 from collections.abc import Sequence
 
 from qa.records import Judged, Measurement, Picture, RecordedAcquisition, Session, Verdict
+from qa.report.chart import TrendChart
 from qa.report.content import Comparison, Course, ScannerReport
 from qa.report.data import AttachedFile
 from qa.report.maps import maps_of
@@ -12,7 +13,7 @@ from qa.report.page import Compared, Fact, Group, Happening, LegendEntry, Notice
 from qa.report.picture import draw_picture, grey_window
 from qa.report.spark import draw_spark
 from qa.report.streams import History, event_letters, in_order, mark_of, split_phantoms, stream_of
-from qa.report.trend import TrendChart, draw_trend, marks_present
+from qa.report.trend import draw_trend, marks_present
 from qa.report.words import about, clipped, count_of, day_runs, expanded, header_words, settings_words, value_words
 
 __all__ = [
@@ -199,7 +200,8 @@ def _sureness(found: Measurement, verdict: Verdict) -> str:
     if beyond:
         _, spread = rounded(found.value, expanded(found), 2)
         shown, _ = rounded(beyond[0], expanded(found), about(found.quantity, found.unit).decimals)
-        said = f"beyond the limit by {with_unit(shown, found.unit)}"
+        by_nothing = not shown.strip("0.")
+        said = "just beyond the limit" if by_nothing else f"beyond the limit by {with_unit(shown, found.unit)}"
         said += f", with an expanded uncertainty of {with_unit(spread, found.unit)}" if spread else ""
     if verdict.probability is not None:
         said += f"{'; ' if said else ''}the probability that it conforms is {plain_number(100 * verdict.probability, 2)} %"

@@ -2,13 +2,29 @@
 
 import numpy as np
 
+from qa.geometry import Floats
+from qa.report.chart import TrendChart
+from qa.report.marks import add_marks
+from qa.report.plot import Plot
 from qa.report.style import DATA, FAINT, LIMIT, new_figure, to_svg
 from qa.report.timeline import days
-from qa.report.trend import TrendChart
+from qa.report.trend import pieces_of
 
 __all__ = ["SPARK_MM", "draw_spark"]
 
 SPARK_MM = (34.0, 4.6)
+_BINS = 90
+
+
+def _thinned(x: Floats, y: Floats) -> tuple[Floats, Floats]:
+    """Keep the least and the greatest value of each of many short stretches, in order of time: no peak is lost."""
+    if len(x) <= 2 * _BINS:
+        return x, y
+    kept: set[int] = {0, len(x) - 1}
+    for part in np.array_split(np.arange(len(x)), _BINS):
+        kept |= {int(part[np.argmin(y[part])]), int(part[np.argmax(y[part])])}
+    chosen = np.array(sorted(kept))
+    return x[chosen], y[chosen]
 
 
 def draw_spark(chart: TrendChart) -> bytes:
@@ -16,35 +32,25 @@ def draw_spark(chart: TrendChart) -> bytes:
 
     A limit is drawn where it lies within reach of the values; there is no axis: the figures stand beside it.
     """
-    from matplotlib.lines import Line2D
-
     width, height = SPARK_MM
-    figure = new_figure(width, height)
-    at = np.array([days(p.at) for p in chart.points])
-    values = np.array([p.value for p in chart.points])
-    low, high = float(values.min()), float(values.max())
+    x = np.array([days(p.at) for p in chart.points])
+    y = np.array([p.value for p in chart.points])
+    low, high = float(y.min()), float(y.max())
     span = (high - low) or max(abs(high) * 1e-6, 1e-12)
-    first, last = days(chart.first_day), days(chart.last_day) + 1
-    x = 0.02 + 0.94 * (at - first) / max(last - first, 1.0)
     limits = [v for v in (chart.points[-1].lower, chart.points[-1].upper) if v is not None]
     near = [v for v in limits if low - 2 * span <= v <= high + 2 * span]
     low, high = min([low, *near]), max([high, *near])
     span = (high - low) or span
-    y = 0.14 + 0.72 * (values - low) / span
-    for limit in near:
-        level = 0.14 + 0.72 * (limit - low) / span
-        figure.add_artist(Line2D([0.02, 0.96], [level, level], color=LIMIT, linewidth=0.5, dashes=(4, 2)))
+    times = (days(chart.first_day), days(chart.last_day) + 1)
+    plot = Plot(new_figure(width, height), (0.6, 0.6, width - 2, height - 1.2), times, (low - 0.02 * span, high + 0.02 * span))
+    plot.path([plot.at(times, limit) for limit in near], edgecolor=LIMIT, linewidth=0.5, linestyle=(0, (4, 2)))
     if not near:
-        figure.add_artist(Line2D([0.02, 0.96], [0.06, 0.06], color=FAINT, linewidth=0.35))
-    step = chart.every_days + chart.grace_days + 1
-    for piece in np.split(np.arange(len(x)), np.flatnonzero(np.diff(at) > step) + 1):
-        if len(piece) > 1:
-            figure.add_artist(Line2D(x[piece], y[piece], color=DATA, linewidth=0.6, solid_joinstyle="round"))
+        plot.path([plot.at(times, plot.y_range[0])], edgecolor=FAINT, linewidth=0.35)
+    line = [plot.at(*_thinned(x[piece], y[piece])) for piece in pieces_of(x, chart)]
+    plot.path(line, edgecolor=DATA, linewidth=0.6, joinstyle="round")
     out = np.array([p.mark in {"fail", "conditional fail"} for p in chart.points])
     if out.any():
-        figure.add_artist(
-            Line2D(x[out][-12:], y[out][-12:], linestyle="none", marker="D", markersize=2, color=LIMIT, markeredgewidth=0)
-        )
+        add_marks(plot, plot.at(x, y)[out][-12:], "fail", 0.45)
     if not out[-1]:
-        figure.add_artist(Line2D(x[-1:], y[-1:], linestyle="none", marker="o", markersize=2.4, color=DATA, markeredgewidth=0))
-    return to_svg(figure)
+        add_marks(plot, plot.at(x, y)[-1:], "pass", 0.9)
+    return to_svg(plot.figure)

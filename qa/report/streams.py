@@ -8,10 +8,10 @@ from itertools import pairwise
 
 from qa.quantities import QUANTITIES, Quantity
 from qa.records import Event, Judged, RecordedAcquisition, Session
+from qa.report.chart import BaselineSpan, EventMark, ForecastLine, TrendChart, TrendPoint
 from qa.report.content import ControlPoint, Course, ScannerReport
 from qa.report.marks import Mark
 from qa.report.numbers import COVERAGE_FACTOR, rounded, with_unit
-from qa.report.trend import BaselineSpan, EventMark, ForecastLine, TrendChart, TrendPoint
 from qa.report.words import about, clipped, expanded
 
 __all__ = [

@@ -6,8 +6,13 @@ searched in the PDF. The same data give the same bytes: no date, no random ident
 """
 
 import io
+import struct
+import zlib
 from functools import lru_cache
 from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
 
 from qa.resources import shipped_folder
 
@@ -18,6 +23,7 @@ if TYPE_CHECKING:
 
 __all__ = [
     "BAND",
+    "CAP_HEIGHT",
     "DATA",
     "FAINT",
     "FONT_FAMILY",
@@ -26,7 +32,9 @@ __all__ = [
     "INK",
     "LIMIT",
     "MISSED",
+    "MM",
     "TEXT_SIZE",
+    "grey_png",
     "letters",
     "mm_axes",
     "new_figure",
@@ -43,7 +51,12 @@ LIMIT = "#a3231b"
 TEXT_SIZE = 7.0
 HAIRLINE = 0.5
 FONT_FAMILY = "Open Sans"
+CAP_HEIGHT = 0.714
+"""Height of capitals and figures, as a share of the size of letters."""
 _MM_PER_INCH = 25.4
+_FIRST_GROUP = b'<g id="figure_1">'
+MM = 72 / _MM_PER_INCH
+"""Points in a millimetre."""
 
 
 @lru_cache(maxsize=8)
@@ -62,7 +75,9 @@ def new_figure(width_mm: float, height_mm: float) -> "Figure":
     from matplotlib.figure import Figure
 
     # 72 per inch is what SVG is written with: places worked out in figure units beforehand stay right.
-    return Figure(figsize=(width_mm / _MM_PER_INCH, height_mm / _MM_PER_INCH), dpi=72, facecolor="none")
+    figure = Figure(figsize=(width_mm / _MM_PER_INCH, height_mm / _MM_PER_INCH), dpi=72)
+    figure.patch.set_visible(False)
+    return figure
 
 
 def mm_axes(figure: "Figure", left: float, bottom: float, width: float, height: float, **options: Any) -> "Axes":  # noqa: ANN401 - matplotlib's own options
@@ -71,11 +86,26 @@ def mm_axes(figure: "Figure", left: float, bottom: float, width: float, height: 
     return figure.add_axes((left / total_width, bottom / total_height, width / total_width, height / total_height), **options)
 
 
-def to_svg(figure: "Figure") -> bytes:
-    """Write a figure as SVG; the same figure gives the same bytes."""
+def to_svg(figure: "Figure", under: bytes = b"") -> bytes:
+    """Write a figure as SVG, with more SVG laid under all that is drawn; the same figure gives the same bytes."""
     import matplotlib as mpl
 
     buffer = io.BytesIO()
     with mpl.rc_context({"svg.fonttype": "none", "svg.hashsalt": "evenfield", "path.simplify": False}):
         figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": None})
-    return buffer.getvalue()
+    return buffer.getvalue().replace(_FIRST_GROUP, _FIRST_GROUP + under, 1)
+
+
+def grey_png(shown: NDArray[np.uint8]) -> bytes:
+    """Write (R, C) grey values as PNG (ISO/IEC 15948: eight bits of grey, no filter)."""
+    rows, columns = shown.shape
+    lines = np.zeros((rows, columns + 1), dtype=np.uint8)
+    lines[:, 1:] = shown
+
+    def chunk(kind: bytes, content: bytes) -> bytes:
+        return struct.pack(">I", len(content)) + kind + content + struct.pack(">I", zlib.crc32(kind + content))
+
+    head = struct.pack(">IIBBBBB", columns, rows, 8, 0, 0, 0, 0)
+    return (
+        b"\x89PNG\r\n\x1a\n" + chunk(b"IHDR", head) + chunk(b"IDAT", zlib.compress(lines.tobytes(), 6)) + chunk(b"IEND", b"")
+    )

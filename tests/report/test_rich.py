@@ -67,7 +67,8 @@ def test_a_value_out_of_limits_says_by_how_much_and_how_sure(made):
     page = lay_out_scanner(made.content([session]))[0]
     notes = {n.name: n.text for n in page.trends[0].notes}
     assert notes["Out by"] == (
-        "beyond the limit by 0.40\u2009%, with an expanded uncertainty of 0.12\u2009%; the probability that it conforms is 1.2 %"
+        "beyond the limit by 0.40\u2009%, with an expanded uncertainty of 0.12\u2009%; "
+        "the probability that it conforms is 1.2 %"
     )
 
 
