@@ -37,14 +37,15 @@ def magnitude_mean(amplitude: ArrayLike, sigma: ArrayLike, channels: int) -> Flo
     ratio = a / s
     strong = 12 + 4 * math.sqrt(channels)
     front = math.sqrt(2.0) * math.exp(gammaln(channels + 0.5) - gammaln(channels))
-    exact = front * hyp1f1(-0.5, channels, -0.5 * np.minimum(ratio, strong) ** 2)
+    weak = ratio < strong
     large = np.maximum(ratio, strong)
     term, series = np.ones_like(large), np.ones_like(large)
     for k in range(10):
         term = term * (k - 0.5) * (k + 0.5 - channels) / (k + 1) * 2 / large**2
         series = series + term
-    mean: Floats = np.where(ratio < strong, exact, large * series) * s
-    return mean
+    mean: Floats = np.asarray(large * series)
+    mean[weak] = front * hyp1f1(-0.5, channels, -0.5 * ratio[weak] ** 2)
+    return np.asarray(mean * s)
 
 
 def magnitude_variance(amplitude: ArrayLike, sigma: ArrayLike, channels: int) -> Floats:

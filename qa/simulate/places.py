@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
-from numpy.typing import ArrayLike
+from numpy.typing import ArrayLike, NDArray
 
 from qa.geometry import Floats, Plane
 from qa.simulate.setup import Setup
@@ -71,26 +71,28 @@ def meant_slice(setup: Setup, z_mm: float) -> int:
     return 1 + min(range(setup.slices), key=lambda k: abs(float(setup.planes[k].from_patient(place)[2])))
 
 
-def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], direction: tuple[float, float]) -> float:
-    """Distance in the image from a place to the body's outline at half height.
+def outline_mm(setup: Setup, plane: Plane, centre: tuple[float, float], directions: ArrayLike) -> Floats:
+    """Distance in the image from a place inside to the body's outline at half height, along unit directions (N, 2).
 
-    A cylinder's outline is where the slice's middle plane leaves it; a sphere's where half the slice profile still lies in it.
+    A cylinder's outline is where the slice's middle plane leaves it (its ends, where it is cut lengthwise); a sphere's where
+    half the slice profile still lies in it.
     """
-    radius = setup.body_diameter_mm / 2
-    sphere = setup.phantom.body.shape == "sphere"
+    radius, half_length = setup.body_diameter_mm / 2, (setup.phantom.extent_mm or 0.0) / 2
     height = float(plane.from_patient(np.asarray(setup.centre_patient))[2])
+    along = np.asarray(directions, dtype=np.float64)
 
-    def filled(distance: float) -> bool:
-        at = phantom_place(setup, plane, centre[0] + distance * direction[0], centre[1] + distance * direction[1])
+    def filled(distance: Floats) -> NDArray[np.bool_]:
+        at = phantom_place(setup, plane, centre[0] + distance * along[:, 0], centre[1] + distance * along[:, 1])
         if setup.lengthwise:
-            return bool(abs(at[2]) < (setup.phantom.extent_mm or 0.0) / 2)
-        if not sphere:
-            return bool(np.hypot(at[0], at[1]) < radius)
-        half = np.sqrt(max(radius**2 - (float(at @ at) - height**2), 0.0))
-        return bool(setup.profile.cumulative(height + half) - setup.profile.cumulative(height - half) > 0.5)
+            return np.asarray(np.abs(at[:, 2]) < half_length)
+        if setup.phantom.body.shape == "cylinder":
+            return np.asarray(np.hypot(at[:, 0], at[:, 1]) < radius)
+        half = np.sqrt(np.maximum(radius**2 - (np.sum(at * at, axis=1) - height**2), 0.0))
+        return np.asarray(setup.profile.cumulative(height + half) - setup.profile.cumulative(height - half) > 0.5)
 
-    low, high = 0.0, 2.5 * max(radius, (setup.phantom.extent_mm or 0.0) / 2)
+    low, high = np.zeros(len(along)), np.full(len(along), 2.5 * max(radius, half_length))
     for _ in range(60):
         middle = 0.5 * (low + high)
-        low, high = (middle, high) if filled(middle) else (low, middle)
+        inside = filled(middle)
+        low, high = np.where(inside, middle, low), np.where(inside, high, middle)
     return low

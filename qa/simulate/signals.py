@@ -84,7 +84,8 @@ def _expected(setup: Setup, clean: Complexes, amplitude: Floats, sigma: float) -
     if sigma == 0:
         return amplitude, np.zeros_like(amplitude)
     n = setup.channels
-    mean, variance = magnitude_mean(amplitude, sigma, n), magnitude_variance(amplitude, sigma, n)
+    mean = magnitude_mean(amplitude, sigma, n)
+    variance = amplitude**2 + 2 * n * sigma**2 - mean**2
     if n == 1 or not setup.noise_correlation:
         return mean, variance
     # Correlated channels. Over signal: noise along it counts at first order, all else raises the mean at second order. In

@@ -8,7 +8,7 @@ import math
 
 import numpy as np
 
-from qa.geometry import Plane
+from qa.geometry import Floats, Plane
 from qa.phantoms import LowContrast, Uniform
 from qa.simulate.encode import Scan
 from qa.simulate.inserts import insert_truths
@@ -93,9 +93,9 @@ def _signals(machine: Scan, uniform: tuple[int, ...]) -> dict[int, Found]:
         same = slice_key(setup, plane)
         key = number if same is None else same
         if key not in known:
-            diameter = sum(_length(setup, plane, angle) for angle in _ANGLES) / len(_ANGLES)
-            inner = setup.region_radius_mm(diameter / 2, _section_percent(setup, plane))
-            known[key] = signal_truths(machine, number - 1, (seen_centre(setup, plane), diameter / 2), inner)
+            radius = float(_diameters(setup, plane).mean()) / 2
+            inner = setup.region_radius_mm(radius, _section_percent(setup, plane))
+            known[key] = signal_truths(machine, number - 1, (seen_centre(setup, plane), radius), inner)
         per_slice[number] = known[key]
     return per_slice
 
@@ -114,10 +114,11 @@ def _signal_slice(setup: Setup, uniform: tuple[int, ...]) -> int:
     return min(uniform, key=lambda n: abs(float(setup.planes[n - 1].from_patient(place)[2])))
 
 
-def _length(setup: Setup, plane: Plane, angle_deg: float) -> float:
-    """Diameter through the centre between half heights."""
-    centre, turn = seen_centre(setup, plane), math.radians(angle_deg)
-    return sum(outline_mm(setup, plane, centre, (s * math.cos(turn), s * math.sin(turn))) for s in (1, -1))
+def _diameters(setup: Setup, plane: Plane) -> Floats:
+    """Diameters through the centre between half heights, at `_ANGLES`."""
+    turns = np.radians(np.concatenate([_ANGLES, np.add(_ANGLES, 180)]))
+    radii = outline_mm(setup, plane, seen_centre(setup, plane), np.stack([np.cos(turns), np.sin(turns)], axis=-1))
+    return radii[: len(_ANGLES)] + radii[len(_ANGLES) :]
 
 
 def _square_diameter(setup: Setup, plane: Plane) -> float:
@@ -127,7 +128,7 @@ def _square_diameter(setup: Setup, plane: Plane) -> float:
     perfect = setup.but(
         scale_x_percent=0.0, scale_y_percent=0.0, nonlinearity_x_mm=0.0, nonlinearity_y_mm=0.0, off_resonance_hz=0.0
     )
-    return _length(perfect, plane, 0.0)
+    return float(_diameters(perfect, plane)[0])
 
 
 def _lengths(setup: Setup) -> dict[str, Truth]:
@@ -138,7 +139,7 @@ def _lengths(setup: Setup) -> dict[str, Truth]:
         heights[number] = abs(_height(setup, plane))
         if heights[number] + setup.profile.reach_mm >= half:
             continue
-        values = {f"length_{angle}": _length(setup, plane, angle) for angle in _ANGLES}
+        values = {f"length_{a}": float(d) for a, d in zip(_ANGLES, _diameters(setup, plane), strict=True)}
         true = _square_diameter(setup, plane)
         values["distortion_max"] = 100 * max(abs(v - true) / true for v in values.values())
         values["scale_x"] = 100 * (values["length_0"] / true - 1)
@@ -161,7 +162,7 @@ def _axial_length(setup: Setup) -> dict[str, Truth]:
         return {}
     start = seen_centre(setup, plane)
     direction = setup.axis[:2] / math.hypot(*setup.axis[:2])
-    length = sum(outline_mm(setup, plane, start, (s * direction[0], s * direction[1])) for s in (1, -1))
+    length = float(outline_mm(setup, plane, start, [direction, -direction]).sum())
     return {"length_axial": Truth(length, {number: length}, {"slice": number})}
 
 
