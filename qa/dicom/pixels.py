@@ -109,7 +109,8 @@ def _size(get: Elements) -> tuple[int, int, int]:
     if frames is None or frames < 1:
         raise RefusalError("Number of Frames is not a count: the file holds no image")
     if rows > _MOST_ON_A_SIDE or columns > _MOST_ON_A_SIDE or rows * columns * frames > _MOST_PIXELS:
-        raise RefusalError(f"{frames} frames of {rows} x {columns} pixels are more than any phantom series holds")
+        count = "an image" if frames == 1 else f"{frames} frames"
+        raise RefusalError(f"{count} of {rows} x {columns} pixels is more than any phantom series holds")
     return frames, rows, columns
 
 

@@ -7,6 +7,8 @@ from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
 
+import numpy as np
+
 from qa.dicom.elements import parse, quietly
 from qa.dicom.files import Found, find, read_bytes
 from qa.dicom.frames import Frame
@@ -98,7 +100,7 @@ def _without_identifiers(header: Header) -> str | None:
 
 
 def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[Refused]]:
-    """Take each SOP instance once: copies are named, files that differ under one identifier all refused."""
+    """Take each SOP instance once: copies of one image are named, and images that differ under one identifier all refused."""
     by_uid: dict[str, list[_Taken]] = defaultdict(list)
     for each in taken:
         by_uid[each.source.sop_instance_uid].append(each)
@@ -106,20 +108,31 @@ def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[Refused]]:
     refused: list[Refused] = []
     for same in by_uid.values():
         first, *others = same
-        if any(each.source.sha256 != first.source.sha256 for each in others):
-            names = " and ".join(str(each.source.path.name) for each in same[:3])
-            refused += [
-                Refused(each.source.path, f"different files share one SOP Instance UID ({names}): keep the right one")
-                for each in same
-            ]
-        else:
+        if all(_is_copy(first, each) for each in others):
+            name = first.source.path.name
             singles.append(
-                _with_remarks(
-                    first,
-                    [f"{each.source.path.name} is a copy of {first.source.path.name} and was read once" for each in others],
-                )
+                _with_remarks(first, [f"{each.source.path.name} is a copy of {name} and was read once" for each in others])
             )
+        else:
+            names = " and ".join(each.source.path.name for each in same[:3])
+            reason = f"different images share one SOP Instance UID ({names}): keep the right one"
+            refused += [Refused(each.source.path, reason) for each in same]
     return singles, refused
+
+
+def _is_copy(first: _Taken, second: _Taken) -> bool:
+    """Tell whether two files hold the same image, be it in another transfer syntax or with another patient's name."""
+    if first.source.sha256 == second.source.sha256:
+        return True
+    return len(first.frames) == len(second.frames) and all(
+        a.plane == b.plane
+        and a.settings == b.settings
+        and a.scaling == b.scaling
+        and a.kind == b.kind
+        and a.origin.series_instance_uid == b.origin.series_instance_uid
+        and np.array_equal(a.stored, b.stored)
+        for a, b in zip(first.frames, second.frames, strict=True)
+    )
 
 
 def _with_remarks(taken: _Taken, remarks: Sequence[str]) -> _Taken:

@@ -75,9 +75,9 @@ CASES = {
     "pixels cut": (setting(PixelData=bytes(100)), "the pixel data are cut short: 100 of 960 bytes"),
     "absurd size": (
         setting(Rows=65535, Columns=65535),
-        "1 frames of 65535 x 65535 pixels are more than any phantom series holds",
+        "an image of 65535 x 65535 pixels is more than any phantom series holds",
     ),
-    "absurd frames": (setting(NumberOfFrames=2**31 - 1), "2147483647 frames of 24 x 20 pixels are more"),
+    "absurd frames": (setting(NumberOfFrames=2**31 - 1), "2147483647 frames of 24 x 20 pixels is more"),
     "no frames": (setting(NumberOfFrames=0), "Number of Frames is not a count"),
     "frames in words": (as_text("InstanceNumber", "x "), ""),
     "twelve bits allocated": (setting(BitsAllocated=12), "Bits Allocated is not 8, 16 or 32"),

@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from pydicom.uid import RLELossless
 
 from qa.dicom import read
 
@@ -284,6 +285,14 @@ def test_a_copy_of_a_file_is_read_once(write_series):
     series = only(read(folder)).first
     assert series.pixels.shape[0] == 3
     assert series.remarks == ("copy.dcm is a copy of 002.dcm and was read once",)
+
+
+def test_the_same_image_in_another_transfer_syntax_is_a_copy(write_series, make):
+    folder = write_series(3)
+    image = make.image(2, position=(-10, -12, -10))
+    image.compress(RLELossless, encoding_plugin="pydicom", generate_instance_uid=False)
+    make.save(image, folder / "packed.dcm")
+    assert only(read(folder)).first.remarks == ("packed.dcm is a copy of 002.dcm and was read once",)
 
 
 def test_files_that_differ_under_one_identifier_are_all_refused(write_series, make):
