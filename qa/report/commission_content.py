@@ -1,5 +1,6 @@
 """What a commissioning report is made from: each figure of each digital scan beside its true value, and their sums."""
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
@@ -52,7 +53,9 @@ class Figure:
     def score(self) -> float:
         """Error over standard uncertainty."""
         difference = self.measured - self.true
-        return difference / self.standard_uncertainty if self.standard_uncertainty > 0 else difference and float("inf")
+        if self.standard_uncertainty > 0:
+            return difference / self.standard_uncertainty
+        return math.copysign(math.inf, difference) if difference else 0.0
 
 
 @dataclass(frozen=True)
