@@ -1,7 +1,9 @@
 """DICOM files of digital scans: the same bytes from the same seed, and objects that independent programs accept."""
 
+import os
 import shutil
 import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -74,12 +76,16 @@ def test_each_object_has_its_own_identifier(tmp_path):
     assert all(len(ds.SOPInstanceUID) <= 64 for ds in objects)
 
 
-@pytest.mark.skipif(shutil.which("dciodvfy") is None, reason="dciodvfy (dicom3tools) is not installed")
+_BESIDE = str(Path(sys.executable).parent)
+_DCIODVFY = shutil.which("dciodvfy", path=f"{_BESIDE}{os.pathsep}{os.environ.get('PATH', '')}")
+
+
+@pytest.mark.skipif(_DCIODVFY is None, reason="dciodvfy (dicom3tools) is not installed")
 @pytest.mark.parametrize("enhanced", KINDS)
 @pytest.mark.parametrize("changes", VARIANTS)
 def test_dciodvfy_finds_no_error(tmp_path, enhanced, changes):
     path = write_dicom(_scan(**changes), tmp_path, enhanced=enhanced)[0]
-    said = subprocess.run(["dciodvfy", path], capture_output=True, text=True, check=False)
+    said = subprocess.run([_DCIODVFY, path], capture_output=True, text=True, check=False)
     lines = (said.stdout + said.stderr).splitlines()
     assert any(line.strip() == ("EnhancedMRImage" if enhanced else "MRImage") for line in lines)
     assert [line for line in lines if line.startswith("Error")] == []
