@@ -1,13 +1,13 @@
 """Ten years of a fleet as columns: what judgement needs of every figure, read in one pass."""
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from datetime import date
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from sqlalchemy import Connection, Select, select
+from sqlalchemy import Connection, select
 
-from qa.records import CONFORMITIES, History, Judged
+from qa.records import CONFORMITIES, History, Judged, Measurement, Session
 from qa.store import queries, rows
 from qa.store.tables import details, measurements, verdicts
 
@@ -16,49 +16,71 @@ if TYPE_CHECKING:
 
     from qa.geometry import Floats
 
-__all__ = ["history_between", "judged_at"]
+__all__ = ["history_between", "judged_at", "light_sessions"]
 
 _BATCH = 20_000
 _CODES = {word: code for code, word in enumerate(CONFORMITIES)}
 
 
-def history_between(connection: Connection, scanner_name: str | None, from_day: date | None, to_day: date | None) -> History:
+Period = tuple[str | None, date | None, date | None]
+"""Scanner, first and last day; None where open."""
+
+
+def history_between(connection: Connection, period: Period) -> History:
     """Read all figures of a period that no later entry has taken the place of."""
-    heads = queries.acquisition_rows(connection, scanner_name, from_day, to_day)
     build = rows.Builder()
-    found = tuple(build.acquisition(row) for row in heads)
+    found = tuple(build.acquisition(row) for row in queries.acquisition_rows(connection, *period))
     columns = _Columns()
-    query = _figures()
-    if scanner_name is not None or from_day is not None or to_day is not None:
-        query = query.where(measurements.c.entry.in_(queries.standing_acquisitions(scanner_name, from_day, to_day)))
+    m, v = measurements.c, verdicts.c
+    for batch in _figures(
+        connection,
+        period,
+        (m.entry, m.position, m.quantity, m.value, m.standard_uncertainty, m.method, m.method_version),
+        (v.conformity, v.lower, v.upper),
+    ):
+        columns.add(batch)
+    return columns.history(found)
+
+
+def light_sessions(connection: Connection, period: Period) -> tuple[Session, ...]:
+    """Read the sessions of a period with every figure and verdict, but without details, regions, files and series."""
+    m = measurements.c
+    of_measurement = (m.quantity, m.value, m.unit, m.standard_uncertainty, m.method, m.method_version, m.slice)
+    of_verdict = [verdicts.c[name] for name in rows.VERDICT_COLUMNS]
+    figures: dict[int, list[Judged]] = {}
+    last = len(of_measurement) + 1
+    for batch in _figures(connection, period, (m.entry, *of_measurement), of_verdict):
+        for row in batch:
+            measurement = Measurement(*row[1:last])
+            verdict = None if row[last] is None else rows.verdict(row[1], row[last:])
+            figures.setdefault(row[0], []).append(Judged(measurement, verdict))
+    build = rows.Builder()
+    found = (
+        ((row.scanner_name, row.day), build.acquisition(row, judged=tuple(figures.get(row.entry, ()))))
+        for row in queries.acquisition_rows(connection, *period)
+    )
+    return queries.grouped(found)
+
+
+def _figures(
+    connection: Connection, period: Period, of_measurement: Sequence[Any], of_verdict: Sequence[Any]
+) -> Iterator[Sequence[Any]]:
+    """Read measurements with their verdicts, None where there is none, in batches of the driver's own tuples."""
+    m, v = measurements, verdicts
+    query = (
+        select(*of_measurement, *of_verdict)
+        .outerjoin_from(m, v, (v.c.entry == m.c.entry) & (v.c.position == m.c.position))
+        .order_by(m.c.entry, m.c.position)
+    )
+    if any(bound is not None for bound in period):
+        query = query.where(m.c.entry.in_(queries.standing_acquisitions(*period)))
     cursor = connection.connection.cursor()
     try:
         cursor.execute(str(query.compile(dialect=connection.dialect, compile_kwargs={"literal_binds": True})))
         while batch := cursor.fetchmany(_BATCH):
-            columns.add(batch)
+            yield batch
     finally:
         cursor.close()
-    return columns.history(found)
-
-
-def _figures() -> Select[Any]:
-    m, v = measurements, verdicts
-    return (
-        select(
-            m.c.entry,
-            m.c.position,
-            m.c.quantity,
-            m.c.value,
-            m.c.standard_uncertainty,
-            m.c.method,
-            m.c.method_version,
-            v.c.conformity,
-            v.c.lower,
-            v.c.upper,
-        )
-        .outerjoin_from(m, v, (v.c.entry == m.c.entry) & (v.c.position == m.c.position))
-        .order_by(m.c.entry, m.c.position)
-    )
 
 
 class _Columns:

@@ -34,6 +34,7 @@ __all__ = [
     "acquisition_of",
     "acquisition_rows",
     "by_entry",
+    "grouped",
     "known",
     "latest_limits",
     "limit_versions",
@@ -193,6 +194,11 @@ def sessions_between(
         judged = rows.judged_from_rows(of[measurements], texts[row.entry], of[verdicts])
         acquisition = build.acquisition(row, series=of[series], files=of[files], judged=judged, not_measured=of[not_measured])
         found.append(((row.scanner_name, row.day), acquisition))
+    return grouped(found)
+
+
+def grouped(found: Iterable[tuple[tuple[str, str], RecordedAcquisition]]) -> tuple[Session, ...]:
+    """Put acquisitions that stand in order of scanner and day into sessions."""
     return tuple(
         Session(name, date.fromisoformat(day), tuple(acquisition for _, acquisition in group))
         for (name, day), group in groupby(found, key=itemgetter(0))

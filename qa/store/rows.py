@@ -24,6 +24,7 @@ from qa.records import (
 )
 
 __all__ = [
+    "VERDICT_COLUMNS",
     "Builder",
     "content_sha256",
     "dump",
@@ -31,6 +32,7 @@ __all__ = [
     "measurement_rows",
     "series_and_file_rows",
     "sound",
+    "verdict",
     "verdict_row",
 ]
 
@@ -147,9 +149,9 @@ def _region_in(values: Sequence[Any]) -> Region:
     return Region(name, shape, slice_, tuple((x, y) for x, y in points), radius_mm)
 
 
-def verdict_row(position: int, verdict: Verdict) -> dict[str, Any]:
+def verdict_row(position: int, judged: Verdict) -> dict[str, Any]:
     """Give the row of a verdict, whose quantity is that of its measurement."""
-    row = asdict(verdict)
+    row = asdict(judged)
     del row["quantity"]
     return {"position": position, "limit_text": row.pop("limit"), **row}
 
@@ -172,25 +174,22 @@ def judged_from_rows(measurements: Sequence[Any], details: str, verdicts: Sequen
             regions=tuple(_region_in(region) for region in regions),
         )
         judged = by_position.get(row.position)
-        found.append(Judged(measurement, None if judged is None else _verdict(row.quantity, judged)))
+        found.append(Judged(measurement, None if judged is None else verdict(row.quantity, judged[2:])))
     return tuple(found)
 
 
-def _verdict(quantity: str, row: Any) -> Verdict:  # noqa: ANN401 - a row
+VERDICT_COLUMNS = (
+    "conformity", "lower", "upper", "limit_text", "rule", "source", "probability", "guard_band", "warn_lower", "warn_upper",
+    "warned", "limit_key",
+)  # fmt: skip
+"""Columns of a verdict in the order of its fields."""
+
+
+def verdict(quantity: str, values: Sequence[Any]) -> Verdict:
+    """Make a verdict of the values of `VERDICT_COLUMNS`."""
+    word, lower, upper, limit, rule, source, probability, guard, warn_lower, warn_upper, warned, key = values
     return Verdict(
-        quantity=quantity,
-        conformity=row.conformity,
-        lower=row.lower,
-        upper=row.upper,
-        limit=row.limit_text,
-        rule=row.rule,
-        source=row.source,
-        probability=row.probability,
-        guard_band=row.guard_band,
-        warn_lower=row.warn_lower,
-        warn_upper=row.warn_upper,
-        warned=bool(row.warned),
-        limit_key=row.limit_key,
+        quantity, word, lower, upper, limit, rule, source, probability, guard, warn_lower, warn_upper, bool(warned), key
     )
 
 

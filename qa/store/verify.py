@@ -5,7 +5,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import Connection, not_, select
+from sqlalchemy import Connection, or_, select
 from sqlalchemy.exc import DBAPIError
 from sqlalchemy.sql import Select
 
@@ -167,7 +167,7 @@ def _content(connection: Connection, after: int, to: int | None) -> dict[Any, Co
     found: dict[Any, Content] = {}
     for table in CONTENT_TABLES:
         entry, position = table.c.entry, table.c.get("position")
-        where = entry.between(after + 1, to) if to is not None else not_(entry.between(1, after))
+        where = entry.between(after + 1, to) if to is not None else or_(entry < 1, entry > after)
         query = select(table).where(where).order_by(entry, *([] if position is None else [position]))
         rows: list[Sequence[Any]] = []
         number: Any = None

@@ -125,6 +125,8 @@ def main() -> None:
             print(f"verify   {took:6.2f} s, {took / plain:.2f} times reading all rows; {found.head.number} entries")
             took, history = seconds(record.history)
             print(f"history  {took:6.2f} s for {len(history.values)} figures of {len(history.acquisitions)} acquisitions")
+            took, fleet = seconds(lambda: record.sessions(details=False))
+            print(f"sessions {took:6.2f} s for all {len(fleet)} sessions without details")
             took, sessions = seconds(lambda: record.sessions("scanner-00"))
             print(f"sessions {took:6.2f} s for the {len(sessions)} sessions of one scanner, with all details")
 

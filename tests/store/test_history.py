@@ -4,7 +4,7 @@ from datetime import date
 import numpy as np
 import pytest
 
-from qa.records import CONFORMITIES
+from qa.records import CONFORMITIES, Judged
 
 
 def test_a_history_says_what_the_sessions_say(record, make):
@@ -33,6 +33,25 @@ def test_a_history_says_what_the_sessions_say(record, make):
         assert [None if np.isnan(v) else v for v in getattr(history, name)] == bounds
     places = [(kept[n].identifier, p) for n, p, _ in rows][::-1]
     assert record.judged(places) == tuple(j for _, _, j in rows[::-1])
+
+
+def test_sessions_without_details_hold_the_same_figures(record, make):
+    make.fill(record, sessions=3)
+    record.store_all([make.intake(20, day=1, scanner_name="b", verdicts=[None, make.verdict("ghosting", warned=False)])])
+    for period in ((), ("north-3t", date(2026, 3, 9), None)):
+        full, light = record.sessions(*period), record.sessions(*period, details=False)
+        assert [(s.scanner_name, s.day) for s in light] == [(s.scanner_name, s.day) for s in full]
+        for few, all_ in zip(light, full, strict=True):
+            assert few.acquisitions == tuple(
+                replace(
+                    a,
+                    judged=tuple(Judged(replace(j.measurement, details={}, regions=()), j.verdict) for j in a.judged),
+                    files=(),
+                    series_uids=(),
+                    not_measured=(),
+                )
+                for a in all_.acquisitions
+            )
 
 
 def test_equal_settings_are_one_object(record, make):

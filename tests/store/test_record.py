@@ -62,7 +62,7 @@ def test_every_number_and_text_keeps_its_bits(record, make, numbers, text):
     measured, verdict = kept.judged[0].measurement, kept.judged[0].verdict
     found = [measured.value, measured.standard_uncertainty, verdict.lower, verdict.probability, measured.details["x"][0]]
     # Minus zero becomes zero where it stands in a column of its own, because SQLite keeps no minus zero.
-    wanted = [value + 0.0, u + 0.0, lower + 0.0, inner, inner]
+    wanted = [value + 0.0, u + 0.0, lower + 0.0, inner + 0.0, inner]
     assert [struct.pack("d", number) for number in found] == [struct.pack("d", number) for number in wanted]
     assert measured.method == text.replace("\0", "\N{REPLACEMENT CHARACTER}")
     assert measured.details["t"] == text
