@@ -1,10 +1,11 @@
 """Where the phantom lies in the images: centre, rotation, tilt, each with its uncertainty.
 
-`locate` finds the body's outline in every slice (`qa.locate.outline`), and from the outlines the body in space
-(`qa.locate.body`).
+`locate` finds the body's outline in every slice (`qa.locate.outline`), from the outlines the body in space
+(`qa.locate.body`), and from what lies in it its turn and its place along the axis (`qa.locate.contents`).
 """
 
 from qa.locate.body import locate_body
+from qa.locate.contents import refine
 from qa.phantoms import Phantom
 from qa.records import Acquisition, NotLocated, Pose
 
@@ -26,4 +27,5 @@ def locate(acquisition: Acquisition, phantom: Phantom) -> Pose | NotLocated:
     Pose or NotLocated
         Where it lies, or why it was not found, in words a technologist can act on.
     """
-    return locate_body(acquisition, phantom)
+    pose = locate_body(acquisition, phantom)
+    return pose if isinstance(pose, NotLocated) else refine(acquisition, pose, phantom)

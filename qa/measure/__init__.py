@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from qa.measure import background, frequency, ghosting, lengths, setup, snr, uniformity
+from qa.measure import background, frequency, ghosting, lattice, lengths, position, setup, snr, thickness, uniformity
 from qa.phantoms import Phantom
 from qa.records import Acquisition, Measurement, NotLocated, NotMeasured, Pose
 
@@ -33,6 +33,9 @@ ROUTINES: tuple[Routine, ...] = (
     Routine(uniformity.uniformity, ("uniformity_piu", "uniformity_naad")),
     Routine(ghosting.ghosting, ("ghosting",)),
     Routine(lengths.lengths, ("length_0", "length_45", "length_90", "length_135", "distortion_max", "scale_x", "scale_y")),
+    Routine(lattice.lattice, ("lattice_rms", "lattice_max", "distortion_max", "scale_x", "scale_y")),
+    Routine(thickness.slice_thickness, ("slice_thickness",)),
+    Routine(position.slice_position, ("slice_position", "slice_position_end")),
     Routine(frequency.centre_frequency, ("centre_frequency",), needs_pose=False),
     Routine(setup.setup, ("setup_offset", "setup_tilt")),
 )

@@ -1,0 +1,265 @@
+"""What lies in a body tells how it lies: turn about its axis, which end is which, and its place along the axis.
+
+A first look compares rings of samples round the axis, slice by slice, with what the definition says should be seen at each
+height, over all turns at once (circular correlation) and over a range of heights. Then the expected sections are laid over the
+pixels round them by least squares, in turn and height together. Nothing is decided by the order of slices alone.
+"""
+
+import math
+from dataclasses import dataclass, replace
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from qa.geometry import Floats, Plane
+from qa.locate.expected import TELLING, Places, expected_fill
+from qa.locate.overlay import overlay
+from qa.locate.view import SliceView
+from qa.phantoms import Phantom
+from qa.records import Acquisition, NotLocated, Pose
+
+__all__ = ["refine"]
+
+_ANGLES = 128
+_RINGS = 14
+_STEP_MM = 2.0
+_FAR_MM = 40.0
+_NEAR_MM = 8.0
+_SURE = 0.5
+"""Correlation with what is expected from which the phantom is believed to be the one named."""
+_MOST_TURN_DEG = 20.0
+_MOST_OFF = 0.75
+"""How far the slices may be off the sections, as a share of the distance between them."""
+
+
+@dataclass(frozen=True)
+class _Guess:
+    """How well one way of lying agrees: correlation, whether back to front, height added to every slice, turn."""
+
+    score: float
+    reversed: bool
+    shift_mm: float
+    turn_deg: float
+
+
+def refine(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose | NotLocated:
+    """Complete a pose found from the body alone by what the slices show of its contents.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        Magnitude images.
+    pose : Pose
+        Axis and outline of the body; its height and turn are stand-ins.
+    phantom : Phantom
+        What should be in it.
+
+    Returns
+    -------
+    Pose or NotLocated
+        The pose with turn and height and their uncertainties; unchanged where the phantom has no such contents; or how the
+        phantom was set up wrongly, in words a technologist can act on.
+    """
+    if not any(isinstance(s, TELLING) for s in phantom.sections) or not pose.sections:
+        return pose
+    upright = _upright(pose, acquisition.planes[0])
+    rings = _Rings.of(acquisition, upright, phantom)
+    axial = _is_axial(acquisition.planes[0])
+    best = rings.best(phantom, reach_mm=_NEAR_MM, ways=(False,))
+    expected = best.score >= _SURE and (abs(best.turn_deg) <= _MOST_TURN_DEG or not axial)
+    if not expected:
+        best = max(
+            (rings.best(phantom, reach_mm=_FAR_MM, ways=(way,)) for way in (False, True)), key=lambda guess: guess.score
+        )
+    if best.score < _SURE:
+        return NotLocated(
+            f"the slices show none of the inserts of {phantom.name} where they should be: another phantom was scanned, "
+            "or slices were placed where it has none"
+        )
+    if axial:
+        wrong = _set_up_wrongly(best)
+        if wrong:
+            return NotLocated(wrong)
+    laid = overlay(acquisition, _moved(upright, best), phantom)
+    away = _off_sections(acquisition, laid, phantom)
+    return away if isinstance(away, NotLocated) else replace(laid, remarks=(*laid.remarks, *away))
+
+
+def _is_axial(plane: Plane) -> bool:
+    return int(np.argmax(np.abs(plane.normal))) == 2
+
+
+def _upright(pose: Pose, plane: Plane) -> Pose:
+    """Give the pose the orientation of a phantom set up square to the image, its z along the slice normal or against it.
+
+    On axial slices, +z is towards the head and x is the image axis nearest the patient's left; on others the image's own axes
+    serve.
+    """
+    axes = plane.axes
+    if _is_axial(plane):
+        z = axes[:, 2] * np.sign(axes[2, 2])
+        across = axes[:, :2]
+        k = int(np.argmax(np.abs(across[0])))
+        x = across[:, k] * np.sign(across[0, k])
+        axes = np.stack([x, np.cross(z, x), z], axis=1)
+    axis = pose.orientation[:, 2] * np.sign(pose.orientation[:, 2] @ axes[:, 2])
+    x = axes[:, 0] - (axes[:, 0] @ axis) * axis
+    x /= np.linalg.norm(x)
+    return replace(pose, orientation=np.stack([x, np.cross(axis, x), axis], axis=1))
+
+
+def _moved(pose: Pose, guess: _Guess) -> Pose:
+    """Apply a guess to an upright pose."""
+    axes = pose.orientation
+    if guess.reversed:
+        axes = axes * np.array([-1.0, 1.0, -1.0])
+    c, s = math.cos(math.radians(guess.turn_deg)), math.sin(math.radians(guess.turn_deg))
+    axes = axes @ np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
+    return replace(
+        pose,
+        orientation=axes,
+        centre_patient=pose.centre_patient - guess.shift_mm * axes[:, 2],
+        rotation_deg=guess.turn_deg,
+    )
+
+
+def _set_up_wrongly(guess: _Guess) -> str:
+    """Say what is wrong with how the phantom lies; an empty string when nothing is."""
+    turned = f"turned by {round(abs(guess.turn_deg)):d} degrees about the bore axis"
+    square = abs(guess.turn_deg) <= _MOST_TURN_DEG
+    if guess.reversed:
+        also = "" if square else f", and {turned}"
+        return f"the phantom lies back to front{also}: set it up again with its first section towards the feet"
+    return "" if square else f"the phantom is {turned}: set it up again"
+
+
+def _off_sections(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> tuple[str, ...] | NotLocated:
+    """Compare where the slices lie with where the definition expects them."""
+    stack = phantom.slices
+    if stack is None or pose.u_centre_mm[2] is None:
+        return ()
+    normal = acquisition.planes[0].normal
+    along = float(normal @ pose.orientation[:, 2])
+    heights = np.array([p.position_along_normal for p in acquisition.planes]) - normal @ pose.centre_patient
+    heights = np.sort(heights / along)
+    expected = stack.first_z_mm + stack.spacing_mm * np.arange(stack.count)
+    if len(heights) == stack.count:
+        off = float(np.median(heights - expected))
+        if abs(off) > _MOST_OFF * stack.spacing_mm:
+            way = "+z" if off > 0 else "-z"
+            return NotLocated(
+                f"the slices lie {abs(off):.0f} mm off the sections, towards the phantom's {way} end: "
+                f"place the first slice on the section at z = {stack.first_z_mm:g} mm and scan again"
+            )
+        return ()
+    missing = [n for n, z in enumerate(expected, start=1) if np.abs(heights - z).min() > stack.spacing_mm / 2]
+    which = f"; missing: {', '.join(f'slice {n}' for n in missing)}" if missing else ""
+    return (f"{len(heights)} slices where {stack.count} are expected{which}",)
+
+
+def _ring_places(radii_mm: Floats) -> tuple[Floats, Floats]:
+    """Phantom x and y (rings, angles) of the samples."""
+    angles = np.arange(_ANGLES) * (2 * np.pi / _ANGLES)
+    return radii_mm[:, None] * np.cos(angles), radii_mm[:, None] * np.sin(angles)
+
+
+@lru_cache(maxsize=8)
+def _expected_rings(phantom: Phantom, thickness_mm: float) -> tuple[Floats, NDArray[np.complex64], Floats]:
+    """Radii, and for heights at steps along the whole body the Fourier series of each ring's darkness, and its energy."""
+    assert phantom.radius_mm is not None  # noqa: S101 - a body with sections is a cylinder
+    radii: Floats = np.linspace(0.1, 0.94, _RINGS) * phantom.radius_mm
+    half = (phantom.extent_mm or 0.0) / 2
+    count = int(half / _STEP_MM)
+    heights: Floats = np.arange(-count, count + 1).astype(np.float64) * _STEP_MM
+    X, Y = _ring_places(radii)
+    places = Places(X[None], Y[None], heights[:, None, None])
+    dark = 1 - expected_fill(phantom.sections, places, thickness_mm, np.pi * phantom.radius_mm / _ANGLES)
+    dark *= np.sqrt(radii)[:, None]
+    return radii, np.fft.rfft(dark, axis=-1).astype(np.complex64), np.sum(dark**2, axis=(1, 2))
+
+
+@dataclass(frozen=True, eq=False)
+class _Rings:
+    """Darkness on rings round the axis of each slice, as Fourier series (S, rings, waves); its energy; the slices' heights."""
+
+    series: NDArray[np.complex64]
+    energy: float
+    heights_mm: Floats
+    thickness_mm: float
+
+    @classmethod
+    def of(cls, acquisition: Acquisition, pose: Pose, phantom: Phantom) -> "_Rings":
+        stack = phantom.slices
+        thickness = 5.0 if stack is None else stack.thickness_mm
+        radii, _, _ = _expected_rings(phantom, thickness)
+        X, Y = _ring_places(radii)
+        slices = sorted({s.slice_index for s in pose.sections})
+        plane = acquisition.planes[0]
+        values: Floats = np.empty((len(slices), _RINGS, _ANGLES))
+        heights = np.empty(len(slices))
+        for n, index in enumerate(slices):
+            view = SliceView.of(acquisition.planes[index], pose)
+            places = view.to_image(X, Y)
+            columns, rows = (
+                np.clip(np.round(places[..., k] / plane.pixel_mm[1 - k]).astype(np.intp), 0, plane.shape[1 - k] - 1)
+                for k in (0, 1)
+            )
+            values[n] = acquisition.pixels[index][rows, columns]
+            heights[n] = float(view.height(0.0, 0.0))
+        dark = 1 - values / _level(values, X / radii[-1], Y / radii[-1])
+        dark = np.clip(dark, -0.5, 1.0) * np.sqrt(radii)[:, None]
+        return cls(np.fft.rfft(dark, axis=-1).astype(np.complex64), float(np.sum(dark**2)), heights, thickness)
+
+    def best(self, phantom: Phantom, *, reach_mm: float, ways: tuple[bool, ...]) -> _Guess:
+        """Return the best agreement over all turns and over heights within reach."""
+        _, templates, energies = _expected_rings(phantom, self.thickness_mm)
+        last = len(templates) // 2
+        count = int(reach_mm / _STEP_MM)
+        shifts = np.arange(-count, count + 1) * _STEP_MM
+        found = _Guess(-1.0, reversed=False, shift_mm=0.0, turn_deg=0.0)
+        waves = np.arange(templates.shape[-1])
+        for way in ways:
+            signed = -self.heights_mm if way else self.heights_mm
+            number = np.round((signed[None, :] + shifts[:, None]) / _STEP_MM).astype(np.intp)
+            known = np.abs(number) <= last
+            at = np.where(known, number + last, 0)
+            chosen = templates[at] * known[..., None, None]
+            if way:
+                chosen = chosen.conj() * np.exp(-1j * np.pi * waves).astype(np.complex64)
+            product = np.einsum("srw,nsrw->nw", self.series, chosen.conj())
+            agreement = np.fft.irfft(product, n=_ANGLES, axis=-1)
+            norm = np.sqrt(np.maximum((energies[at] * known).sum(axis=1), 1e-9) * max(self.energy, 1e-9))
+            score = agreement / norm[:, None]
+            n, turn = (int(v) for v in np.unravel_index(int(np.argmax(score)), score.shape))
+            if score[n, turn] > found.score:
+                fine = _vertex(score[n, [turn - 1, turn, (turn + 1) % _ANGLES]])
+                rise = _vertex(score[n - 1 : n + 2, turn]) if 0 < n < len(shifts) - 1 else 0.0
+                angle = (turn + fine) * 360 / _ANGLES
+                found = _Guess(
+                    float(score[n, turn]), way, float(shifts[n] + rise * _STEP_MM), float((angle + 180) % 360 - 180)
+                )
+        return found
+
+
+def _vertex(three: Floats) -> float:
+    """Place of a parabola's vertex through three values at -1, 0, 1, the middle one the largest."""
+    bend = three[0] - 2 * three[1] + three[2]
+    return float(np.clip(0.5 * (three[0] - three[2]) / bend, -0.5, 0.5)) if bend < 0 else 0.0
+
+
+def _level(values: Floats, x: Floats, y: Floats) -> Floats:
+    """Signal of the fill on the rings, (S, rings, angles): one smooth surface for all slices, with a gain for each."""
+    usual = np.percentile(values, 70, axis=0)
+    terms = np.stack([x ** (n - k) * y**k for n in range(5) for k in range(n + 1)], axis=-1).reshape(-1, 15)
+    flat = usual.reshape(-1)
+    kept = flat > 0.7 * np.median(flat)
+    for _ in range(3):
+        surface = terms @ np.linalg.lstsq(terms[kept], flat[kept], rcond=None)[0]
+        kept = flat > 0.9 * surface
+        if kept.sum() < 40:
+            break
+    surface = np.maximum(surface.reshape(usual.shape), 0.1 * float(np.median(flat)) + 1e-9)
+    gain = np.median(values / surface, axis=(1, 2))
+    level: Floats = surface * np.maximum(gain, 1e-6)[:, None, None]
+    return level

@@ -1,0 +1,173 @@
+"""Laying the expected sections over the pixels round them, in turn and height, by least squares."""
+
+import math
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+
+from qa.geometry import Floats
+from qa.locate.expected import TELLING, Places, expected_fill
+from qa.locate.view import SliceView
+from qa.phantoms import Lattice, Phantom, Ramps, WedgeBars
+from qa.records import Acquisition, Pose
+
+__all__ = ["overlay"]
+
+_STEPS = 3
+_BLUR = 1.2
+_LEAST_U_DEG = 0.004
+_LEAST_U_MM = 0.05
+
+
+@dataclass(frozen=True, eq=False)
+class _Patch:
+    """Pixels round one section in one slice, in the phantom's frame as it was first guessed."""
+
+    section: Any
+    slice_index: int
+    values: Floats
+    X: Floats
+    Y: Floats
+    Z: Floats
+
+
+def overlay(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose:
+    """Improve a pose's turn about its axis and its height.
+
+    Level (with slopes), floor and contrast of each section's pixels are fitted with them, so that shading and noise floor do
+    not matter. Standard uncertainties come from the residuals; what the straight edges of the model leave out adds 0.004
+    degrees and 0.05 mm.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        Magnitude images.
+    pose : Pose
+        Right to a degree or two and to a few mm.
+    phantom : Phantom
+        What should be seen.
+
+    Returns
+    -------
+    Pose
+        With turn and height, each with its uncertainty, or None for what the slices do not show; remarks name slices that do
+        not show the section they should.
+    """
+    thickness = acquisition.settings.slice_thickness_mm or (phantom.slices.thickness_mm if phantom.slices else 5.0)
+    soft = _BLUR * max(acquisition.planes[0].pixel_mm)
+    patches = _patches(acquisition, pose, phantom, thickness)
+    if not patches:
+        return pose
+    turn, rise = 0.0, 0.0
+    for _ in range(_STEPS):
+        normal, right = np.zeros((2, 2)), np.zeros(2)
+        squares, count = 0.0, 0
+        contrasts = []
+        for patch in patches:
+            slopes, residual, contrast = _linearised(patch, turn, rise, thickness, soft)
+            contrasts.append(contrast)
+            normal += slopes.T @ slopes
+            right += slopes.T @ residual
+            squares += float(residual @ residual)
+            count += residual.size
+        scale = np.sqrt(np.maximum(np.diag(normal), 1e-12))
+        inverse = np.linalg.inv(normal / np.outer(scale, scale) + 1e-6 * np.eye(2)) / np.outer(scale, scale)
+        change = inverse @ right
+        turn += float(np.clip(change[0], -2, 2))
+        rise += float(np.clip(change[1], -3, 3))
+    spread = squares / max(1, count - 2)
+    u_turn, u_rise = (math.sqrt(spread * inverse[k, k]) for k in (0, 1))
+    c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
+    axes = pose.orientation @ np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
+    known = any(isinstance(p.section, Ramps | WedgeBars) and seen > 0.3 for p, seen in zip(patches, contrasts, strict=True))
+    missing = tuple(
+        f"slice {p.slice_index + 1} does not show the {p.section.kind.replace('-', ' ')} that it should"
+        for p, seen in zip(patches, contrasts, strict=True)
+        if seen < 0.15
+    )
+    return replace(
+        pose,
+        orientation=axes,
+        centre_patient=pose.centre_patient - rise * axes[:, 2],
+        rotation_deg=(pose.rotation_deg + turn + 180) % 360 - 180,
+        u_rotation_deg=math.hypot(u_turn, _LEAST_U_DEG),
+        u_centre_mm=(*pose.u_centre_mm[:2], math.hypot(u_rise, _LEAST_U_MM) if known and u_rise < 2 else pose.u_centre_mm[2]),
+        remarks=(
+            *(r for r in pose.remarks if not (known and "stands in" in r)),
+            *missing,
+        ),
+    )
+
+
+def _patches(acquisition: Acquisition, pose: Pose, phantom: Phantom, thickness: float) -> list[_Patch]:
+    """Cut out the pixels round each section in each slice that lies well in it."""
+    found = []
+    for index in sorted({s.slice_index for s in pose.sections}):
+        view = SliceView.of(acquisition.planes[index], pose)
+        z = float(view.height(0.0, 0.0))
+        for section in phantom.sections:
+            if not isinstance(section, TELLING):
+                continue
+            low, high = section.z_from_mm, section.z_to_mm
+            if isinstance(section, WedgeBars):
+                low, high = low + thickness / 2, high - thickness / 2
+            if min(z + thickness / 2, high) - max(z - thickness / 2, low) < 0.5 * thickness:
+                continue
+            x_mm, y_mm, step = _around(section)
+            window = view.window(x_mm, y_mm, step)
+            values = acquisition.pixels[index][window.rows, window.columns].astype(np.float64)
+            X, Y = window.X, window.Y
+            inside = (np.abs(X - sum(x_mm) / 2) < (x_mm[1] - x_mm[0]) / 2) & (
+                np.abs(Y - sum(y_mm) / 2) < (y_mm[1] - y_mm[0]) / 2
+            )
+            inside &= np.hypot(X, Y) < 0.96 * (phantom.radius_mm or math.inf)
+            if inside.sum() < 50:
+                continue
+            X, Y = X[inside], Y[inside]
+            found.append(_Patch(section, index, values[inside], X, Y, view.height(X, Y)))
+    return found
+
+
+def _around(section: Any) -> tuple[tuple[float, float], tuple[float, float], int]:  # noqa: ANN401 - any telling section
+    """Rectangle round a section in the phantom's x and y, and the step at which its pixels are taken."""
+    match section:
+        case Ramps():
+            (x, y), (width, height) = section.block_centre_mm, section.block_size_mm
+            return (x - width / 2 - 6, x + width / 2 + 6), (y - height / 2 - 6, y + height / 2 + 6), 1
+        case WedgeBars():
+            ends = [v for bar in section.bars for v in (bar.x_from_mm, bar.x_to_mm)]
+            far = section.start_y_mm + section.length_mm + section.reach_mm + 6
+            return (min(ends) - 6, max(ends) + 6), (section.start_y_mm, far), 1
+        case Lattice():
+            half = section.span_mm / 2 + 4
+            return (-half, half), (-half, half), 2
+        case _:
+            raise TypeError(section)
+
+
+def _linearised(patch: _Patch, turn_deg: float, rise_mm: float, thickness: float, soft: float) -> tuple[Floats, Floats, float]:
+    """Slopes (P, 2) of a section's pixels by turn in degrees and rise in mm, and residuals; level and floor are fitted out.
+
+    The third value is the contrast: how much darker the inserts are than the fill, as a share of the fill's signal.
+    """
+
+    def fill(turn: float, rise: float) -> Floats:
+        c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
+        places = Places(c * patch.X + s * patch.Y, c * patch.Y - s * patch.X, patch.Z + rise)
+        return expected_fill((patch.section,), places, thickness, soft)
+
+    now = fill(turn_deg, rise_mm)
+    by_turn = (fill(turn_deg + 0.25, rise_mm) - fill(turn_deg - 0.25, rise_mm)) / 0.5
+    by_rise = (fill(turn_deg, rise_mm + 0.25) - fill(turn_deg, rise_mm - 0.25)) / 0.5
+    x, y = patch.X - patch.X.mean(), patch.Y - patch.Y.mean()
+    design = np.stack([np.ones_like(now), now, now * x, now * y], axis=1)
+    gram = design.T @ design
+    gram[range(4), range(4)] *= 1 + 1e-9
+    wanted = np.stack([patch.values, by_turn, by_rise], axis=1)
+    fitted = np.linalg.solve(gram, design.T @ wanted)
+    floor, gain = fitted[0, 0], fitted[1, 0]
+    level = gain + fitted[2, 0] * x + fitted[3, 0] * y
+    slopes = np.stack([by_turn, by_rise], axis=1) * level[:, None]
+    slopes -= design @ np.linalg.solve(gram, design.T @ slopes)
+    return slopes, patch.values - design @ fitted[:, 0], float(gain / max(gain + floor, 1e-9))
