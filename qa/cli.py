@@ -155,14 +155,18 @@ def ingest(
     Example: evenfield ingest --site /srv/mr-qa
     """
     from qa.pipeline import open_department, survey, take_in
-    from qa.report.terminal import intake_lines
+    from qa.report.terminal import refused_line, taken_line
 
     with open_department(site) as department:
         intake = take_in(department, paths or (), _progress(quiet=quiet))
         if not quiet:
-            for line in intake_lines(intake):
-                say(line)
-        _finish(survey(department).exit_status(refused=bool(intake.refused)))
+            for taken in intake.taken:
+                say(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
+            for one in intake.refused:
+                say(refused_line(one))
+            counts = (len(intake.taken), intake.skipped, len(intake.refused))
+            say("{} acquisitions taken in, {} files known already, {} refused".format(*counts))
+        _finish(survey(department).exit_status(attention=intake.needs_a_person))
 
 
 @app.command()
@@ -172,36 +176,47 @@ def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
     Example (crontab): 30 6 * * * evenfield check --site /srv/mr-qa
     """
     from qa.pipeline import open_department, survey, take_in
-    from qa.report.terminal import attention_lines
+    from qa.report.terminal import attention_lines, refused_line, taken_line
 
     with open_department(site) as department:
         intake = take_in(department)
         found = survey(department)
         if not quiet:
-            for line in attention_lines(intake, found):
+            for line in attention_lines(found.assessments):
                 put(line)
-        _finish(found.exit_status(refused=bool(intake.refused)))
+            for taken in intake.unmeasured:
+                put(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
+            for one in intake.refused:
+                put(refused_line(one))
+        _finish(found.exit_status(attention=intake.needs_a_person))
 
 
 @app.command()
-def status(*, site: SiteOption = HERE, as_json: JsonOption = False, quiet: QuietOption = False) -> None:
+def status(
+    *,
+    site: SiteOption = HERE,
+    as_of: Annotated[str | None, typer.Option("--as-of", help="The day to look from; today when not given.")] = None,
+    as_json: JsonOption = False,
+    quiet: QuietOption = False,
+) -> None:
     """Show the fleet at a glance, one line a scanner.
 
     Example: evenfield status --site /srv/mr-qa
     """
     from qa.pipeline import open_department, survey
 
+    day = _day(as_of, "--as-of")
     with open_department(site) as department:
-        found = survey(department)
+        found = survey(department, day)
         if as_json:
             from qa.report.figures_json import status_document, to_json
 
-            put(to_json(status_document(found)))
+            put(to_json(status_document(found.at, found.assessments)))
         elif not quiet:
             from qa.report.terminal import status_table
 
-            put(status_table(found))
-        _finish(found.exit_status(refused=False))
+            put(status_table(found.assessments))
+        _finish(found.exit_status())
 
 
 @app.command()

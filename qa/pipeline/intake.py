@@ -44,6 +44,16 @@ class Intake:
     skipped: int
     refused: tuple[Refused, ...]
 
+    @property
+    def unmeasured(self) -> tuple[Taken, ...]:
+        """What was taken in but gave no figure of the phantom: it was not found, or the protocol has changed."""
+        return tuple(one for one in self.taken if one.changed or one.outcome.pose is None)
+
+    @property
+    def needs_a_person(self) -> bool:
+        """Tell whether something has to be looked at, whatever the figures say."""
+        return bool(self.refused or self.unmeasured)
+
 
 @dataclass
 class _Gate:
@@ -158,7 +168,7 @@ def _store(department: Department, gate: _Gate, acquisitions: Sequence[Acquisiti
         outcome = _not_measured_over(acquisition, phantom.name, changed) if changed else examine(acquisition, phantom)
         acquired_at = acquisition.first.acquired_at
         day = department.today if acquired_at is None else acquired_at.date()
-        verdicts = judge_outcome(department, scanner, outcome, day)
+        outcome, verdicts = judge_outcome(department, scanner, phantom, outcome, day)
         for repeat in acquisition.repeats:
             for file in repeat.files:
                 files[file.sha256] = file

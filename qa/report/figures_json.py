@@ -4,12 +4,15 @@ import json
 import math
 from collections.abc import Iterable, Mapping
 from datetime import datetime
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from qa import __version__
 from qa.records import Measurement, Outcome, Pose, Refused
 
-__all__ = ["measurements_document", "to_json"]
+if TYPE_CHECKING:
+    from qa.judge import Assessment, QuantityState
+
+__all__ = ["measurements_document", "status_document", "to_json"]
 
 
 def to_json(document: Mapping[str, Any]) -> str:
@@ -38,6 +41,74 @@ def measurements_document(outcomes: Iterable[Outcome], refused: Iterable[Refused
         "software": {"name": "evenfield", "version": __version__},
         "acquisitions": [_acquisition(outcome) for outcome in outcomes],
         "refused": [{"path": str(one.path), "reason": one.reason} for one in refused],
+    }
+
+
+def status_document(at: datetime, assessments: "Iterable[Assessment]") -> dict[str, Any]:
+    """Lay out what `evenfield status --json` prints.
+
+    Parameters
+    ----------
+    at : datetime
+        The moment of the run, with its time zone.
+    assessments : iterable of Assessment
+        One a scanner.
+
+    Returns
+    -------
+    dict
+        Plain values.
+    """
+    return {
+        "format": "evenfield-status",
+        "version": 1,
+        "at": _moment(at),
+        "scanners": [_scanner(one) for one in assessments],
+    }
+
+
+def _scanner(one: "Assessment") -> dict[str, Any]:
+    return {
+        "name": one.scanner_name,
+        "standing": one.standing,
+        "last_session": None if one.last_session is None else one.last_session.isoformat(),
+        "due": None if one.due is None else one.due.isoformat(),
+        "out": list(one.out),
+        "drifting": list(one.drifting),
+        "out_of_control": list(one.out_of_control),
+        "sentence": one.sentence,
+        "reasons": list(one.reasons),
+        "remarks": list(one.remarks),
+        "days_overdue": one.days_overdue,
+        "missed": [day.isoformat() for day in one.kept.missed],
+        "look_first_at": [{"sentence": cause.sentence, "evidence": list(cause.evidence)} for cause in one.causes],
+        "quantities": [_state(state) for state in one.quantities if not state.superseded],
+    }
+
+
+def _state(state: "QuantityState") -> dict[str, Any]:
+    stream, verdict, forecast = state.stream, state.verdict, state.forecast
+    return {
+        "quantity": stream.quantity,
+        "phantom": stream.phantom,
+        "day": stream.last_day.isoformat(),
+        "value": float(stream.values[-1]),
+        "unit": stream.unit,
+        "standard_uncertainty": float(stream.uncertainties[-1]),
+        "conformity": None if verdict is None else verdict.conformity,
+        "limit": None if verdict is None else verdict.limit,
+        "probability_of_conformity": None if verdict is None else verdict.probability,
+        "not_judged": state.not_judged or None,
+        "control": state.control,
+        "rules": list(state.rules),
+        "baseline": None if state.baseline is None else state.baseline.value,
+        "forecast": None
+        if forecast is None
+        else {
+            "crossing": forecast.crossing.isoformat(),
+            "earliest": forecast.earliest.isoformat(),
+            "latest": forecast.latest.isoformat(),
+        },
     }
 
 

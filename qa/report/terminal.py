@@ -6,13 +6,15 @@ from collections.abc import Iterable, Sequence
 from typing import TYPE_CHECKING
 
 from qa.quantities import QUANTITIES
-from qa.records import Outcome
+from qa.records import Outcome, Refused, Verdict
 from qa.report.numbers import COVERAGE_FACTOR, rounded
 
 if TYPE_CHECKING:
     from rich.table import Table
 
-__all__ = ["outcome_text", "table_text"]
+    from qa.judge import Assessment
+
+__all__ = ["attention_lines", "outcome_text", "refused_line", "status_table", "table_text", "taken_line"]
 
 
 def _draw(table: "Table") -> str:
@@ -91,3 +93,57 @@ def outcome_text(outcome: Outcome) -> str:
     lines += [f"not measured: {', '.join(names)}: {_one_line(reason)}" for reason, names in reasons.items()]
     lines += [f"remark: {_one_line(text)}" for text in (*outcome.acquisition.remarks, *outcome.remarks)]
     return "\n".join(lines) + "\n"
+
+
+def status_table(assessments: "Sequence[Assessment]") -> str:
+    """Write the fleet, one line a scanner."""
+    rows = [
+        (
+            one.scanner_name,
+            one.standing,
+            "never" if one.last_session is None else one.last_session.isoformat(),
+            "" if one.due is None else one.due.isoformat(),
+            ", ".join(one.out),
+            ", ".join(one.drifting),
+        )
+        for one in assessments
+    ]
+    heads = ("scanner", "standing", "last session", "due", "out of limits", "drifting")
+    return table_text([(head, False) for head in heads], rows)
+
+
+def attention_lines(assessments: "Sequence[Assessment]") -> list[str]:
+    """Write what needs a person, one line each; none where all is well."""
+    return [
+        _one_line(f"{one.scanner_name}: {one.standing}: {reason}")
+        for one in assessments
+        if one.standing != "within limits"
+        for reason in one.reasons
+    ] + [
+        _one_line(f"{one.scanner_name}: look first at: {cause.sentence}")
+        for one in assessments
+        if one.standing in {"out of limits", "drifting"}
+        for cause in one.causes[:1]
+    ]
+
+
+def taken_line(scanner_name: str, outcome: Outcome, verdicts: Sequence[Verdict | None]) -> str:
+    """Write one line on an acquisition that was taken in."""
+    when = outcome.acquisition.first.acquired_at
+    day = "date unknown" if when is None else when.date().isoformat()
+    words = [f"{scanner_name}, {day}, {outcome.phantom}: {len(outcome.measurements)} figures"]
+    out = [
+        measurement.quantity
+        for measurement, verdict in zip(outcome.measurements, verdicts, strict=True)
+        if verdict is not None and verdict.conformity in {"fail", "conditional fail"}
+    ]
+    if out:
+        words.append(f"out of limits: {', '.join(out)}")
+    if not outcome.measurements and outcome.remarks:
+        words.append(outcome.remarks[0])
+    return _one_line("; ".join(words))
+
+
+def refused_line(refused: Refused) -> str:
+    """Write one line on a file that was refused."""
+    return _one_line(f"refused {refused.path}: {refused.reason}")
