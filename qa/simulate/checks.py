@@ -36,6 +36,7 @@ _RANGES: dict[str, tuple[float, float]] = {
     "tilt_x_deg": (-90, 90),
     "tilt_y_deg": (-90, 90),
     "rotation_deg": (-360, 360),
+    "air_bubble_mm": (0, 60),
     "shading_percent": (0, 60),
     "shading_curvature": (-1, 1),
     "ghost_percent": (0, 100),
@@ -110,6 +111,8 @@ def _check_grid(setup: "Setup") -> None:
         raise SettingError(f"pixel_mm is {setup.pixel_mm!r}: both spacings must lie from 0.05 to 20 mm.")
     if setup.spacing_mm is not None and not 0 < setup.spacing_mm < math.inf:
         raise SettingError(f"spacing_mm is {setup.spacing_mm:g}: it must be above 0.")
+    if len(setup.filling_port_mm) != 2 or not all(0 <= v <= 60 for v in setup.filling_port_mm):
+        raise SettingError(f"filling_port_mm is {setup.filling_port_mm!r}: width and depth must lie from 0 to 60 mm.")
     row, column = np.asarray(setup.row_direction), np.asarray(setup.column_direction)
     if not np.allclose([row @ row, column @ column, row @ column], [1, 1, 0], atol=1e-6):
         raise SettingError("row_direction and column_direction must be unit vectors at right angles to each other.")

@@ -91,7 +91,7 @@ def _describe_image(ds: "Dataset", setup: Setup, repeat: int) -> None:
 def _describe_sequence(ds: "Dataset", setup: Setup) -> None:
     """Add the MR Pulse Sequence module (C.8.13.4)."""
     spin = setup.sequence == "SE"
-    ds.PulseSequenceName = setup.protocol
+    ds.PulseSequenceName = setup.sequence
     ds.MRAcquisitionType = "2D"
     ds.EchoPulseSequence = "SPIN" if spin else "GRADIENT"
     if spin:

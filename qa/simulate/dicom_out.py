@@ -120,6 +120,7 @@ def _classic(setup: Setup, repeat: int, index: int, plane: Plane, pixels: NDArra
     ds.ImageType = ["ORIGINAL", "PRIMARY", "M", "NONE"]
     ds.ScanningSequence = "SE" if setup.sequence == "SE" else "GR"
     ds.SequenceVariant = "NONE" if setup.sequence == "SE" else "SP"
+    ds.SequenceName = setup.sequence
     ds.ScanOptions = "PFP" if setup.partial_fourier < 1 else ""
     ds.MRAcquisitionType = "2D"
     ds.SliceThickness = decimals([setup.thickness_mm])[0]

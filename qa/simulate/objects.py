@@ -10,6 +10,7 @@ cuts at a slope (ramps, wedges, end faces), and by Gauss-Legendre quadrature whe
 """
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -57,12 +58,18 @@ def density(setup: Setup, plane: Plane, grid: FineGrid) -> Floats:
                 _take_rods(section, cut, filled)
             case _:
                 pass
+    if setup.air_bubble_mm:
+        filled *= _below_the_air(setup, cut)
+    if min(setup.filling_port_mm) > 0:
+        _take_port(setup, cut, filled)
     return filled
 
 
 def slice_key(setup: Setup, plane: Plane) -> tuple[float, ...] | None:
     """Return the same key for slices that must look the same; None where that cannot be told."""
     height = -float(plane.from_patient(np.asarray(setup.centre_patient))[2])
+    if setup.air_bubble_mm or min(setup.filling_port_mm) > 0:
+        return None
     if setup.phantom.body.shape == "sphere":
         return (round(abs(height), 9),)
     if setup.tilt_x_deg or setup.tilt_y_deg:
@@ -131,6 +138,28 @@ def _cylinder(setup: Setup, cut: FineSlice) -> Floats:
     if float(np.abs(cut.Z).max()) + cut.reach > extent / 2:
         filled *= cut.between(cut.Z, cut.along[2], -extent / 2, extent / 2, cut.slope((0, 0, 1)))[0]
     return filled
+
+
+def _below_the_air(setup: Setup, cut: FineSlice) -> Floats:
+    """Share of the profile below the level to which the body is filled; air gathers at the patient's front."""
+    up = setup.orientation[1]  # patient y, which points to the back, in phantom coordinates
+    highest = setup.body_diameter_mm / 2
+    if setup.phantom.body.shape == "cylinder":
+        highest = highest * math.sqrt(max(0.0, 1 - up[2] ** 2)) + (setup.phantom.extent_mm or 0.0) / 2 * abs(up[2])
+    back = up[0] * cut.X + up[1] * cut.Y + up[2] * cut.Z
+    return cut.between(back, float(up @ cut.along), setup.air_bubble_mm - highest, 1e6, cut.slope((up[0], up[1], up[2])))[0]
+
+
+def _take_port(setup: Setup, whole: FineSlice, filled: Floats) -> None:
+    turn, (wide, deep), radius = math.radians(setup.port_direction_deg), setup.filling_port_mm, setup.body_diameter_mm / 2
+    turned = np.array([[math.cos(turn), math.sin(turn), 0], [-math.sin(turn), math.cos(turn), 0], [0, 0, 1]])
+    outwards = turned[0, 0] * whole.X + turned[0, 1] * whole.Y
+    sideways = turned[1, 0] * whole.X + turned[1, 1] * whole.Y
+    # carried on outside the body, or the blurred edges of both would leave a film of signal
+    depth, width = (radius - deep, radius + 20.0), (-wide / 2, wide / 2)
+    place, cut = replace(whole, X=outwards, Y=sideways, basis=turned @ whole.basis).part(depth, width)
+    share, u = _within(cut, -wide / 2, wide / 2)
+    filled[place] *= 1 - share * _box(cut, np.asarray(u), depth, width)
 
 
 def _box(cut: FineSlice, u: Floats, x: Interval, y: Interval) -> Floats:

@@ -53,6 +53,9 @@ class Setup:
     centre_patient, rotation_deg, tilt_x_deg, tilt_y_deg
         The phantom's centre, its turn about its own axis (x towards y), and its tilt about the image's x and y. At a tilt of
         90 degrees the slices cut it lengthwise; the body is then exact, the inserts' edges across the slice are not.
+    air_bubble_mm, filling_port_mm, port_direction_deg
+        Depth of air under the body's highest point, patient front up; width and depth of a square plug without signal in the
+        middle of the body's side, and its direction from the phantom's x towards y. True lengths leave both out.
     snr : float
         Mean noise-free signal over the measurement region of uniform fill, first repeat, channels all in health, over the
         standard deviation of the real part of one channel's noise; infinity for no noise.
@@ -96,6 +99,9 @@ class Setup:
     rotation_deg: float = 0.0
     tilt_x_deg: float = 0.0
     tilt_y_deg: float = 0.0
+    air_bubble_mm: float = 0.0
+    filling_port_mm: tuple[float, float] = (0.0, 0.0)
+    port_direction_deg: float = -90.0
     snr: float = 150.0
     level: float = 8000.0
     channels: int = 1

@@ -4,12 +4,14 @@ import os
 import shutil
 import subprocess
 import sys
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 from pydicom import dcmread
 
+from qa.dicom import read
 from qa.phantoms import load_phantom
 from qa.simulate import Setup, default_setup, simulate, write_dicom
 
@@ -53,6 +55,24 @@ def test_files_hold_what_was_simulated(tmp_path, enhanced):
     else:
         place = dcmread(paths[2]).ImagePositionPatient
     assert [float(v) for v in place] == pytest.approx(setup.planes[2].position_patient)
+
+
+@pytest.mark.parametrize("enhanced", KINDS)
+def test_what_the_program_reads_is_the_record_that_was_simulated(tmp_path, enhanced):
+    setup = _scan(slices=3, channels=2, phase_encode="row", tilt_x_deg=1.0)
+    write_dicom(setup, tmp_path, enhanced=enhanced)
+    reading = read(tmp_path)
+    assert reading.refused == ()
+    (found,), wanted = reading.acquisitions, simulate(setup)
+    # only the enhanced object says that there was no parallel imaging
+    assert replace(found.settings, parallel_imaging=None) == wanted.settings
+    assert found.scanner == wanted.scanner
+    for one, other in zip(found.repeats, wanted.repeats, strict=True):
+        assert np.array_equal(one.pixels, other.pixels)
+        assert one.acquired_at == other.acquired_at
+        assert one.description == other.description
+        for plane, same in zip(one.planes, other.planes, strict=True):
+            assert plane.position_patient == pytest.approx(same.position_patient, abs=1e-9)
 
 
 @pytest.mark.parametrize("enhanced", KINDS)

@@ -46,13 +46,62 @@ def test_density_is_the_average_of_point_by_point_membership(make, fill, case):
     assert np.abs(difference).max() < 0.03
 
 
+def _halves(line, at, level=0.5):
+    edges = np.flatnonzero(np.diff(np.signbit(line - level)))
+    return at[edges] + (at[1] - at[0]) * (level - line[edges]) / (line[edges + 1] - line[edges])
+
+
+@pytest.mark.parametrize("name", ["sphere-170", "cylinder-200"])
+def test_an_air_bubble_takes_the_top_and_leaves_the_rest(make, name):
+    setup = make(name, air_bubble_mm=12.0, rotation_deg=20.0)
+    plane = setup.planes[0]
+    grid = FineGrid.of(plane)
+    bubble, full = density(setup, plane, grid), density(setup.but(air_bubble_mm=0.0), plane, grid)
+    y = grid.y_mm[:, 0] - plane.middle_mm[1]
+    radius = setup.body_diameter_mm / 2
+    column = bubble[:, bubble.shape[1] // 2]
+    assert _halves(column, y)[0] == pytest.approx(12 - radius, abs=0.01)
+    below = y > 16 - radius
+    np.testing.assert_allclose(bubble[below], full[below], atol=1e-9)
+
+
+def test_in_a_coronal_stack_air_gathers_in_the_front_slices(make):
+    setup = make(
+        "sphere-170",
+        row_direction=(1.0, 0.0, 0.0),
+        column_direction=(0.0, 0.0, -1.0),
+        slices=3,
+        spacing_mm=75.0,
+        air_bubble_mm=20.0,
+    )
+    front, middle, back = (density(setup, plane, FineGrid.of(plane)).sum() for plane in setup.planes)
+    assert front == 0
+    assert middle > back > 0
+
+
+def test_a_filling_port_notches_the_outline(make):
+    setup = make("sphere-170", filling_port_mm=(16.0, 9.0), port_direction_deg=0.0, rotation_deg=0.0)
+    plane = setup.planes[0]
+    grid = FineGrid.of(plane)
+    notched = density(setup, plane, grid)
+    x, y = grid.x_mm[0] - plane.middle_mm[0], grid.y_mm[:, 0] - plane.middle_mm[1]
+    row = notched[notched.shape[0] // 2]
+    assert _halves(row, x)[-1] == pytest.approx(85 - 9, abs=0.02)
+    column = notched[:, int(np.argmin(np.abs(x - 80)))]
+    inner = np.abs(y) < 20
+    assert np.ptp(_halves(column[inner], y[inner])) == pytest.approx(16, abs=0.02)
+    missing = (density(setup.but(filling_port_mm=(0.0, 0.0)), plane, grid) - notched).sum() * 0.25
+    assert missing == pytest.approx(16 * 9 - 16**3 / (24 * 85) * 1.0, abs=2.0)
+
+
 def test_slices_that_look_the_same_share_a_key(make):
     setup = make("sectioned-190")
     keys = [slice_key(setup, plane) for plane in setup.planes]
     assert keys[2] == keys[3] == keys[6] == ()
     assert len({keys[0], keys[1], keys[4], keys[2]}) == 4
-    tilted = setup.but(tilt_x_deg=1.0)
-    assert slice_key(tilted, tilted.planes[6]) is None
+    for changed in ({"tilt_x_deg": 1.0}, {"air_bubble_mm": 5.0}):
+        other = setup.but(**changed)
+        assert slice_key(other, other.planes[6]) is None
 
 
 @pytest.mark.parametrize("edge", [0.0, 0.6])
