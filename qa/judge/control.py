@@ -23,8 +23,11 @@ power. A session within half an interval of its due day is on time.
 False-alarm rate
 ----------------
 The default rules are Nelson's test 1 and the exponentially weighted moving average. On a stable scanner they start an alarm
-in the share of sessions that `FALSE_ALARM_RATE` gives, found by simulating normal series.
-Nelson's other tests and the cumulative sum, which can be switched on, assume independent sessions.
+in the share of sessions that `FALSE_ALARM_RATE` gives: one in 180 for independent sessions, one in 135 at an
+autocorrelation of 0.3, so that in a year of weeks a quantity starts one or more false alarms with a chance of 22 and 24 %.
+The figures are from 20,000 simulated normal series of 156 sessions each. That is why an alarm alone does not call a
+scanner drifting: `qa.judge.quantity` says what does. Nelson's other tests and the cumulative sum, which can be switched on,
+assume independent sessions.
 
 (m): from memory of the source.
 """
@@ -41,6 +44,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from qa.geometry import Floats
 from qa.judge.charts import nelson, tabular_cusum
+from qa.judge.student import normal_score, normal_scores, student_bound
 
 __all__ = [
     "FALSE_ALARM_RATE",
@@ -50,8 +54,6 @@ __all__ = [
     "ControlRules",
     "control_chart",
     "first_outliers",
-    "normal_score",
-    "student_bound",
 ]
 
 LEARNING = 10
@@ -64,7 +66,7 @@ _CORRELATION_AT_MOST = 0.4
 _OUTLIER = 8.0
 _CALM = 2.0
 
-FALSE_ALARM_RATE: Mapping[float, float] = MappingProxyType({0.0: 0.0055, 0.3: 0.0072})
+FALSE_ALARM_RATE: Mapping[float, float] = MappingProxyType({0.0: 0.0056, 0.3: 0.0074})
 """Share of sessions in which the default rules start a false alarm, by lag-one autocorrelation of the stable series."""
 
 RULES: Mapping[str, str] = MappingProxyType(
@@ -154,29 +156,6 @@ class ControlChart:
     reference: NDArray[np.int64]
     tripped: Mapping[str, NDArray[np.bool_]]
     out: NDArray[np.bool_]
-
-
-def normal_score(t: float, freedom: float) -> float:
-    """Turn a value of Student's distribution into the standard normal value of the same probability.
-
-    Notes
-    -----
-    D. B. Peizer and J. W. Pratt, JASA 63 (1968) 1416 (m); within 0.002 of the exact value for 6 degrees of freedom or more.
-    """
-    scale = (freedom - 2 / 3 + 0.1 / freedom) / math.sqrt(freedom - 5 / 6)
-    return math.copysign(scale * math.sqrt(math.log1p(t * t / freedom)), t)
-
-
-def _scores(t: Floats, freedom: float) -> Floats:
-    """Do as `normal_score` for many at once; one at a time plain Python is faster."""
-    scale = (freedom - 2 / 3 + 0.1 / freedom) / math.sqrt(freedom - 5 / 6)
-    return np.copysign(scale * np.sqrt(np.log1p(t * t / freedom)), t)
-
-
-def student_bound(z: float, freedom: Floats) -> Floats:
-    """Turn a standard normal value into the value of Student's distribution: the inverse of `normal_score`."""
-    scale = (freedom - 2 / 3 + 0.1 / freedom) / np.sqrt(freedom - 5 / 6)
-    return np.asarray(math.copysign(1.0, z) * np.sqrt(freedom * np.expm1((z / scale) ** 2)))
 
 
 def first_outliers(values: Floats) -> NDArray[np.bool_]:
@@ -368,7 +347,7 @@ def _walk(x: Floats, steps: list[float], outlier: NDArray[np.bool_], rules: Cont
         scores.append(z)
         course.append((smoothed, deviation))
         models.append(model)
-    rest = _scores((x[settled:] - model.mean) / model.spread, model.freedom)
+    rest = normal_scores((x[settled:] - model.mean) / model.spread, model.freedom)
     course += smooth.course(rest.tolist(), steps[settled:], model)
     by_session = np.empty((len(_Model._fields), x.size - LEARNING))
     by_session[:, : len(models)] = np.array(models).T

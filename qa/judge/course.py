@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats
+from qa.judge.student import normal_scores
 from qa.judge.trend import correlation_left, inflation
 
 __all__ = ["BROKEN", "STEP", "STRAIGHT", "Course", "fit_course", "spikes"]
@@ -66,7 +67,7 @@ class Course:
 
     def beyond(self, limit: float, *, rising: bool, days: Floats) -> Floats:
         """Give the probability that the mean lies beyond a limit on (m,) days, from the last session on."""
-        from scipy.special import stdtr
+        from scipy.special import ndtr
 
         span = np.where(self.kind == STEP, 1.0, self._last - self.begins)[:, np.newaxis]
         h = np.where(self.kind[:, np.newaxis] == STEP, 1.0, (days - self.begins[:, np.newaxis]) / span)
@@ -75,7 +76,7 @@ class Course:
         n = self._count
         error = np.sqrt(self._variance[:, np.newaxis] * (square - 2 * h * one + n * h * h) / (n * square - one * one))
         ahead = (mean - limit) / error if rising else (limit - mean) / error
-        return np.asarray(self.weight @ stdtr(self._freedom, ahead))
+        return np.asarray(self.weight @ ndtr(normal_scores(ahead, self._freedom)))
 
 
 def fit_course(days: Floats, values: Floats, *, straight: bool) -> Course:

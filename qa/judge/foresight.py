@@ -141,7 +141,7 @@ def forecast(
     if limit is None:
         return None
     course = fit_course(t, x, straight=True)
-    ahead = np.concatenate((np.arange(0.0, 60.0), np.geomspace(60.0, max(horizon_days, 61), 160)))
+    ahead = np.concatenate((np.arange(0.0, 28.0), np.geomspace(28.0, max(horizon_days, 29), 60)))
     chance = np.maximum.accumulate(course.beyond(limit, rising=rising, days=t[-1] + ahead))
     tail = (1 - CONFIDENCE) / 2
     if chance[0] > 0.5 or chance[-1] < 1 - tail:

@@ -22,6 +22,7 @@ __all__ = ["figure", "lasting_alarm", "quantity_state"]
 
 _MARGIN = 0.25
 """Share of the margin to a limit that must be used up before an alarm counts as drifting towards it."""
+_SMOOTHED = 40
 _LASTING = ("ewma", "cusum", "nelson-2", "nelson-3", "nelson-5", "nelson-6")
 """Rules that a single odd session does not trip."""
 
@@ -70,7 +71,7 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
     if fixed and verdict is not None and moving is not None and moving.real:
         coming = forecast(days, values, verdict.lower, verdict.upper, grounds.forecast_days)
     changed = alarm or out is not None or (moving is not None and moving.real)
-    shift, sigmas, worse, used = _shift(stream, chart, verdict if fixed else None)
+    shift, sigmas, worse, used = _shift(stream, chart, verdict if fixed else None, grounds.rules.weight)
     state = QuantityState(
         stream=stream,
         verdict=verdict,
@@ -110,11 +111,19 @@ def _control(chart: ControlChart) -> ControlState:
     return "still learning" if math.isnan(chart.centre[-1]) else "in control"
 
 
-def _shift(stream: Stream, chart: ControlChart, verdict: Verdict | None) -> tuple[float, float, bool, float | None]:
-    centre, smoothed = float(chart.centre[-1]), float(chart.smoothed[-1])
+def _shift(
+    stream: Stream, chart: ControlChart, verdict: Verdict | None, weight: float
+) -> tuple[float, float, bool, float | None]:
+    centre = float(chart.centre[-1])
     if math.isnan(centre):
         return 0.0, 0.0, False, None
-    shift = smoothed - centre
+    # The chart smooths scores, which a short reference shrinks; how far the quantity itself has gone is smoothed anew. The
+    # median of the last three sessions keeps what has healed from counting on.
+    recent = stream.values[stream.segment][-_SMOOTHED:] - centre
+    course = float(recent @ (weight * (1 - weight) ** np.arange(recent.size - 1, -1, -1)))
+    middle = float(np.median(recent[-3:]))
+    shift = math.copysign(min(abs(course), abs(middle)), course) if course * middle > 0 else 0.0
+    smoothed = centre + shift
     lower, upper = (None, None) if verdict is None else (verdict.lower, verdict.upper)
     bound = upper if shift > 0 else lower
     room = None if bound is None else (bound - centre) * math.copysign(1.0, shift)
@@ -128,8 +137,9 @@ def _shift(stream: Stream, chart: ControlChart, verdict: Verdict | None) -> tupl
 
 
 def lasting_alarm(chart: ControlChart) -> bool:
-    """Tell whether a rule that a single odd session does not trip trips at the latest."""
-    return any(rule in _LASTING and bool(where[-1]) for rule, where in chart.tripped.items())
+    """Tell an alarm that lasts: on at the last two sessions, and by a rule that a single odd session does not trip."""
+    on = chart.out.size > 1 and bool(chart.out[-2:].all())
+    return on and any(rule in _LASTING and bool(where[-1]) for rule, where in chart.tripped.items())
 
 
 def _bounded(limit: Limit) -> bool:
@@ -144,7 +154,7 @@ def _drifting(state: QuantityState, *, fixed: bool, awaiting: bool) -> list[str]
 
     It is where its latest value is at a warning level or passes only conditionally, where a crossing is foretold, and where a
     lasting alarm has used up a quarter of the way from the centre to a limit. Where the limit still waits for a baseline,
-    an alarm for the worse that lasts for two sessions stands in. Set-up quantities tell about the set-up, not the scanner.
+    a lasting alarm for the worse stands in. Set-up quantities tell about the set-up, not the scanner.
     """
     stream, verdict = state.stream, state.verdict
     now = figure(stream.latest.value, stream.quantity, stream.unit)
@@ -165,7 +175,7 @@ def _drifting(state: QuantityState, *, fixed: bool, awaiting: bool) -> list[str]
             f"{state.title} has been out of control since {_iso(state.alarm_since)} and has gone "
             f"{100 * min(state.margin_used, 1):.0f} % of the way to its limit"
         )
-    if awaiting and state.worse and lasting and bool(np.all(state.chart.out[-2:])) and state.chart.out.size > 1:
+    if awaiting and state.worse and lasting:
         found.append(f"{state.title} has been out of control since {_iso(state.alarm_since)}, and {state.not_judged}")
     return found
 

@@ -75,11 +75,12 @@ class QuantityState:
     alarm_since : datetime.date or None
         First session of the alarm that is on.
     shift, shift_sigmas : float
-        The smoothed course less the centre, in the unit and in standard deviations of a session; 0 while learning.
+        How far it has gone from the centre, in the unit and in standard deviations of a session: the lesser of the smoothed
+        course and the median of the last three sessions; 0 while learning and where they lie on different sides.
     worse : bool
         That shift makes things worse.
     margin_used : float or None
-        Share of the way from centre to limit that the smoothed course has gone; None where no fixed limit lies that way.
+        Share of the way from centre to limit that the shift is; None where no fixed limit lies that way.
     trend, forecast, onset : or None
         See `qa.judge.foresight`; None where the history does not support one.
     baseline : Baseline or None
