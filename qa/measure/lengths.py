@@ -30,7 +30,7 @@ _NEAR = 0.65
 _CUBIC = -0.55
 _RAYS = 180
 _ORDER = 4
-_UNSEEN_PX = 0.003
+_UNSEEN_PX = 0.0025
 _UNCLEAR = 0.06
 _OF_LARGEST = {1: 1.0, 2: 1.12, 3: 1.19, 4: 1.25}
 """Half the 95 % point of the largest of so many absolute standard normal values, rounded: noise drives a largest value up."""
@@ -51,9 +51,9 @@ class _Edge:
 def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
     """Measure the four diameters and what follows from them.
 
-    Standard uncertainty: of the fit from its residuals; of a ghost of unknown phase on the edge (half its amplitude over the
-    slope, over the square root of 2); and 0.003 pixel an edge for what the model of an edge leaves out. That of the largest
-    distortion allows for as many lengths as noise could have made the largest.
+    Standard uncertainty: of the fit from its residuals; of a ghost of unknown phase on the edge (half its amplitude over
+    the slope, over the square root of 2); and 0.0025 pixel an edge for what the model of an edge leaves
+    out. That of the largest distortion allows for as many lengths as noise could have made the largest.
     """
     with_rods = any(isinstance(s, Rods) for s in phantom.sections)
     derived = () if with_rods else ("distortion_max", "scale_x", "scale_y")
@@ -114,7 +114,8 @@ def _edge_pixels(image: Floats, plane: Plane, section: CrossSection) -> _Edge | 
     angle = np.arctan2(down, across) % (2 * np.pi)
     wrapped = np.append(angles, 2 * np.pi)
     outline, plateau, floor = (np.interp(angle, wrapped, np.append(v[0], v[0, 0])) for v in (start, rim.plateau, rim.floor))
-    quiet = float(np.percentile(rim.floor, 10))
+    least, low = (float(v) for v in np.percentile(rim.floor, [10, 25]))
+    quiet = least + 2 * (low - least)  # what is above this is more than the floor's own scatter
     strong = plateau > 2 * floor
     dy, dx = plane.pixel_mm
     span = np.where(strong, plateau - floor, 1.0)
@@ -174,7 +175,7 @@ def _diameter(edge: _Edge, angle_deg: int, plane: Plane) -> tuple[tuple[float, f
     radii, u_ghost = [], 0.0
     for k, (_, unit, _, ghost, outline, away) in enumerate(sides):
         radii.append(float(outline[np.argmin(np.abs(away))] + shifts[k]))
-        u_ghost = math.hypot(u_ghost, float(ghost.mean()) / 2 / slope * float(unit.mean()) / math.sqrt(2))
+        u_ghost += float(ghost.mean()) / 2 / slope * float(unit.mean()) / math.sqrt(2)
     unseen = math.sqrt(2) * _UNSEEN_PX * float(np.mean(plane.pixel_mm))
     return (radii[0], radii[1]), math.sqrt(u_fit**2 + u_ghost**2 + unseen**2), slope
 

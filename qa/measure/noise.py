@@ -14,7 +14,17 @@ from qa.geometry import Floats
 from qa.measure.regions import Field
 from qa.records import Acquisition
 
-__all__ = ["Chi", "Correlation", "Noise", "correlation", "difference_noise", "evaluate", "fit_surface", "ripple_noise"]
+__all__ = [
+    "Chi",
+    "Correlation",
+    "Noise",
+    "correlation",
+    "difference_noise",
+    "evaluate",
+    "fit_surface",
+    "ripple_noise",
+    "surface_noise",
+]
 
 _LAGS = 5
 _TREND = 0.5
@@ -140,7 +150,7 @@ def difference_noise(acquisition: Acquisition, field: Field) -> Noise | str:
     first, second = (field.cut(r.pixels) for r in acquisition.repeats[:2])
     if not np.isfinite(second).all():
         return "the second repeat holds values that are not numbers"
-    noise = _drift_free(first - second, field)
+    noise = surface_noise(first - second, field, 2)
     if not noise.sigma > 0:
         return "the two repeats are identical: the same images were sent twice, or noise was masked"
     if noise.correlation.trend > _TREND:
@@ -148,12 +158,13 @@ def difference_noise(acquisition: Acquisition, field: Field) -> Noise | str:
     return Noise(noise.sigma / math.sqrt(2), noise.correlation, noise.freedom)
 
 
-def _drift_free(difference: Floats, field: Field) -> Noise:
-    """Noise of a difference image about a second-order surface."""
+def surface_noise(image: Floats, field: Field, degree: int) -> Noise:
+    """Estimate noise from what a polynomial surface leaves over in M."""
     x, y = field.grid
-    residual = (difference - evaluate(fit_surface(difference, field.inside, x, y, 2), x, y)) * field.inside
+    residual = (image - evaluate(fit_surface(image, field.inside, x, y, degree), x, y)) * field.inside
     found = correlation(residual, field.inside)
-    freedom = max(float(field.inside.sum()) - 6 * found.mean_factor, 1.0)
+    spent = (degree + 1) * (degree + 2) / 2
+    freedom = max(float(field.inside.sum()) - spent * found.mean_factor, 1.0)
     return Noise(math.sqrt(float((residual**2).sum()) / freedom), found, freedom / found.variance_factor)
 
 

@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane, disc_overlap, sample
 from qa.measure.air import AirNoise, air_corners, air_noise
-from qa.measure.noise import Noise, difference_noise, evaluate, fit_surface, ripple_noise
+from qa.measure.noise import Correlation, Noise, difference_noise, evaluate, fit_surface, ripple_noise, surface_noise
 from qa.measure.regions import Field, figure, uniform_field
 from qa.phantoms import Phantom
 from qa.records import Acquisition, Measurement, NotMeasured, Pose, Region
@@ -33,15 +33,18 @@ _GRID = 121
 _WRAP = 128
 _DRAWS = 12
 _DOUBT = 0.2
+_BORDER = 0.001
+_LEAST_PERCENT = 0.0015
 
 
 def uniformity(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
     """Measure both uniformities.
 
     Standard uncertainty: of the integral uniformity by resampling (noise of the image's own level, drawn once and for all,
-    on the fitted surface) with a fifth of the correction, for what the surface hides of the noise; of the average deviation by
-    by propagation of the noise of each pixel, with what the border of M makes of the pixels it divides (rectangular,
-    between counting whole pixels and counting their share).
+    on the fitted surface), with a fifth of the correction for what the surface hides of the noise, and a thousandth of the
+    non-uniformity for where M's border runs, on which extremes lie; of the average deviation by propagation of the noise of
+    each pixel, with what the border of M makes of the pixels it divides (the difference between counting whole pixels and
+    counting their share) and 0.0015 points for what rounding and the outline leave.
     """
     field = uniform_field(scan, pose, phantom)
     if isinstance(field, str):
@@ -56,20 +59,33 @@ def uniformity(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Meas
 def _noise(scan: Acquisition, field: Field, image: Floats) -> tuple[Noise, float]:
     """Find the noise in M, and how much it lifts the square of a magnitude where there is signal.
 
-    The noise is read from two repeats; from one image, as air shows it where air stands for M; else from the image's ripple.
     Of n channels the 2 n - 1 parts of the noise that do not lie along the signal lift it (to second order); air shows 2 n.
     """
     noise = difference_noise(scan, field)
-    found: str | tuple[AirNoise, object] = "processed"
+    air: AirNoise | None = None
     if not scan.settings.parallel_imaging and not scan.settings.filtered:
         boxes = air_corners(field.plane, field.section, scan.settings.phase_encode)
         found = air_noise(scan.pixels[field.slice_index], field.plane, boxes)
-    if isinstance(found, str):
-        return ripple_noise(image, field) if isinstance(noise, str) else noise, 0.0
-    air = found[0]
+        air = None if isinstance(found, str) else found[0]
     if isinstance(noise, str):
-        noise = Noise(air.sigma, air.correlation, air.pixels / air.correlation.variance_factor)
-    return noise, (air.mean**2 + air.sd**2) * (1 - 1 / (2 * air.chi.channels))
+        noise = _single_image_noise(image, field, air)
+    return noise, 0.0 if air is None else (air.mean**2 + air.sd**2) * (1 - 1 / (2 * air.chi.channels))
+
+
+def _single_image_noise(image: Floats, field: Field, air: AirNoise | None) -> Noise:
+    """Tell noise from structure in one image.
+
+    What a fourth-order surface leaves is noise where air shows as much, or where there is no such air, where it does not
+    hang together over five pixels. Else air is believed; its correlation, of magnitudes of noise alone, is near the square
+    of that of the noise. Without air, the image's ripple.
+    """
+    left = surface_noise(image, field, 4)
+    if air is None:
+        return left if abs(left.correlation.trend) < 0.1 else ripple_noise(image, field)
+    if left.sigma < 1.2 * air.sigma:
+        return left
+    axes = (tuple(math.sqrt(max(r, 0.0)) for r in lags) for lags in (air.correlation.along_x, air.correlation.along_y))
+    return Noise(air.sigma, Correlation(*axes), air.pixels / air.correlation.variance_factor)
 
 
 def _plain_surface(image: Floats, field: Field, noise: Noise) -> Floats:
@@ -106,7 +122,7 @@ def _integral(image: Floats, field: Field, noise: Noise, surface: Floats) -> Mea
     raw = 100 * (1 - (highest - lowest) / (highest + lowest))
     spread = noise.sigma * math.sqrt(noise.correlation.mean_factor * float((disc**2).sum()))
     shift, u_scatter = _resampled(surface, field.radius_mm, reach, spread)
-    u_value = math.hypot(u_scatter, _DOUBT * shift)
+    u_value = math.hypot(u_scatter, _DOUBT * shift, _BORDER * (100 - raw))
     places = {
         name: (float(at[k, 0] + field.section.centre_mm[0]), float(at[k, 1] + field.section.centre_mm[1]))
         for name, k in (("highest", high), ("lowest", low))
@@ -231,7 +247,7 @@ def _deviation(image: Floats, field: Field, noise: Noise, surface: Floats) -> Me
     u_mean = noise.sigma * math.sqrt(noise.correlation.mean_factor * variance / total)
     u_added = added / math.sqrt(2 * noise.freedom)
     shared = float((np.abs(smooth - middle) * field.weights).sum()) / float(field.weights.sum())
-    u_border = abs(shared - raw) / math.sqrt(3)
+    u_border = math.hypot(abs(shared - raw), _LEAST_PERCENT / 100 * middle)
     details = {"uncorrected": 100 * (1 - raw / middle), "noise_correction": 100 * added / middle, "mean": middle}
     return figure(
         "uniformity_naad",
