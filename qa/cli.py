@@ -9,8 +9,8 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from qa import __version__
 from qa.errors import EvenfieldError, ExitStatus, UsageError
+from qa.version import __version__
 
 if TYPE_CHECKING:
     from qa.pipeline import Progress

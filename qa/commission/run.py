@@ -7,13 +7,13 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
-from qa import __version__
 from qa.commission.bars import BAR_CASES
 from qa.commission.cases import Measurer, locate_and_measure, run_case
 from qa.commission.tally import tally_cases
 from qa.errors import UsageError
 from qa.phantoms import Phantom, load_phantom, phantom_names
 from qa.report.commission_content import CampaignResult, Case, CommissionResult
+from qa.version import __version__
 
 __all__ = ["commission", "machine_facts", "run_commission"]
 

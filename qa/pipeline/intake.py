@@ -10,12 +10,12 @@ from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from qa import __version__
 from qa.pipeline.department import Department
 from qa.pipeline.verdicts import judge_outcome
 from qa.pipeline.walk import Progress, examine, no_progress
 from qa.records import Acquisition, NotMeasured, Outcome, Refused, SourceFile, Verdict
 from qa.site import Expectation, SiteScanner, changed_settings, expectation_for, match_scanner
+from qa.version import __version__
 
 if TYPE_CHECKING:
     from qa.dicom import Header

@@ -7,7 +7,6 @@ from datetime import date, timedelta
 from pathlib import Path
 from typing import Any, cast, get_args
 
-from qa import __version__
 from qa.errors import UsageError
 from qa.judge import RULES, Assessment, QuantityState, assess, is_out, missed_days
 from qa.pipeline.department import Department
@@ -30,6 +29,7 @@ from qa.report.content import (
     SignOff,
 )
 from qa.site import SiteScanner
+from qa.version import __version__
 
 __all__ = ["scanner_report", "write_reports"]
 

@@ -6,8 +6,8 @@ from collections.abc import Iterable, Mapping
 from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
-from qa import __version__
 from qa.records import Measurement, Outcome, Pose, Refused
+from qa.version import __version__
 
 if TYPE_CHECKING:
     from qa.judge import Assessment, QuantityState
