@@ -13,10 +13,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats, Plane
-from qa.locate.expected import TELLING, Places, expected_fill
+from qa.locate.expected import Places, expected_fill
+from qa.locate.marks import find_marks
+from qa.locate.match import match_lattice
 from qa.locate.overlay import overlay
-from qa.locate.view import SliceView
-from qa.phantoms import Phantom
+from qa.locate.placing import is_axial, off_sections, suffering
+from qa.locate.view import SliceView, slice_of_section
+from qa.phantoms import Lattice, Phantom, Ramps, Rods, WedgeBars
 from qa.records import Acquisition, NotLocated, Pose
 
 __all__ = ["refine"]
@@ -29,8 +32,8 @@ _NEAR_MM = 8.0
 _SURE = 0.5
 """Correlation with what is expected from which the phantom is believed to be the one named."""
 _MOST_TURN_DEG = 20.0
-_MOST_OFF = 0.75
-"""How far the slices may be off the sections, as a share of the distance between them."""
+_LEAST_U_MM = 0.004
+_LEAST_U_DEG = 0.006
 
 
 @dataclass(frozen=True)
@@ -61,11 +64,14 @@ def refine(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose | Not
         The pose with turn and height and their uncertainties; unchanged where the phantom has no such contents; or how the
         phantom was set up wrongly, in words a technologist can act on.
     """
-    if not any(isinstance(s, TELLING) for s in phantom.sections) or not pose.sections:
+    if not pose.sections:
         return pose
     upright = _upright(pose, acquisition.planes[0])
+    if not any(isinstance(s, Ramps | WedgeBars) for s in phantom.sections):
+        section = next((s for s in phantom.sections if isinstance(s, Rods | Lattice)), None)
+        return pose if section is None else _turned_by_lattice(acquisition, upright, phantom, section)
     rings = _Rings.of(acquisition, upright, phantom)
-    axial = _is_axial(acquisition.planes[0])
+    axial = is_axial(acquisition.planes[0])
     best = rings.best(phantom, reach_mm=_NEAR_MM, ways=(False,))
     expected = best.score >= _SURE and (abs(best.turn_deg) <= _MOST_TURN_DEG or not axial)
     if not expected:
@@ -75,19 +81,40 @@ def refine(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose | Not
     if best.score < _SURE:
         return NotLocated(
             f"the slices show none of the inserts of {phantom.name} where they should be: another phantom was scanned, "
-            "or slices were placed where it has none"
+            "slices were placed where it has none, or noise hides them"
         )
     if axial:
         wrong = _set_up_wrongly(best)
         if wrong:
             return NotLocated(wrong)
     laid = overlay(acquisition, _moved(upright, best), phantom)
-    away = _off_sections(acquisition, laid, phantom)
-    return away if isinstance(away, NotLocated) else replace(laid, remarks=(*laid.remarks, *away))
+    away = off_sections(acquisition, laid, phantom)
+    if isinstance(away, NotLocated):
+        return away
+    return replace(laid, remarks=(*laid.remarks, *away, *suffering(acquisition, laid, phantom)))
 
 
-def _is_axial(plane: Plane) -> bool:
-    return int(np.argmax(np.abs(plane.normal))) == 2
+def _turned_by_lattice(acquisition: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Lattice) -> Pose:
+    """Turn an upright pose by what a square lattice shows, which is its turn up to quarter turns: the smallest is taken."""
+    index = slice_of_section(acquisition, pose, phantom, (section.z_from_mm + section.z_to_mm) / 2)
+    if isinstance(index, str):
+        return replace(pose, remarks=(*pose.remarks, index))
+    view = SliceView.of(acquisition.planes[index], pose)
+    listed = section.rods_mm() if isinstance(section, Rods) else section.crossings_mm()
+    places = np.array([(i, j) for i, j, _, _ in listed], dtype=np.intp)
+    true = np.array([(x, y) for _, _, x, y in listed])
+    marks = find_marks(acquisition.pixels[index], view, section, float(np.hypot(*true.T).max()) + 0.4 * section.pitch_mm)
+    matched = match_lattice(marks, places, section.pitch_mm, np.zeros(2))
+    if isinstance(matched, str):
+        return replace(pose, remarks=(*pose.remarks, matched))
+    seen = matched.mark >= 0
+    a, b = marks[matched.mark[seen]], true[seen]
+    a, b = a - a.mean(axis=0), b - b.mean(axis=0)
+    turn = math.degrees(math.atan2(float(np.sum(b[:, 0] * a[:, 1] - b[:, 1] * a[:, 0])), float(np.sum(a * b))))
+    c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
+    left = a - b @ np.array([[c, s], [-s, c]])
+    u_turn = math.degrees(math.sqrt(float(np.sum(left**2)) / max(1, a.size - 3) / float(np.sum(b**2))))
+    return replace(_moved(pose, _Guess(1.0, reversed=False, shift_mm=0.0, turn_deg=turn)), u_rotation_deg=u_turn)
 
 
 def _upright(pose: Pose, plane: Plane) -> Pose:
@@ -97,7 +124,7 @@ def _upright(pose: Pose, plane: Plane) -> Pose:
     serve.
     """
     axes = plane.axes
-    if _is_axial(plane):
+    if is_axial(plane):
         z = axes[:, 2] * np.sign(axes[2, 2])
         across = axes[:, :2]
         k = int(np.argmax(np.abs(across[0])))
@@ -106,7 +133,13 @@ def _upright(pose: Pose, plane: Plane) -> Pose:
     axis = pose.orientation[:, 2] * np.sign(pose.orientation[:, 2] @ axes[:, 2])
     x = axes[:, 0] - (axes[:, 0] @ axis) * axis
     x /= np.linalg.norm(x)
-    return replace(pose, orientation=np.stack([x, np.cross(axis, x), axis], axis=1))
+    u_x, u_y = (None if u is None else math.hypot(u, _LEAST_U_MM) for u in pose.u_centre_mm[:2])
+    return replace(
+        pose,
+        orientation=np.stack([x, np.cross(axis, x), axis], axis=1),
+        u_centre_mm=(u_x, u_y, pose.u_centre_mm[2]),
+        u_tilt_deg=None if pose.u_tilt_deg is None else math.hypot(pose.u_tilt_deg, _LEAST_U_DEG),
+    )
 
 
 def _moved(pose: Pose, guess: _Guess) -> Pose:
@@ -132,30 +165,6 @@ def _set_up_wrongly(guess: _Guess) -> str:
         also = "" if square else f", and {turned}"
         return f"the phantom lies back to front{also}: set it up again with its first section towards the feet"
     return "" if square else f"the phantom is {turned}: set it up again"
-
-
-def _off_sections(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> tuple[str, ...] | NotLocated:
-    """Compare where the slices lie with where the definition expects them."""
-    stack = phantom.slices
-    if stack is None or pose.u_centre_mm[2] is None:
-        return ()
-    normal = acquisition.planes[0].normal
-    along = float(normal @ pose.orientation[:, 2])
-    heights = np.array([p.position_along_normal for p in acquisition.planes]) - normal @ pose.centre_patient
-    heights = np.sort(heights / along)
-    expected = stack.first_z_mm + stack.spacing_mm * np.arange(stack.count)
-    if len(heights) == stack.count:
-        off = float(np.median(heights - expected))
-        if abs(off) > _MOST_OFF * stack.spacing_mm:
-            way = "+z" if off > 0 else "-z"
-            return NotLocated(
-                f"the slices lie {abs(off):.0f} mm off the sections, towards the phantom's {way} end: "
-                f"place the first slice on the section at z = {stack.first_z_mm:g} mm and scan again"
-            )
-        return ()
-    missing = [n for n, z in enumerate(expected, start=1) if np.abs(heights - z).min() > stack.spacing_mm / 2]
-    which = f"; missing: {', '.join(f'slice {n}' for n in missing)}" if missing else ""
-    return (f"{len(heights)} slices where {stack.count} are expected{which}",)
 
 
 def _ring_places(radii_mm: Floats) -> tuple[Floats, Floats]:

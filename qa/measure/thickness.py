@@ -28,6 +28,7 @@ _METHOD = ("two crossed ramps, 2AB/(A+B) times slope (NEMA MS 5)", 1)
 _NAME = "slice_thickness"
 _UNSEEN_MM = 0.01
 _LOST_MM = 0.6
+_SEEN = 10.0
 _BINS = 61
 
 
@@ -82,6 +83,9 @@ def _measured(scan: Acquisition, pose: Pose, phantom: Phantom, section: Ramps) -
 
 def _wrong(fit: RampFit, section: Ramps, u_mm: float) -> str:
     """Say why bars that were fitted are not to be believed; an empty string when they are."""
+    lost = "the ramps are lost in the noise"
+    if (fit.heights < _SEEN * fit.u_heights).any():
+        return lost
     middle, width = section.block_centre_mm[0], section.block_size_mm[0]
     for slot, at, length in zip(section.slots, fit.middles_mm, fit.lengths_mm, strict=True):
         foot = length / fit.thickness_mm * (slot.thickness_mm / 2 + 1.5 * max(0.0, fit.soft_mm - 0.2))
@@ -90,9 +94,7 @@ def _wrong(fit: RampFit, section: Ramps, u_mm: float) -> str:
                 f"the bar of the ramp at y = {slot.centre_y_mm:g} mm runs into the block's end: the slice is too thick, "
                 f"too far from the section at z = {section.z_mm:g} mm, or the phantom is tilted"
             )
-    if u_mm > _LOST_MM or (fit.heights < 6 * fit.u_heights).any():
-        return "the ramps are lost in the noise"
-    return ""
+    return lost if u_mm > _LOST_MM else ""
 
 
 def _details(fit: RampFit, section: Ramps, bars: tuple[float, float], slope: float) -> dict[str, Any]:
