@@ -178,8 +178,8 @@ def _fast(count: int) -> int:
 
 
 @lru_cache(maxsize=8)
-def _unit_noise(step_in_discs: float) -> NDArray[np.float32]:
-    """Disc means of white noise, unit standard deviation, shape (8 x 12 draws, points), on a grid about M's centre.
+def _unit_noise(step_in_discs: float) -> tuple[NDArray[np.float32], float]:
+    """Disc means of white noise, unit standard deviation, (8 x 12 draws, points), on a grid about M's centre, and their span.
 
     Drawn once with a fixed seed. Every draw appears in all eight turns and mirror images, so that no direction is
     preferred: an image and its mirror image are given the same figure.
@@ -196,7 +196,7 @@ def _unit_noise(step_in_discs: float) -> NDArray[np.float32]:
     allowed = _within_unit_disc()
     every: NDArray[np.float32] = np.concatenate(turned)[:, allowed].astype(np.float32)
     every.setflags(write=False)
-    return every
+    return every, float(every.max() - every.min())
 
 
 def _within_unit_disc() -> NDArray[np.bool_]:
@@ -209,18 +209,17 @@ def _resampled(surface: Floats, radius_mm: float, reach_mm: float, spread: float
     """Return what noise of the discs' means adds to the integral uniformity on average, and the scatter it causes."""
     at = np.linspace(-reach_mm, reach_mm, _GRID)
     smooth = evaluate(surface, at / radius_mm, at / radius_mm)[_within_unit_disc()]
-    middle = float(smooth.mean())
-    relative = (smooth / middle).astype(np.float32)
-    true = _piu(relative[None, :])[0]
-    unit = _unit_noise(round((at[1] - at[0]) / _DISC_MM, 6))
-    drawn = _piu(relative + np.float32(spread / middle) * unit)
-    return float(drawn.mean(dtype=np.float64) - true), float(drawn.std(dtype=np.float64))
-
-
-def _piu(means: NDArray[np.float32]) -> Floats:
-    high, low = (v.astype(np.float64) for v in (means.max(axis=1), means.min(axis=1)))
-    value: Floats = 100 * (1 - (high - low) / (high + low))
-    return value
+    unit, widest = _unit_noise(round(float(at[1] - at[0]) / _DISC_MM, 6))
+    top, bottom = float(smooth.max()), float(smooth.min())
+    near_top = smooth >= top - widest * spread  # noise cannot lift what lies lower to the highest place
+    near_bottom = smooth <= bottom + widest * spread
+    highest = top + ((smooth[near_top] - top).astype(np.float32) + np.float32(spread) * unit[:, near_top]).max(axis=1)
+    lowest = bottom + ((smooth[near_bottom] - bottom).astype(np.float32) + np.float32(spread) * unit[:, near_bottom]).min(
+        axis=1
+    )
+    highest, lowest = highest.astype(np.float64), lowest.astype(np.float64)
+    drawn = 100 * (1 - (highest - lowest) / (highest + lowest))
+    return float(drawn.mean()) - 100 * (1 - (top - bottom) / (top + bottom)), float(drawn.std())
 
 
 def _deviation(image: Floats, field: Field, noise: Noise, surface: Floats) -> Measurement | NotMeasured:
