@@ -1,6 +1,7 @@
 """The database behind the record: connections, transactions, migrations, and what can go wrong with them in plain words."""
 
 import errno
+import os
 import sqlite3
 import time
 from collections.abc import Iterator, Mapping
@@ -75,12 +76,29 @@ class Database:
         return engine
 
     def _connect(self) -> sqlite3.Connection:
-        mode = "ro" if self.read_only else "rw"
-        uri = f"{Path(str(self.path)).absolute().as_uri()}?mode={mode}"
+        if self.read_only:
+            return self._connect_read_only()
+        connection = self._open("mode=rw")
+        connection.execute("PRAGMA synchronous = FULL")
+        return connection
+
+    def _connect_read_only(self) -> sqlite3.Connection:
+        """Open where nothing can be written, not even the files beside the database that write-ahead logging needs."""
+        connection = self._open("mode=ro")
+        try:
+            connection.execute("SELECT 1 FROM sqlite_master LIMIT 1")
+        except sqlite3.OperationalError:
+            connection.close()
+            log = Path(f"{self.path}-wal")
+            if log.exists() and log.stat().st_size > 0:
+                raise
+            return self._open("mode=ro&immutable=1")
+        return connection
+
+    def _open(self, how: str) -> sqlite3.Connection:
+        uri = f"{Path(str(self.path)).absolute().as_uri()}?{how}"
         connection = sqlite3.connect(uri, uri=True, timeout=self.busy_s, isolation_level=None, check_same_thread=False)
         connection.execute("PRAGMA foreign_keys = ON")
-        if not self.read_only:
-            connection.execute("PRAGMA synchronous = FULL")
         return connection
 
     @staticmethod
@@ -159,13 +177,12 @@ class Database:
             if not create:
                 raise FaultError(f"{self.name}: there is no record yet: 'evenfield ingest' starts one.")
             self._make_empty(path)
+        self.read_only = not _may(path.parent, os.W_OK)
         try:
-            with path.open("r+b"):
+            with path.open("rb" if self.read_only else "r+b"):
                 pass
-        except PermissionError:
-            self.read_only = True
         except OSError as error:
-            self.read_only = error.errno == errno.EROFS
+            self.read_only = error.errno in {errno.EROFS, errno.EACCES, errno.EPERM} and _may(path, os.R_OK)
             if not self.read_only:
                 raise FaultError(f"{self.name}: cannot be opened ({error.strerror}): check the path.") from error
         if not self.read_only:
@@ -229,6 +246,10 @@ class Database:
     def close(self) -> None:
         """Let go of all connections."""
         self.engine.dispose()
+
+
+def _may(path: Path, mode: int) -> bool:
+    return os.access(path, mode, effective_ids=os.access in os.supports_effective_ids)
 
 
 def upgrade(connection: Connection, revision: str = HEAD_REVISION) -> None:

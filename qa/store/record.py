@@ -52,8 +52,7 @@ def open_record(place: str | Path, *, create: bool = True, heads: Path | None = 
     """
     database = Database(place, busy_s=busy_s)
     known = Heads(heads or (None if database.path is None else Path(f"{database.path}.heads")))
-    last = known.last()
-    if last is not None and database.path is not None and not _has_content(database.path):
+    if database.path is not None and not _has_content(database.path) and (last := known.last()) is not None:
         raise FaultError(
             f"{database.name}: is missing or empty, but {last.number} entries were written to it: restore it from a backup, "
             f"or move {known.path} away to begin anew."

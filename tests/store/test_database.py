@@ -1,7 +1,9 @@
 import os
+import shutil
 import sqlite3
 import subprocess
 import sys
+import tempfile
 import textwrap
 from pathlib import Path
 
@@ -147,25 +149,56 @@ def test_another_program_that_writes_too_long(record, path, make):
     record.limits_version("[]", make.who, make.now, "first")
 
 
-def test_a_read_only_record_can_be_read_and_not_added_to(copy, make, monkeypatch):
+@pytest.fixture
+def powerless():
+    """A folder of its own, and a switch: from then on the test can read it and write nothing."""
+    folder = Path(tempfile.mkdtemp(prefix="evenfield-read-only-"))
+
+    def switch():
+        folder.chmod(0o555)
+        if os.geteuid() == 0:
+            os.seteuid(65534)  # nobody
+
+    yield folder, switch
+    os.seteuid(os.getuid())
+    folder.chmod(0o755)
+    shutil.rmtree(folder)
+
+
+@pytest.mark.skipif(os.name != "posix", reason="needs POSIX permissions")
+@pytest.mark.parametrize("file_mode", [0o444, 0o666])
+def test_a_read_only_record_can_be_read_and_not_added_to(copy, make, powerless, file_mode):
+    folder, switch = powerless
     with open_record(copy) as record:
         days = record.last_days()
-    copy.chmod(0o444)
-    monkeypatch.setattr(Path, "open", refuse_to_write(Path.open))  # the tests may run as a user who may do anything
-    with open_record(copy) as record:
+    for name in (copy, copy.with_name("evenfield.db.heads")):
+        shutil.copy(name, folder / name.name).chmod(file_mode)
+    switch()
+    with open_record(folder / copy.name) as record:
         assert record.last_days() == days
         assert record.verify().whole
-        with pytest.raises(FaultError, match="is read-only"):
+        with pytest.raises(FaultError, match="is read-only: nothing can be added to the record"):
             record.limits_version("[]", make.who, make.now, "first")
+    assert sorted(one.name for one in folder.iterdir()) == ["evenfield.db", "evenfield.db.heads"]
 
 
-def refuse_to_write(opened):
-    def open_(self, mode="r", *rest, **other):
-        if "+" in mode or "w" in mode:
-            raise PermissionError(13, "Permission denied", str(self))
-        return opened(self, mode, *rest, **other)
+@pytest.mark.skipif(os.name != "posix", reason="needs POSIX permissions")
+def test_a_record_that_may_not_be_read(copy, powerless):
+    folder, switch = powerless
+    shutil.copy(copy, folder / copy.name).chmod(0o000)
+    switch()
+    assert "cannot be opened (Permission denied)" in fault(folder / copy.name)
 
-    return open_
+
+def test_a_heads_file_that_cannot_be_written_loses_no_entry(path, make):
+    heads = path.with_name("evenfield.db.heads")
+    with open_record(path) as record:
+        heads.mkdir()
+        with pytest.raises(FaultError, match="what was done is kept"):
+            record.limits_version("[]", make.who, make.now, "first")
+        heads.rmdir()
+        assert record.limits_version("[]", make.who, make.now, "first") == 1
+        assert record.verify().whole
 
 
 def test_a_full_disk(record, path, make):
