@@ -56,7 +56,7 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
         stream.last_day,
         stream.coil,
         stream.protocol,
-        stream.field_strength_T,
+        grounds.field_strength_T or stream.field_strength_T,
         stream.slice_thickness_mm,
         in_force(grounds.baselines, grounds.events, today),
     )

@@ -34,6 +34,8 @@ class Grounds:
         Of the control charts.
     forecast_days : int
         How far ahead a crossing is foretold.
+    field_strength_T : float or None
+        The scanner's, as the department states it; None takes what the headers say.
     """
 
     limits: tuple[Limit, ...] = ()
@@ -42,6 +44,7 @@ class Grounds:
     schedule: Schedule = field(default_factory=Schedule)
     rules: ControlRules = field(default_factory=ControlRules)
     forecast_days: int = HORIZON_DAYS
+    field_strength_T: float | None = None
 
 
 @dataclass(frozen=True)

@@ -1,6 +1,6 @@
 """What site.toml and the phantom definitions say, in the terms of judgement."""
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from typing import TYPE_CHECKING
 
 from qa.judge.control import ControlRules
@@ -11,7 +11,7 @@ if TYPE_CHECKING:
     from qa.phantoms import Phantom
     from qa.site import Charts, Downtime, SiteScanner
 
-__all__ = ["control_rules", "schedule_of", "true_values"]
+__all__ = ["as_stated", "control_rules", "schedule_of", "true_values"]
 
 _LENGTHS = ("length_0", "length_45", "length_90", "length_135")
 
@@ -45,8 +45,16 @@ def true_values(phantom: "Phantom", measurements: Iterable[Measurement] = ()) ->
     diameter = phantom.body.diameter_mm
     if diameter is None:
         return {}
-    stated = next((m.details["true_diameter_mm"] for m in measurements if "true_diameter_mm" in m.details), None)
-    found = dict.fromkeys(_LENGTHS, diameter if stated is None else float(stated))
+    found = dict.fromkeys(_LENGTHS, diameter)
     if phantom.body.length_mm is not None:
         found["length_axial"] = phantom.body.length_mm
+    return as_stated(found, measurements)
+
+
+def as_stated(true_values: Mapping[str, float], measurements: Iterable[Measurement]) -> dict[str, float]:
+    """Take the true diameter from the measurements of an acquisition where one states it and the phantom has one."""
+    found = dict(true_values)
+    stated = next((m.details["true_diameter_mm"] for m in measurements if "true_diameter_mm" in m.details), None)
+    if stated is not None:
+        found |= dict.fromkeys((name for name in _LENGTHS if name in found), float(stated))
     return found

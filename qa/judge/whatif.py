@@ -1,12 +1,13 @@
 """What another set of limits would have said of figures that were judged before."""
 
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import date
 
 from qa.judge.baseline import in_force
 from qa.judge.decide import judge
 from qa.judge.limits import Context
+from qa.judge.settings import as_stated
 from qa.records import Baseline, Event, Limit, Measurement, RecordedAcquisition, Session, Verdict
 
 __all__ = ["AlteredVerdict", "altered_verdicts"]
@@ -31,6 +32,8 @@ def altered_verdicts(
     baselines: Sequence[Baseline] = (),
     events: Sequence[Event] = (),
     true_values: Mapping[str, Mapping[str, float]] | None = None,
+    *,
+    field_strengths_T: Mapping[str, float] | None = None,
 ) -> tuple[AlteredVerdict, ...]:
     """Judge past figures by another set of limits and list those whose verdict's word or warning would differ.
 
@@ -43,7 +46,10 @@ def altered_verdicts(
     baselines, events : sequence
         Of those scanners; each figure is judged with the baselines in force on its day.
     true_values : mapping, optional
-        True dimensions by phantom and quantity.
+        True dimensions by phantom and quantity; an acquisition that states the true diameter of its cross-section goes by
+        that.
+    field_strengths_T : mapping, optional
+        Field strength by scanner, as the department states it; without it, what the headers say.
 
     Returns
     -------
@@ -52,16 +58,17 @@ def altered_verdicts(
     """
     found: list[AlteredVerdict] = []
     previous: dict[tuple[str, str, str], tuple[Measurement, date]] = {}
-    truths = true_values or {}
+    truths, fields_T = true_values or {}, field_strengths_T or {}
     for session in sessions:
         valid = in_force(baselines, events, session.day)
         seen: dict[tuple[str, str, str], tuple[Measurement, date]] = {}
         for acquisition in session.acquisitions:
+            stated = as_stated(truths.get(acquisition.phantom, {}), (j.measurement for j in acquisition.judged))
+            context = _context(session, acquisition, valid, stated, fields_T.get(session.scanner_name))
             for judged in acquisition.judged:
                 key = (session.scanner_name, acquisition.phantom, judged.measurement.quantity)
-                before = previous.get(key)
-                context = _context(session, acquisition, valid, truths.get(acquisition.phantom, {}), before)
-                verdict = judge(judged.measurement, limits, context)
+                before, day = previous.get(key, (None, None))
+                verdict = judge(judged.measurement, limits, replace(context, previous=before, previous_day=day))
                 if _said(verdict) != _said(judged.verdict):
                     found.append(
                         AlteredVerdict(
@@ -88,7 +95,7 @@ def _context(
     acquisition: RecordedAcquisition,
     baselines: tuple[Baseline, ...],
     true_values: Mapping[str, float],
-    before: tuple[Measurement, date] | None,
+    field_strength_T: float | None,
 ) -> Context:
     settings = acquisition.settings
     return Context(
@@ -97,10 +104,8 @@ def _context(
         session.day,
         settings.receive_coil,
         settings.protocol,
-        acquisition.scanner.field_strength_T,
+        field_strength_T or acquisition.scanner.field_strength_T,
         settings.slice_thickness_mm,
         baselines,
         true_values,
-        None if before is None else before[0],
-        None if before is None else before[1],
     )

@@ -52,3 +52,14 @@ def test_true_values_serve_lengths(make):
     assert altered_verdicts(sessions, limits) == ()
     found = altered_verdicts(sessions, limits, true_values={"sphere-170": {"length_0": 170.0}})
     assert found[0].would_be.conformity == "fail"
+
+
+def test_a_cross_sections_own_diameter_and_the_departments_field_strength_count(make):
+    stated = {"length_0": 167.0, "scale_x": (0.0, 0.1, {"true_diameter_mm": 168.0})}
+    sessions = make.history([stated])
+    limits = (Limit("length_*", plus_minus=2.0),)
+    found = altered_verdicts(sessions, limits, true_values={"sphere-170": {"length_0": 170.0}})
+    assert [a.would_be.conformity for a in found] == ["pass"]
+    only = (Limit("length_0", field_strength_T=7.0, lower=0.0),)
+    assert altered_verdicts(sessions, only) == ()
+    assert len(altered_verdicts(sessions, only, field_strengths_T={"north-3t": 7.0})) == 1
