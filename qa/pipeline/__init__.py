@@ -1,6 +1,14 @@
 """The walk: files -> Series -> Acquisition -> Outcome -> Verdicts -> record, and what is asked of the record afterwards."""
 
-from qa.pipeline.decisions import accept_baselines
+from qa.pipeline.decisions import (
+    AppliedLimit,
+    accept_baselines,
+    add_event,
+    limits_in_force,
+    set_baseline,
+    set_limit,
+    what_if,
+)
 from qa.pipeline.department import Department, now_utc, open_department
 from qa.pipeline.intake import Intake, Taken, take_in
 from qa.pipeline.reporting import write_reports
@@ -8,19 +16,25 @@ from qa.pipeline.survey import Survey, survey
 from qa.pipeline.walk import Progress, examine, measure_paths, measure_reading, no_progress
 
 __all__ = [
+    "AppliedLimit",
     "Department",
     "Intake",
     "Progress",
     "Survey",
     "Taken",
     "accept_baselines",
+    "add_event",
     "examine",
+    "limits_in_force",
     "measure_paths",
     "measure_reading",
     "no_progress",
     "now_utc",
     "open_department",
+    "set_baseline",
+    "set_limit",
     "survey",
     "take_in",
+    "what_if",
     "write_reports",
 ]

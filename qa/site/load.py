@@ -136,13 +136,15 @@ class Site:
         return found
 
 
-def load_site(folder: Path) -> Site:
+def load_site(folder: Path, file: Path | None = None) -> Site:
     """Read and check `site.toml` in a department folder.
 
     Parameters
     ----------
     folder : pathlib.Path
         The department folder.
+    file : pathlib.Path or None
+        Another file to read in its place, as if it were that folder's own: a change that is only tried.
 
     Returns
     -------
@@ -158,7 +160,7 @@ def load_site(folder: Path) -> Site:
         The definition of a phantom of the department's own is wrong.
     """
     folder = Path(folder)
-    path = folder / FILE_NAME
+    path = file or folder / FILE_NAME
     text = _read(path)
     try:
         document = tomllib.loads(text)
@@ -166,19 +168,19 @@ def load_site(folder: Path) -> Site:
         raise SiteError(f"{path}: is not valid TOML: {error}.") from error
     except RecursionError as error:
         raise SiteError(f"{path}: is not valid TOML: it is nested too deeply.") from error
-    checker = _Checker(path, text)
+    checker = _Checker(path, text, folder)
     checker.shape(document)
     own = checker.limits(document.pop("limit", []))
     try:
-        file = SiteFile.model_validate(document)
+        tables = SiteFile.model_validate(document)
     except ValidationError as error:
         raise checker.error(error) from error
-    checker.scanners(file.scanner)
-    phantoms, paths, expectations = checker.phantoms(file.expect)
-    names = [s.name for s in file.scanner]
+    checker.scanners(tables.scanner)
+    phantoms, paths, expectations = checker.phantoms(tables.expect)
+    names = [s.name for s in tables.scanner]
     for table, entries in (
-        ("expect", [e.scanner for e in file.expect]),
-        ("downtime", [d.scanner for d in file.downtime]),
+        ("expect", [e.scanner for e in tables.expect]),
+        ("downtime", [d.scanner for d in tables.downtime]),
     ):
         for number, patterns in enumerate(entries):
             checker.known((table, number, "scanner"), patterns, names)
@@ -187,15 +189,15 @@ def load_site(folder: Path) -> Site:
         checker.known(("limit", number, "phantom"), (limit.phantom,), sorted({*phantom_names(), *phantoms}))
     return Site(
         folder=folder,
-        department=file.department,
-        record=file.record,
-        scanners=file.scanner,
+        department=tables.department,
+        record=tables.record,
+        scanners=tables.scanner,
         expectations=expectations,
-        downtimes=file.downtime,
+        downtimes=tables.downtime,
         limits=(*(limit for _, limit in own), *shipped_limits()),
-        mail=file.mail,
-        charts=file.charts,
-        report=file.report,
+        mail=tables.mail,
+        charts=tables.charts,
+        report=tables.report,
         phantoms=phantoms,
         phantom_files=paths,
     )
@@ -221,8 +223,8 @@ def _read(path: Path) -> str:
 class _Checker:
     """Turns what is wrong in one file into the sentence that says so."""
 
-    def __init__(self, path: Path, text: str) -> None:
-        self.path = path
+    def __init__(self, path: Path, text: str, folder: Path) -> None:
+        self.path, self.folder = path, folder
         self.lines = list(_table_lines(text))
 
     def wrong(self, where: tuple[str | int, ...], what: str) -> SiteError:
@@ -311,7 +313,7 @@ class _Checker:
         for number, expectation in enumerate(expectations):
             where = ("expect", number, "phantom")
             own = expectation.phantom.endswith(".toml")
-            path = self.path.parent / expectation.phantom if own else None
+            path = self.folder / expectation.phantom if own else None
             if not own and expectation.phantom not in shipped:
                 raise self.wrong(
                     where,

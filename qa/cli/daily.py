@@ -1,96 +1,16 @@
-"""The commands: read arguments, call one function, print. Nothing is computed here."""
+"""The commands of every day: start, measure, take in, check, look, report, commission, show."""
 
-import os
-import sys
-from collections.abc import Iterable, Sequence
-from datetime import date
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import Annotated
 
 import typer
 
-from qa.errors import EvenfieldError, ExitStatus, UsageError
-from qa.version import __version__
+from qa.cli.common import HERE, JsonOption, PathsArgument, QuietOption, SiteOption, finish, progress, put, say, to_day
+from qa.errors import ExitStatus
 
-if TYPE_CHECKING:
-    from qa.pipeline import Progress
-
-__all__ = ["app", "main"]
-
-app = typer.Typer(
-    name="evenfield",
-    no_args_is_help=True,
-    add_completion=False,
-    rich_markup_mode=None,
-    pretty_exceptions_enable=False,
-    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
-    help="Keeps MR scanners honest: phantom images in, figures with uncertainty, limits, history and a dated PDF report out.",
-)
-
-SiteOption = Annotated[
-    Path, typer.Option("--site", envvar="EVENFIELD_SITE", help="The department folder, the one with site.toml.")
-]
-JsonOption = Annotated[bool, typer.Option("--json", help="Print the figures as one JSON object, and nothing else.")]
-QuietOption = Annotated[bool, typer.Option("--quiet", "-q", help="Say nothing that is not needed.")]
-PathsArgument = Annotated[list[Path], typer.Argument(help="Folders or files of DICOM images.", show_default=False)]
-HERE = Path()
+__all__ = ["check", "commission", "demo", "ingest", "init", "measure", "report", "status"]
 
 
-def say(text: str) -> None:
-    """Print what is not a figure, to standard error."""
-    print(text, file=sys.stderr)  # noqa: T201 - this is where the program speaks
-
-
-def put(text: str) -> None:
-    """Print figures, to standard output."""
-    print(text)  # noqa: T201 - this is where the program answers
-
-
-def _day(text: str | None, option: str) -> date | None:
-    if text is None:
-        return None
-    try:
-        return date.fromisoformat(text)
-    except ValueError:
-        raise UsageError(f"{option}: {text!r} is not a date: write it as 2026-11-23.") from None
-
-
-def _progress(*, quiet: bool) -> "Progress":
-    """Return a wrapper that shows a bar on a terminal, and nothing when output is redirected."""
-
-    def plain(items: Sequence[Any], _title: str) -> Iterable[Any]:
-        return items
-
-    def bar(items: Sequence[Any], title: str) -> Iterable[Any]:
-        from rich.console import Console
-        from rich.progress import track
-
-        return track(items, description=title, console=Console(stderr=True), transient=True)
-
-    return plain if quiet or not sys.stderr.isatty() else bar
-
-
-def _finish(status: ExitStatus) -> None:
-    raise typer.Exit(int(status))
-
-
-def _version(wanted: bool) -> None:
-    if wanted:
-        put(f"evenfield {__version__}")
-        raise typer.Exit
-
-
-@app.callback()
-def _root(
-    *,
-    version: Annotated[
-        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")
-    ] = False,
-) -> None:
-    """Keep MR scanners honest: phantom images in, figures with uncertainty, limits, history and a dated PDF report out."""
-
-
-@app.command()
 def init(folder: Annotated[Path, typer.Argument(help="The new department folder.")]) -> None:
     """Start a department folder with a commented site.toml.
 
@@ -104,7 +24,6 @@ def init(folder: Annotated[Path, typer.Argument(help="The new department folder.
     )
 
 
-@app.command()
 def measure(
     paths: PathsArgument,
     *,
@@ -120,7 +39,7 @@ def measure(
     """
     from qa.pipeline import measure_paths
 
-    outcomes, refused = measure_paths(paths, phantom, _progress(quiet=quiet))
+    outcomes, refused = measure_paths(paths, phantom, progress(quiet=quiet))
     if as_json:
         from qa.report.figures_json import measurements_document, to_json
 
@@ -136,12 +55,11 @@ def measure(
     if not outcomes:
         if not refused and not quiet:
             say(f"{', '.join(map(str, paths))}: no DICOM image was found: give a folder that holds a phantom's series.")
-        _finish(ExitStatus.NEEDS_A_PERSON)
+        finish(ExitStatus.NEEDS_A_PERSON)
     if refused or any(not outcome.measurements for outcome in outcomes):
-        _finish(ExitStatus.NEEDS_A_PERSON)
+        finish(ExitStatus.NEEDS_A_PERSON)
 
 
-@app.command()
 def ingest(
     paths: Annotated[
         list[Path] | None, typer.Argument(help="Folders or files; the inbox when none is given.", show_default=False)
@@ -158,7 +76,7 @@ def ingest(
     from qa.report.terminal import refused_line, taken_line
 
     with open_department(site) as department:
-        intake = take_in(department, paths or (), _progress(quiet=quiet))
+        intake = take_in(department, paths or (), progress(quiet=quiet))
         if not quiet:
             for taken in intake.taken:
                 say(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
@@ -166,10 +84,9 @@ def ingest(
                 say(refused_line(one))
             counts = (len(intake.taken), intake.skipped, len(intake.refused))
             say("{} acquisitions taken in, {} files known already, {} refused".format(*counts))
-        _finish(survey(department).exit_status(attention=intake.needs_a_person))
+        finish(survey(department).exit_status(attention=intake.needs_a_person))
 
 
-@app.command()
 def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
     """Run the scheduled job: take the inbox in, look for scanners out of limits or overdue, print only what needs a person.
 
@@ -188,10 +105,9 @@ def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
                 put(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
             for one in intake.refused:
                 put(refused_line(one))
-        _finish(found.exit_status(attention=intake.needs_a_person))
+        finish(found.exit_status(attention=intake.needs_a_person))
 
 
-@app.command()
 def status(
     *,
     site: SiteOption = HERE,
@@ -205,7 +121,7 @@ def status(
     """
     from qa.pipeline import open_department, survey
 
-    day = _day(as_of, "--as-of")
+    day = to_day(as_of, "--as-of")
     with open_department(site) as department:
         found = survey(department, day)
         if as_json:
@@ -216,10 +132,9 @@ def status(
             from qa.report.terminal import status_table
 
             put(status_table(found.assessments))
-        _finish(found.exit_status())
+        finish(found.exit_status())
 
 
-@app.command()
 def report(
     scanners: Annotated[
         list[str] | None, typer.Argument(help="Names from site.toml; all of them when none is given.", show_default=False)
@@ -240,13 +155,12 @@ def report(
     """
     from qa.pipeline import open_department, write_reports
 
-    days = (_day(first, "--from"), _day(last, "--to"), _day(as_of, "--as-of"))
+    days = (to_day(first, "--from"), to_day(last, "--to"), to_day(as_of, "--as-of"))
     with open_department(site) as department:
-        for path in write_reports(department, scanners or (), *days, page=page, progress=_progress(quiet=quiet)):
+        for path in write_reports(department, scanners or (), *days, page=page, progress=progress(quiet=quiet)):
             put(str(path))
 
 
-@app.command()
 def commission(
     *,
     phantom: Annotated[
@@ -278,10 +192,10 @@ def commission(
     from qa.report.commission import page_size, render_commission_report
     from qa.report.commission_words import commission_document, commission_text
 
-    day, paper = _day(as_of, "--as-of"), page_size(page)
+    day, paper = to_day(as_of, "--as-of"), page_size(page)
     if report is not None:
         check_target(report)
-    result = run_commission(phantom, cases, seed, jobs, _progress(quiet=quiet))
+    result = run_commission(phantom, cases, seed, jobs, progress(quiet=quiet))
     if as_json:
         from qa.report.figures_json import to_json
 
@@ -292,10 +206,9 @@ def commission(
         write_evidence(report, render_commission_report(result, day, paper))
         if not quiet:
             say(f"{report} is the evidence for the file.")
-    _finish(ExitStatus.DONE if result.met else ExitStatus.OUT_OF_LIMITS)
+    finish(ExitStatus.DONE if result.met else ExitStatus.OUT_OF_LIMITS)
 
 
-@app.command()
 def demo(
     folder: Annotated[Path, typer.Argument(help="Where to build it: a new or an empty folder.")] = Path("evenfield-demo"),
     *,
@@ -307,33 +220,5 @@ def demo(
     """
     from qa.demo import build_demo
 
-    for line in build_demo(folder, _progress(quiet=quiet)):
+    for line in build_demo(folder, progress(quiet=quiet)):
         put(line)
-
-
-def main() -> None:
-    """Run the program; whatever goes wrong ends in one sentence and the documented exit status."""
-    try:
-        app()
-    except EvenfieldError as error:
-        say(f"evenfield: {error}")
-        raise SystemExit(int(error.exit_status)) from None
-    except KeyboardInterrupt:
-        say("evenfield: stopped; what was done is kept, and a rerun goes on from there.")
-        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
-    except BrokenPipeError:
-        # The reader of our output has gone; Python would complain once more while closing it.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
-    except Exception as error:
-        if os.environ.get("EVENFIELD_TRACEBACK"):
-            raise
-        say(
-            f"evenfield: a fault in the program itself ({type(error).__name__}): what was done is kept. "
-            "Set EVENFIELD_TRACEBACK=1 and run again to see where."
-        )
-        raise SystemExit(int(ExitStatus.COULD_NOT_FINISH)) from None
-
-
-if __name__ == "__main__":
-    main()

@@ -1,0 +1,5 @@
+"""`python -m qa.cli` is the program too."""
+
+from qa.cli import main
+
+main()
