@@ -16,7 +16,7 @@ from qa.store.chain import Head, Who, append, clock_remark, head
 from qa.store.database import Database
 from qa.store.heads import Heads
 from qa.store.tables import entries
-from qa.store.verify import Verification, verify, verify_tables
+from qa.store.verify import Anchor, Verification, verify, verify_tables
 
 __all__ = ["Ledger", "correctable", "current_user", "need_reason"]
 
@@ -90,13 +90,19 @@ class Ledger:
         with self._database.reading() as connection:
             return clock_remark(head(connection)[1], now) or None
 
-    def verify(self, anchors: Iterable[tuple[str, Head]] = ()) -> Verification:
+    def verify(self, anchors: Iterable[Anchor] = ()) -> Verification:
         """Prove that nothing in the record was altered, removed or reordered, or say where it was.
 
         Parameters
         ----------
-        anchors : iterable of (str, Head)
-            Heads known from elsewhere, such as a printed report, each with a name for it; the heads file is read anyway.
+        anchors : iterable of (str, Head or str)
+            Heads known from elsewhere, such as a printed report, each with a name for it; a text is a hash, or at least its
+            first eight digits. The heads file is read anyway.
+
+        Raises
+        ------
+        UsageError
+            A text is no beginning of a hash.
         """
         with ThreadPoolExecutor(max_workers=1) as beside, self._database.reading() as connection:
             tables = beside.submit(self._verify_tables)

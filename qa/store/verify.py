@@ -1,14 +1,16 @@
 """Prove that nothing in the record was altered, removed or reordered, or say where it was."""
 
+import re
 import sqlite3
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import Connection, or_, select
+from sqlalchemy import ColumnElement, Connection, and_, select
 from sqlalchemy.exc import DBAPIError
 from sqlalchemy.sql import Select
 
+from qa.errors import UsageError
 from qa.store.chain import GENESIS, HEADER, Head, entry_hash
 from qa.store.database import check_tables
 from qa.store.tables import CONTENT_TABLES, entries
@@ -16,6 +18,8 @@ from qa.store.tables import CONTENT_TABLES, entries
 __all__ = ["Verification", "verify", "verify_tables"]
 
 _BATCH = 1000
+_BEFORE_ALL = -(2**31)
+_HASH = re.compile("[0-9a-fA-F]{8,64}")
 _MOST_PROBLEMS = 20
 Content = list[tuple[str, list[Sequence[Any]]]]
 _UNREADABLE = "Could not decode to UTF-8"
@@ -45,22 +49,36 @@ class Verification:
         return not self.problems
 
 
-def verify(connection: Connection, anchors: Iterable[tuple[str, Head]] = ()) -> Verification:
+Anchor = tuple[str, Head | str]
+"""Where an end of the chain is known from, and that end: number and hash, or the beginning of the hash alone."""
+
+
+def verify(connection: Connection, anchors: Iterable[Anchor] = ()) -> Verification:
     """Go through the whole record and hold every value against the chain.
 
     Parameters
     ----------
     connection : Connection
         In a reading transaction, so that it sees one state.
-    anchors : iterable of (str, Head)
-        Heads known from elsewhere, each with where it is known from.
+    anchors : iterable of (str, Head or str)
+        Heads known from elsewhere, each with where it is known from; a text is a hash, or at least its first eight digits.
 
     Returns
     -------
     Verification
         Where the chain breaks, if it does.
+
+    Raises
+    ------
+    UsageError
+        A text is no beginning of a hash.
     """
     anchors = list(anchors)
+    for where, anchor in anchors:
+        if isinstance(anchor, str) and not _HASH.fullmatch(anchor):
+            raise UsageError(
+                f"{where}: {anchor!r} is not the hash of an entry: give at least its first eight digits (0 to 9, a to f)."
+            )
     try:
         return _verify(connection, anchors)
     except (sqlite3.DatabaseError, DBAPIError) as error:
@@ -92,28 +110,19 @@ def _damaged(error: Exception) -> str:
     return "the database file itself is damaged: restore it from a backup"
 
 
-def _verify(connection: Connection, anchors: Iterable[tuple[str, Head]]) -> Verification:
+def _verify(connection: Connection, anchors: Iterable[Anchor]) -> Verification:
     walk = _Walk()
     columns = [entries.c[name] for name in (*HEADER, "hash")]
-    done = 0
+    done = _BEFORE_ALL
     while batch := _rows(connection, select(*columns).where(entries.c.number > done).order_by(entries.c.number).limit(_BATCH)):
         last = batch[-1][0]
-        content = _content(connection, done, last)
+        content = _content(connection, _between(done, last))
         for row in batch:
             walk.step(row, content.pop(row[0], []))
         walk.strays(content)
         done = last
-    walk.strays(_content(connection, done, None))
-    problems = walk.problems
-    for where, anchor in anchors:
-        if anchor.number > walk.last.number or (anchor.number != 0 and anchor.number not in walk.hashes):
-            problems.append(
-                f"{where} knows entry {anchor.number}, but the record ends with entry {walk.last.number}: its end was cut off"
-            )
-        elif anchor.number != 0 and walk.hashes[anchor.number] != anchor.hash:
-            problems.append(
-                f"{where} knows entry {anchor.number} with another hash: the record was made anew from there or before"
-            )
+    walk.strays(_content(connection, lambda entry: entry > done))
+    problems = [*walk.problems, *(said for where, anchor in anchors if (said := walk.contradicts(where, anchor)))]
     if len(problems) > _MOST_PROBLEMS:
         problems[_MOST_PROBLEMS:] = [f"and {len(problems) - _MOST_PROBLEMS} more"]
     return Verification(walk.last, tuple(problems), tuple(walk.remarks))
@@ -133,7 +142,9 @@ class _Walk:
         number, kind, written_at, remark, previous, stored = row[0], row[1], row[2], row[6], row[8], row[9]
         what = f"entry {number} ({kind}, written {written_at})"
         due = self.last.number + 1
-        if number != due:
+        if number < due:
+            self.problems.append(f"{what} stands before the first entry: it was put in")
+        elif number > due:
             gone = f"entry {due} is" if number == due + 1 else f"entries {due} to {number - 1} are"
             self.problems.append(f"{gone} missing before {what}")
         elif previous != self.last.hash:
@@ -145,13 +156,32 @@ class _Walk:
         if remark:
             self.remarks.append(f"{what}: {remark}")
         self.hashes[number] = stored
-        self.last = Head(number, stored)
+        if number >= due:
+            self.last = Head(number, stored)
+
+    def contradicts(self, where: str, anchor: Head | str) -> str:
+        """Say how a head known from elsewhere contradicts the chain; empty where it does not."""
+        if isinstance(anchor, str):
+            known = any(isinstance(h, str) and h.startswith(anchor.casefold()) for h in self.hashes.values())
+            return "" if known else f"{where} knows a hash that no entry has: the record was cut off or made anew"
+        if anchor == Head(0, GENESIS):
+            return ""
+        if anchor.number not in self.hashes:
+            end = self.last.number
+            return f"{where} knows entry {anchor.number}, but the record ends with entry {end}: its end was cut off"
+        if self.hashes[anchor.number] != anchor.hash:
+            return f"{where} knows entry {anchor.number} with another hash: the record was made anew from there or before"
+        return ""
 
     def strays(self, content: Mapping[Any, Content]) -> None:
         """Note rows that belong to no entry."""
         for entry, tables in content.items():
             names = ", ".join(name for name, _ in tables)
             self.problems.append(f"rows name entry {entry!r}, which there is not (in {names})")
+
+
+def _between(after: int, last: int) -> Callable[[ColumnElement[int]], ColumnElement[bool]]:
+    return lambda entry: and_(entry > after, entry <= last)
 
 
 def _hash_or_none(header: Sequence[Any], content: Content) -> str | None:
@@ -162,13 +192,12 @@ def _hash_or_none(header: Sequence[Any], content: Content) -> str | None:
         return None
 
 
-def _content(connection: Connection, after: int, to: int | None) -> dict[Any, Content]:
-    """Read the rows of entries after one number, up to another; with none, all rows that lie outside 1 to `after`."""
+def _content(connection: Connection, chosen: Callable[[ColumnElement[int]], ColumnElement[bool]]) -> dict[Any, Content]:
+    """Read the rows of the entries that a condition on their numbers chooses."""
     found: dict[Any, Content] = {}
     for table in CONTENT_TABLES:
         entry, position = table.c.entry, table.c.get("position")
-        where = entry.between(after + 1, to) if to is not None else or_(entry < 1, entry > after)
-        query = select(table).where(where).order_by(entry, *([] if position is None else [position]))
+        query = select(table).where(chosen(entry)).order_by(entry, *([] if position is None else [position]))
         rows: list[Sequence[Any]] = []
         number: Any = None
         for row in _rows(connection, query):

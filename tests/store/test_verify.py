@@ -5,7 +5,7 @@ import sqlite3
 
 import pytest
 
-from qa.errors import FaultError
+from qa.errors import FaultError, UsageError
 from qa.store import Head, open_record
 from qa.store.chain import entry_hash
 from qa.store.tables import CONTENT_TABLES
@@ -183,6 +183,25 @@ def test_a_heads_file_scribbled_over_is_no_proof_of_a_whole_record(copy):
     heads = copy.with_name("evenfield.db.heads")
     heads.write_bytes(heads.read_bytes().replace(b"1 ", b"x ", 1) + b"\xff\n\n")
     assert len(problems(copy)) == 3
+
+
+def test_a_hash_printed_on_a_report_is_enough(copy):
+    with open_record(copy) as record:
+        printed = record.head().hash
+        assert record.verify([("the report", printed)]).whole
+        assert record.verify([("the report", printed[:8].upper())]).whole
+        assert record.verify([("the report", "0" * 12)]).problems == (
+            "the report knows a hash that no entry has: the record was cut off or made anew",
+        )
+        with pytest.raises(UsageError, match="the report: 'abc' is not the hash of an entry"):
+            record.verify([("the report", "abc")])
+
+
+def test_an_entry_put_in_before_the_first_is_found(copy):
+    with Forger(copy) as connection:
+        connection.execute("PRAGMA ignore_check_constraints = ON")
+        connection.execute("INSERT INTO entries VALUES (-3, 'event', '', '', '', '', '', NULL, '', 'abc')")
+    assert any("stands before the first entry: it was put in" in line for line in problems(copy))
 
 
 @pytest.mark.parametrize("entry", ["99", "0", "-1", "'x'", "4.5"])
