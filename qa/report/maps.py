@@ -16,6 +16,7 @@ __all__ = ["draw_displacements", "draw_profile", "maps_of"]
 
 _SIDE_MM = 78.0
 _CIRCLES_MM = (100.0, 150.0, 200.0)
+_ASIDE = (math.sin(math.radians(14)), math.cos(math.radians(14)))
 
 
 def _points(rods: Sequence[Mapping[str, Any]], name: str) -> Floats | None:
@@ -60,7 +61,8 @@ def draw_displacements(true_mm: Floats, measured_mm: Floats) -> tuple[bytes, str
         if diameter / 2 < reach:
             axes.plot(diameter / 2 * np.cos(turn), diameter / 2 * np.sin(turn), color=FAINT, linewidth=HAIRLINE, zorder=0)
             axes.annotate(
-                f"{diameter:g}", (0, -diameter / 2), (0, 1), textcoords="offset points", ha="center", va="bottom", color=GREY,
+                f"{diameter:g}", (diameter / 2 * _ASIDE[0], -diameter / 2 * _ASIDE[1]), (1, 1), textcoords="offset points",
+                ha="left", va="bottom", color=GREY,
                 fontproperties=letters(5.6),
             )  # fmt: skip
     axes.plot(*true_mm.T, linestyle="none", marker=".", markersize=1.6, color=GREY, markeredgewidth=0, zorder=2)
@@ -111,11 +113,8 @@ def draw_profile(position_mm: Floats, signal: Floats) -> tuple[bytes, str]:
 
 
 def _profile(details: Mapping[str, Any]) -> tuple[Floats, Floats] | None:
-    found = details.get("profile")
-    if not isinstance(found, Mapping):
-        return None
     try:
-        position, signal = (np.array(found[name], dtype=np.float64) for name in ("position_mm", "signal"))
+        position, signal = (np.array(details[name], dtype=np.float64) for name in ("profile_mm", "profile"))
     except (KeyError, TypeError, ValueError):
         return None
     usable = position.ndim == 1 and position.shape == signal.shape and position.size > 3
@@ -136,5 +135,8 @@ def maps_of(found: Measurement, name: str) -> tuple[Shown, bytes] | None:
     profile = _profile(found.details)
     if profile is not None:
         svg, caption = draw_profile(*profile)
+        tenth = found.details.get("full_width_tenth_maximum_mm")
+        if isinstance(tenth, float):
+            caption += f" Full width at a tenth of it: {plain_number(tenth, 3)}{THIN_SPACE}mm."
         return Shown("Slice profile", name, caption, _SIDE_MM, 46.0, (), caption), svg
     return None

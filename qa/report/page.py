@@ -61,14 +61,14 @@ class Group:
 
 @dataclass(frozen=True)
 class Shown:
-    """One image with its key."""
+    """One image with its key: number, name of the region, and what was read there."""
 
     title: str
     figure: str
     description: str
     width_mm: float
     height_mm: float
-    key: tuple[tuple[int, str], ...]
+    key: tuple[tuple[int, str, str], ...]
     caption: str
 
 

@@ -35,14 +35,27 @@ def _printable(content: object) -> object:
 
 
 def _tied(text: str) -> "Markup":
-    """Escape a text and keep what a thin space joins, a number and its unit, on one line."""
+    """Escape a text and keep what a thin space joins, a number and its unit, on one line.
+
+    The rest goes into spans too, with the blanks between them outside: WeasyPrint 70 breaks a line early where text ends in a
+    blank and the element after it does not fit.
+    """
     from markupsafe import Markup, escape
 
     parts = _JOINED.split(str(_printable(text)))
-    return Markup("").join(
-        Markup('<span class="tied">{}</span>').format(part) if number % 2 else escape(part)
-        for number, part in enumerate(parts)
-    )
+    if len(parts) == 1:
+        return escape(parts[0])
+    pieces = []
+    for number, part in enumerate(parts):
+        bare = part.strip()
+        if number % 2:
+            pieces.append(Markup('<span class="tied">{}</span>').format(part))
+        elif bare:
+            before, after = (" " if part[:1].isspace() else ""), (" " if part[-1:].isspace() else "")
+            pieces.append(Markup("{}<span>{}</span>{}").format(before, bare, after))
+        else:
+            pieces.append(escape(part))
+    return Markup("").join(pieces)
 
 
 @lru_cache(maxsize=1)

@@ -23,7 +23,7 @@ from qa.report.sections import (
     trends,
 )
 from qa.report.streams import histories
-from qa.report.words import clipped
+from qa.report.words import clipped, sentence, typeset
 
 __all__ = ["lay_out_scanner", "render_scanner_report"]
 
@@ -49,11 +49,11 @@ def lay_out_scanner(content: ScannerReport) -> tuple[ScannerPage, Figures, tuple
         as_of=long_date(content.as_of),
         standing=content.standing[:1].upper() + content.standing[1:],
         standing_mark=_STANDING_MARKS[content.standing],
-        standing_sentence=content.standing_sentence,
+        standing_sentence=f"{sentence(content.standing_sentence, f'{content.standing}:')}.",
         notices=notices(content),
         causes=causes(content),
         since_heading=f"Since the report of {since}" if since else "",
-        since=content.since_previous,
+        since=tuple(typeset(text) for text in content.since_previous),
         facts=facts(content),
         latest_day=long_date(content.sessions[-1].day) if content.sessions else "",
         groups=groups(content, found, figures),

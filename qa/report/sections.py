@@ -1,7 +1,8 @@
 """The sections of a scanner's report, each from its records: table, trends, images, what happened, what traces it."""
 
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from types import MappingProxyType
 
 from qa.records import Judged, Measurement, Picture, RecordedAcquisition, Session, Verdict
 from qa.report.chart import TrendChart
@@ -14,7 +15,18 @@ from qa.report.picture import draw_picture, grey_window
 from qa.report.spark import draw_spark
 from qa.report.streams import History, event_letters, in_order, mark_of, split_phantoms, stream_of
 from qa.report.trend import draw_trend, marks_present
-from qa.report.words import about, clipped, count_of, day_runs, expanded, header_words, settings_words, value_words
+from qa.report.words import (
+    about,
+    clipped,
+    count_of,
+    day_runs,
+    expanded,
+    header_words,
+    sentence,
+    settings_words,
+    typeset,
+    value_words,
+)
 
 __all__ = [
     "Figures",
@@ -34,7 +46,7 @@ __all__ = [
 
 Figures = dict[str, bytes]
 
-_PICTURE_MM = 100.0
+_PICTURE_MM = 87.0
 _PAIR_MM = 74.0
 _SEEN_IN_AIR = {"ghosting", "snr_background"}
 _BRIGHTENED = 10
@@ -45,14 +57,18 @@ _NOTICE_MARKS = {
     "refused": "conditional-fail",
     "set-up": "conditional-fail",
 }
+_REGIONS = {"M": "measurement region, M"}
+_NOBODY: Mapping[tuple[str, int], str] = MappingProxyType({})
 _RULES = {"simple": "simple acceptance", "guarded": "guarded acceptance: the expanded uncertainty must fit inside too"}
 
 
 def notices(content: ScannerReport) -> tuple[NoticeRow, ...]:
-    """List what needs a person."""
+    """List what needs a person; what the standing's own sentence says is not said again."""
+    said = sentence(content.standing_sentence).casefold()
     return tuple(
-        NoticeRow(notice.kind[:1].upper() + notice.kind[1:], _NOTICE_MARKS[notice.kind], notice.sentence)
+        NoticeRow(notice.kind[:1].upper() + notice.kind[1:], _NOTICE_MARKS[notice.kind], f"{words}.")
         for notice in content.attention
+        if (words := sentence(notice.sentence, f"{notice.kind}:")).casefold() not in said
     )
 
 
@@ -92,7 +108,7 @@ def _row(judged: Judged, history: History | None, spark: str) -> Row:
         value=value,
         unit=typeset_unit(found.unit),
         expanded=spread,
-        limit=judged.verdict.limit if judged.verdict else "no limit set",
+        limit=typeset(judged.verdict.limit) if judged.verdict else "no limit set",
         verdict=judged.verdict.conformity if judged.verdict else "\u2013",
         mark=mark_of(judged).replace(" ", "-"),
         state=_state_words(history.course if history else None),
@@ -187,7 +203,7 @@ def _chart_words(history: History) -> str:
 
 def _limit_note(verdict: Verdict) -> str:
     rule = _RULES.get(verdict.rule, verdict.rule)
-    return f"{verdict.limit}, {rule}" + (f"; {verdict.source}" if verdict.source else "")
+    return typeset(f"{verdict.limit}, {rule}" + (f"; {verdict.source}" if verdict.source else ""))
 
 
 def _sureness(found: Measurement, verdict: Verdict) -> str:
@@ -204,7 +220,9 @@ def _sureness(found: Measurement, verdict: Verdict) -> str:
         said = "just beyond the limit" if by_nothing else f"beyond the limit by {with_unit(shown, found.unit)}"
         said += f", with an expanded uncertainty of {with_unit(spread, found.unit)}" if spread else ""
     if verdict.probability is not None:
-        said += f"{'; ' if said else ''}the probability that it conforms is {plain_number(100 * verdict.probability, 2)} %"
+        percent = 100 * verdict.probability
+        shown = "below 0.1" if percent < 0.1 else plain_number(percent, 2)
+        said += f"{'; ' if said else ''}the probability that it conforms is {shown} %"
     return said
 
 
@@ -229,15 +247,15 @@ def _notes(history: History, shown: Sequence[Picture]) -> tuple[Fact, ...]:
         if sure := _sureness(found, verdict):
             said.append(Fact("Out by", sure))
     if course is not None:
-        said.append(Fact("Control", course.sentence or course.state))
-        said += [Fact("Changed", change.sentence) for change in course.change_points]
+        said.append(Fact("Control", sentence(course.sentence or course.state)))
+        said += [Fact("Changed", sentence(change.sentence)) for change in course.change_points]
         if course.baselines:
             last = course.baselines[-1]
             words = value_words(last.value, COVERAGE_FACTOR * last.standard_uncertainty, history.quantity, found.unit)
             on = f"from {count_of(last.sessions, 'session')}" if last.sessions else "set by hand"
             said.append(Fact("Baseline", f"{words}, {on}, in force since {long_date(last.since)}"))
         if course.forecast is not None:
-            said.append(Fact("Forecast", course.forecast.sentence))
+            said.append(Fact("Forecast", sentence(course.forecast.sentence)))
     if place := _read_in(found, shown):
         said.append(Fact("Read in", place))
     said.append(Fact("Method", f"{found.method}, version {found.method_version}"))
@@ -297,26 +315,45 @@ def _compared(one: Comparison, name: str, figures: Figures) -> Compared:
 
 def _shown(
     picture: Picture, figure: str, title: str, largest_mm: float, figures: Figures, *,
-    window: tuple[float, float] | None = None, remark: str = "",
+    window: tuple[float, float] | None = None, remark: str = "", used_by: Mapping[tuple[str, int], str] = _NOBODY,
 ) -> Shown:  # fmt: skip
     drawn = draw_picture(picture, largest_mm, largest_mm, window)
     figures[figure] = drawn.svg
-    names = ", ".join(f"{entry.number} {entry.name}" for entry in drawn.key)
+    entries = [
+        (entry.number, _REGIONS.get(entry.name, entry.name), used_by.get((entry.name, picture.slice), ""))
+        for entry in drawn.key
+    ]
+    names = ", ".join(f"{number} {name}" for number, name, _ in entries)
     return Shown(
         title=clipped(title, 120),
         figure=figure,
         description=f"Image of slice {picture.slice}: {title}. Regions drawn: {names or 'none'}.",
         width_mm=drawn.width_mm,
         height_mm=drawn.height_mm,
-        key=tuple((entry.number, entry.name) for entry in drawn.key),
+        key=tuple(entries),
         caption=f"Slice {picture.slice}. Grey scale: {drawn.grey_scale}{remark}.",
     )
 
 
+def _used_by(content: ScannerReport) -> dict[tuple[str, int], str]:
+    """Say which quantities of the latest session each region, by name and slice, served."""
+    found: dict[tuple[str, int], list[str]] = {}
+    for session in content.sessions[-1:]:
+        for acquisition in session.acquisitions:
+            for judged in in_order(acquisition.judged):
+                for region in judged.measurement.regions:
+                    titles = found.setdefault((region.name, region.slice), [])
+                    title = about(judged.measurement.quantity).title
+                    if title not in titles:
+                        titles.append(title)
+    return {key: "; ".join(titles) if len(titles) < 4 else f"{len(titles)} quantities" for key, titles in found.items()}
+
+
 def pictures(content: ScannerReport, figures: Figures) -> tuple[Shown, ...]:
     """Draw the images of the latest session, numbered as the notes of the quantities name them."""
+    used_by = _used_by(content)
     return tuple(
-        _shown(picture, f"picture-{number}", f"Image {number}: {picture.title}", _PICTURE_MM, figures)
+        _shown(picture, f"picture-{number}", f"Image {number}: {picture.title}", _PICTURE_MM, figures, used_by=used_by)
         for number, picture in enumerate(content.pictures, start=1)
     )
 
@@ -337,7 +374,9 @@ def happenings(content: ScannerReport) -> tuple[Happening, ...]:
         )
         for letter, event in event_letters(content.events)
     ]
-    rows += [(change.day, Happening("", long_date(change.day), "change found", change.text)) for change in content.changes]
+    rows += [
+        (change.day, Happening("", long_date(change.day), "change found", typeset(change.text))) for change in content.changes
+    ]
     return tuple(row for _, row in sorted(rows, key=lambda pair: pair[0]))
 
 
@@ -386,4 +425,7 @@ def signatures(content: ScannerReport) -> tuple[Happening, ...]:
 
 def causes(content: ScannerReport) -> tuple[Fact, ...]:
     """List what to look at first, with the evidence."""
-    return tuple(Fact(cause.sentence, "; ".join(cause.evidence)) for cause in content.causes)
+    return tuple(
+        Fact(f"{sentence(cause.sentence, 'Look first at')}.", "; ".join(sentence(one) for one in cause.evidence))
+        for cause in content.causes
+    )

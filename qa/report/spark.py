@@ -12,7 +12,7 @@ from qa.report.trend import pieces_of
 
 __all__ = ["SPARK_MM", "draw_spark"]
 
-SPARK_MM = (34.0, 4.6)
+SPARK_MM = (26.0, 4.6)
 _BINS = 90
 
 

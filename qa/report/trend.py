@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from qa.geometry import Floats
 from qa.report.chart import ForecastLine, TrendChart
 from qa.report.marks import MARKS, Mark, add_marks, add_rings
-from qa.report.numbers import MINUS, plain_number, typeset_unit, with_unit
+from qa.report.numbers import MINUS, decimal_places, plain_number, typeset_unit, with_unit
 from qa.report.plot import Plot
 from qa.report.style import (
     BAND,
@@ -100,11 +100,18 @@ def _draw_limits(plot: Plot, chart: TrendChart) -> list[_Label]:
         lines += [plot.at([start, end], limit) for start, end, limit in runs if low <= limit <= high]
         if runs:
             limit = runs[-1][2]
-            beyond = "" if low <= limit <= high else ", off scale"
-            text = f"{words}\n{with_unit(plain_number(limit), chart.unit)}{beyond}"
+            shown = low <= limit <= high
+            number = _limit_number(limit, chart) if shown else plain_number(limit, 4)
+            text = f"{words}\n{with_unit(number, chart.unit)}{'' if shown else ', off scale'}"
             labels.append(_Label((limit - low) / (high - low), text, LIMIT))
     plot.path(lines, edgecolor=LIMIT, linewidth=0.9, linestyle=(0, (5, 2.2)), zorder=2)
     return labels
+
+
+def _limit_number(limit: float, chart: TrendChart) -> str:
+    """Write a limit with one figure more than the values have, and no more than it has itself."""
+    spread = chart.points[-1].expanded
+    return plain_number(round(limit, decimal_places(spread) + 1) if spread > 0 else limit, 10)
 
 
 def _draw_history(plot: Plot, chart: TrendChart) -> list[_Label]:
@@ -210,8 +217,10 @@ def _draw_missing(plot: Plot, chart: TrendChart) -> None:
 
 
 def pieces_of(x: Floats, chart: TrendChart) -> list[NDArray[np.intp]]:
-    """Split sessions where one is missing between two."""
-    gaps = np.flatnonzero(np.diff(x) > chart.every_days + chart.grace_days + 1) + 1
+    """Split sessions where one is missing between two; a phantom scanned in turn with others has its own usual interval."""
+    steps = np.diff(x)
+    usual = max(float(chart.every_days), float(np.median(steps))) if steps.size else 0.0
+    gaps = np.flatnonzero(steps > max(usual + chart.grace_days + 1, 1.4 * usual)) + 1
     return np.split(np.arange(len(x)), gaps)
 
 

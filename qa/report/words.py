@@ -1,10 +1,11 @@
 """Records in words: settings, headers, stretches of days, values with their uncertainty."""
 
+import re
 from datetime import date
 
 from qa.quantities import QUANTITIES, Quantity, Sense
 from qa.records import Measurement, Scanner, Settings
-from qa.report.numbers import COVERAGE_FACTOR, THIN_SPACE, long_date, plain_number, rounded, typeset_unit, with_unit
+from qa.report.numbers import COVERAGE_FACTOR, MINUS, THIN_SPACE, long_date, plain_number, rounded, typeset_unit, with_unit
 
 __all__ = [
     "about",
@@ -13,16 +14,41 @@ __all__ = [
     "day_runs",
     "expanded",
     "header_words",
+    "sentence",
     "settings_words",
+    "typeset",
     "value_words",
 ]
 
 _LONGEST_NAME = 60
+_HYPHEN = re.compile(r"(?<![\w.-])-(?=\d)")
+_ISO_DATE = re.compile(r"\b\d{4}-\d{2}-\d{2}\b")
 
 
 def about(name: str, unit: str = "1") -> Quantity:
     """Look a quantity up; one that this version does not know (an older or newer record) goes under its own name."""
     return QUANTITIES.get(name) or Quantity(name, unit, name.replace("_", " "), Sense.NEAR_NOMINAL)
+
+
+def typeset(text: str) -> str:
+    """Write the ISO dates in a sentence out, 2026-11-23 as 23 Nov 2026, and give its numbers a minus sign."""
+    return _HYPHEN.sub(MINUS, _ISO_DATE.sub(_written_out, text))
+
+
+def _written_out(found: "re.Match[str]") -> str:
+    try:
+        return long_date(date.fromisoformat(found[0]))
+    except ValueError:
+        return found[0]
+
+
+def sentence(text: str, after: str = "") -> str:
+    """Make a sentence of a text: dates written out, without an opening that stands before it already, no stop at its end."""
+    text = typeset(text.strip())
+    if after and text.casefold().startswith(after.casefold()):
+        text = text[len(after) :].lstrip(": ")
+        text = text[:1].upper() + text[1:]
+    return text.rstrip(".")
 
 
 def clipped(text: str, longest: int = _LONGEST_NAME) -> str:

@@ -174,3 +174,27 @@ def test_details_of_another_shape_are_left_alone():
         {"profile": {"position_mm": [1]}},
     ):
         assert maps_of(Measurement("lattice_max", 0.1, "mm", 0.01, "m", 1, details=details), "map-1") is None
+
+
+def test_the_profile_of_a_slice_is_drawn(made):
+    position = [0.1 * n for n in range(-40, 41)]
+    details = {
+        "profile_mm": position,
+        "profile": [1.0 if abs(p) < 2.5 else 0.0 for p in position],
+        "full_width_tenth_maximum_mm": 5.4,
+    }
+    session = made.session(1, made.last_day, {"slice_thickness": ("mm", 5.0, 0.03, 4.3, 5.7, "5.0 ± 0.7 mm")})
+    acquisition = session.acquisitions[0]
+    measurement = dataclasses.replace(acquisition.judged[0].measurement, details=details)
+    judged = (dataclasses.replace(acquisition.judged[0], measurement=measurement),)
+    session = dataclasses.replace(session, acquisitions=(dataclasses.replace(acquisition, judged=judged),))
+    page, figures, _ = lay_out_scanner(made.content([session]))
+    assert page.trends[0].maps[0].caption.endswith("Full width at a tenth of it: 5.4\u2009mm.")
+    assert b"position across the slice, mm" in figures["map-1"]
+
+
+def test_sentences_lose_iso_dates_doubled_openings_and_stops(made):
+    page, _, _ = lay_out_scanner(
+        made.content((), standing="out of limits", standing_sentence="Out of limits: ghosting is 3 %, since 2026-09-07.")
+    )
+    assert page.standing_sentence == "Ghosting is 3 %, since 7 Sep 2026."
