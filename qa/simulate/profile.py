@@ -32,18 +32,15 @@ class Profile:
 
         height, extra = np.asarray(height_mm, dtype=np.float64), np.asarray(extra_mm, dtype=np.float64)
         half = self.width_mm / 2
-        edge = np.hypot(self.edge_mm, extra)
-        if not edge.any():
-            flat: Floats = np.clip((height + half) / self.width_mm, 0.0, 1.0)
-            return flat
+        edge = np.maximum(np.hypot(self.edge_mm, extra), 1e-9)
+        # heights far off are brought near, or the difference of two large numbers would lose its digits
+        near = np.clip(height, -half - 8 * edge, half + 8 * edge)
 
         def integral(a: Floats) -> Floats:
-            grown: Floats = a * ndtr(a) + np.exp(-0.5 * a * a) / math.sqrt(2 * math.pi)
+            grown: Floats = a * ndtr(a) + np.exp(-0.5 * np.minimum(a * a, 1e3)) / math.sqrt(2 * math.pi)
             return grown
 
-        # clipped: far off, the integral is 0 or a itself, and their difference would lose its digits
-        upper, lower = (np.clip((height + side * half) / edge, -40.0, 1e9) for side in (1, -1))
-        rising: Floats = edge / self.width_mm * (integral(upper) - integral(lower))
+        rising: Floats = edge / self.width_mm * (integral((near + half) / edge) - integral((near - half) / edge))
         return np.clip(rising, 0.0, 1.0)
 
     def density(self, height_mm: ArrayLike) -> Floats:

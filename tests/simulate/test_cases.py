@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from qa.phantoms import load_phantom, phantom_names
-from qa.simulate import random_setup, simulate, true_values
+from qa.simulate import Scan, random_setup, simulate, true_values
 from qa.simulate.signals import ghost_regions
 
 
@@ -46,3 +46,34 @@ def test_the_same_chance_draws_the_same_scan():
     assert one.channels == 2
     assert np.array_equal(simulate(one).pixels, simulate(two).pixels)
     assert true_values(one) == true_values(two)
+
+
+@pytest.mark.parametrize("seed", range(10))
+def test_imperfections_in_any_mixture_give_finite_images_and_truths(seed):
+    rng = np.random.default_rng([seed, 20])
+    phantom = load_phantom(phantom_names()[seed % len(phantom_names())])
+    setup = random_setup(
+        rng,
+        phantom,
+        ghost_shift=float(rng.choice([0.5, 0.3, 0.1])),
+        ghost_phase_deg=float(rng.uniform(0, 360)),
+        partial_fourier=float(rng.choice([1.0, 0.75, 0.5])),
+        acquired_fraction=float(rng.choice([1.0, 0.7])),
+        apodisation=str(rng.choice(["none", "hann"])),
+        noise_correlation=float(rng.choice([0.0, 0.4])),
+        nonlinearity_x_mm=float(rng.uniform(-3, 3)),
+        nonlinearity_y_mm=float(rng.uniform(-3, 3)),
+        off_resonance_hz=float(rng.uniform(-300, 300)),
+        profile_edge_mm=float(rng.choice([0.0, 0.5])),
+        air_bubble_mm=float(rng.choice([0.0, 8.0])),
+        filling_port_mm=(12.0, float(rng.choice([0.0, 8.0]))),
+        coil=str(rng.choice(["loops", "polynomial"])),
+        snr=float(rng.choice([3.0, 100.0, math.inf])),
+    )
+    machine = Scan(setup)
+    acquisition = simulate(setup, machine)
+    truths = true_values(setup, machine)
+    assert all(np.isfinite(series.pixels).all() for series in acquisition.repeats)
+    assert all(math.isfinite(truth.value) for truth in truths.values())
+    assert acquisition.pixels.max() > setup.level / 2
+    assert {"centre_frequency", "setup_offset", "length_0"} <= set(truths)

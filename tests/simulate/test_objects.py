@@ -116,6 +116,12 @@ def test_the_slice_profile_has_the_width_it_says(edge):
     np.testing.assert_allclose(profile.cumulative(heights), summed, atol=3e-4)
 
 
+@pytest.mark.parametrize("extra", [0.0, 1e-18, 1e-9, 0.3, 50.0])
+def test_the_cumulative_profile_runs_from_nothing_to_all(extra):
+    profile = Profile(5.0)
+    assert profile.cumulative([-1e6, -1e3, 0.0, 1e3, 1e6], extra) == pytest.approx([0, 0, 0.5, 1, 1], abs=1e-7)
+
+
 @pytest.mark.parametrize("count", [3, 8, 96])
 def test_quadrature_over_the_profile_is_exact_to_second_order(count):
     heights, weights = Profile(5.0).nodes(count)
