@@ -64,6 +64,7 @@ def ghosting(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measur
     amplitude, u_amplitude = _amplitude(powers, encoded or axis, signal)
     details = {
         **{name: m.value for name, m in means.items()},
+        "standard_uncertainties": {name: m.u for name, m in means.items()},
         "signal": signal,
         "phase_encode": encoded,
         "ghost_direction": axis if seen else None,
