@@ -56,7 +56,7 @@ def measure(
         if not refused and not quiet:
             say(f"{', '.join(map(str, paths))}: no DICOM image was found: give a folder that holds a phantom's series.")
         finish(ExitStatus.NEEDS_A_PERSON)
-    if refused or any(not outcome.measurements for outcome in outcomes):
+    if refused or any(outcome.pose is None for outcome in outcomes):
         finish(ExitStatus.NEEDS_A_PERSON)
 
 
