@@ -231,7 +231,6 @@ class Expectation(_Table):
     series: Pattern = "*"
     patient_id: Annotated[Pattern, AfterValidator(_patient_pattern)]
     settings: Annotated[Mapping[str, Any], BeforeValidator(_settings), Field(default_factory=dict)]
-    optional: Switch = False
 
 
 class Mail(_Table):
@@ -279,7 +278,6 @@ class ReportSettings(_Table):
 
     page: Literal["A4", "Letter"] = "A4"
     weeks: Annotated[int, Field(strict=True, ge=1, le=1040)] = 52
-    signatures: Annotated[int, Field(strict=True, ge=0, le=4)] = 1
 
 
 class SiteFile(_Table):

@@ -86,11 +86,6 @@ class Record(Decisions):
             path = connection.execute(select(files.c.path).where(files.c.sha256 == sha256)).scalar()
         return None if path is None else PurePath(path)
 
-    def known_refusals(self, sha256s: Iterable[str]) -> set[str]:
-        """Tell which of these files have been refused before."""
-        with self._database.reading() as connection:
-            return queries.known(connection, refusals.c.sha256, sha256s)
-
     def store(
         self,
         outcome: Outcome,

@@ -194,7 +194,6 @@ def test_a_refusal_is_recorded_once(record, make):
         ("inbox/b.dcm", "empty", make.now + timedelta(days=2)),
     ]
     assert [r.path for r in record.refusals(since=make.now + timedelta(days=1))] == ["inbox/b.dcm"]
-    assert record.known_refusals(["ee" * 32, "", "aa" * 32]) == {"ee" * 32}
 
 
 def test_a_phantoms_definition_is_kept_once(record, make):
