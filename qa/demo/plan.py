@@ -56,7 +56,7 @@ class DemoScanner:
 
 
 SCANNERS = (
-    DemoScanner("north-3t", "NORTH3T", "40071", "Model 7", 3.0, 8, 210.0, 14.0, "sphere-170", ("sectioned-190",), 7),
+    DemoScanner("north-3t", "NORTH3T", "40071", "Model 7", 3.0, 4, 210.0, 14.0, "sphere-170", ("sectioned-190",), 7),
     DemoScanner("south-1t5", "SOUTH15", "20418", "Model 4", 1.5, 1, 150.0, 6.0, "sectioned-190", ("sphere-any",), 8),
     DemoScanner("west-3t", "WEST3T", "40093", "Model 7", 3.0, 4, 190.0, 15.0, "cylinder-200", ("lattice-200",), 9),
 )
@@ -166,7 +166,7 @@ def _scan(scanner: DemoScanner, week: int, phantom: str, position: int) -> Scan:
         "snr": scanner.snr * (1 + 0.008 * _jitter(seed, 1)),
         "shading_percent": scanner.shading_percent,
         "field_strength_T": scanner.field_strength_T,
-        "frequency_offset_ppm": 2.0 - 0.012 * week + 0.02 * _jitter(seed, 2),
+        "frequency_offset_ppm": 2.0 + 0.02 * _jitter(seed, 2),
         "ghost_percent": 0.35 * (1 + 0.1 * _jitter(seed, 3)),
         "centre_patient": (1.2 * _jitter(seed, 4), 1.2 * _jitter(seed, 5), 0.4 * _jitter(seed, 6)),
         "rotation_deg": 0.4 * _jitter(seed, 7),
@@ -242,7 +242,6 @@ phantom = "{name}"
 series = "QA {name}*"
 patient_id = "QA-*"
 settings = {{ repetition_ms = 500, echo_ms = 20, slice_thickness_mm = 5.0 }}
-optional = {"false" if name == scanner.weekly else "true"}
 """
             for name in (scanner.weekly, *scanner.monthly)
         )

@@ -28,6 +28,8 @@ from qa.report.content import (
     ScannerReport,
     SignOff,
 )
+from qa.report.numbers import long_date
+from qa.report.words import count_of
 from qa.site import SiteScanner
 from qa.version import __version__
 
@@ -118,7 +120,7 @@ def scanner_report(department: Department, scanner: SiteScanner, first: date, la
         first_day=first,
         last_day=last,
         standing=assessment.standing,
-        standing_sentence=assessment.sentence,
+        standing_sentence=_standing_sentence(assessment),
         sessions=sessions,
         software_version=__version__,
         limits_version=in_force.version if in_force else 0,
@@ -152,6 +154,18 @@ def scanner_report(department: Department, scanner: SiteScanner, first: date, la
         next_due=assessment.due,
         page_size=site.report.page,
     )
+
+
+def _standing_sentence(assessment: Assessment) -> str:
+    """Say the standing in one sentence; what is out and since when stands in the notices below it."""
+    last = assessment.last_session
+    when = "" if last is None else f" in the session of {long_date(last)}"
+    if assessment.standing == "out of limits":
+        return f"{count_of(len(assessment.out), 'quantity is', 'quantities are')} out of limits{when}."
+    if assessment.standing == "drifting":
+        named = count_of(len(assessment.drifting), "quantity is", "quantities are")
+        return f"Everything is within its limits{when}, but {named} on the way out."
+    return assessment.sentence if assessment.standing == "overdue" else f"Everything is within its limits{when}."
 
 
 def _report_before(reports: Path, name: str, as_of: date) -> date | None:
@@ -242,7 +256,7 @@ def _number(value: Any) -> float | None:  # noqa: ANN401 - a numpy scalar
 def _control_sentence(state: QuantityState) -> str:
     if state.control == "out of control":
         since = "" if state.alarm_since is None else f" since {state.alarm_since.isoformat()}"
-        return f"Out of control{since}: {'; '.join(state.rules)}."
+        return f"Out of control{since}: {'; '.join(state.rules)}"
     if state.control == "still learning":
         return "Still learning what is usual: too few sessions since the charts began."
     return "In control."
