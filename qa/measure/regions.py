@@ -161,10 +161,10 @@ def _uniform_section(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> 
     heights = _heights(acquisition, pose, phantom)
     if not phantom.sections:
         return min(pose.sections, key=lambda s: abs(heights[s.slice_index])), phantom.body.region_percent
-    if pose.u_centre_mm[2] is None:
-        return "the heights of the slices in the phantom are not known, so a uniform slice cannot be told"
     lean = math.radians(pose.tilt_deg)
     half = (acquisition.settings.slice_thickness_mm or 0.0) / 2 * math.cos(lean)
+    if pose.u_centre_mm[2] is None and _ever_uniform(phantom, half):
+        return "the heights of the slices in the phantom are not known, so a uniform slice cannot be told"
     found = []
     for section in pose.sections:
         z = heights[section.slice_index]
@@ -178,6 +178,12 @@ def _uniform_section(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> 
         return "no slice shows nothing but fill"
     _, section, share = min(found, key=lambda f: f[0])
     return section, share
+
+
+def _ever_uniform(phantom: Phantom, half_mm: float) -> bool:
+    """Tell whether a slice could lie anywhere in the phantom and show nothing but fill."""
+    end = int((phantom.extent_mm or 0.0) / 2 - half_mm)
+    return any(phantom.is_uniform(z - half_mm, z + half_mm) for z in range(-end, end + 1))
 
 
 def rectangle(name: str, slice_index: int, x_mm: tuple[float, float], y_mm: tuple[float, float]) -> Region:
