@@ -22,6 +22,7 @@ __all__ = ["Mosaic", "cut", "text_fields", "tiles_of"]
 _HEADER, _TEXT_HEADER = "SIEMENS MR HEADER", "SIEMENS CSA HEADER"
 _MOST_FIELDS = 512
 _MOST_TILES = 1024
+_SMALLEST_STEP_MM, _LARGEST_STEP_MM = 0.1, 1000.0
 
 
 @dataclass(frozen=True)
@@ -51,14 +52,14 @@ def tiles_of(get: Elements, whole: Plane) -> Mosaic | None:
     if whole.shape[0] % side or whole.shape[1] % side:
         raise RefusalError(f"it is a mosaic of {count} slices whose size is not a multiple of {side} tiles")
     shape = whole.shape[0] // side, whole.shape[1] // side
-    step = get.positive(0x00180088)
-    if step is None and count > 1:
-        raise RefusalError("it is a mosaic without Spacing Between Slices: where its slices lie is not known")
+    step = get.number(0x00180088) or 0.0
+    if count > 1 and not _SMALLEST_STEP_MM <= step <= _LARGEST_STEP_MM:
+        raise RefusalError("it is a mosaic without a usable Spacing Between Slices: where its slices lie is not known")
     direction, remarks = _direction(fields, whole)
     # The whole image's corner lies farther out than a tile's by half the difference of their sizes.
     x_mm = (whole.shape[1] - shape[1]) / 2 * whole.pixel_mm[1]
     y_mm = (whole.shape[0] - shape[0]) / 2 * whole.pixel_mm[0]
-    heights = direction * (step or 0.0) * np.arange(count)
+    heights = direction * (step if count > 1 else 0.0) * np.arange(count)
     corners = whole.to_patient(x_mm, y_mm, heights).tolist()
     planes = tuple(replace(whole, position_patient=tuple(corner), shape=shape) for corner in corners)
     return Mosaic(side, planes, remarks)

@@ -2,14 +2,15 @@
 
 import hashlib
 from collections import defaultdict
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import partial
 from pathlib import Path
+from typing import TypeVar
 
 import numpy as np
 
-from qa.dicom.elements import parse, quietly
+from qa.dicom.elements import File, parse, quietly
 from qa.dicom.files import Found, find, read_bytes
 from qa.dicom.frames import Frame
 from qa.dicom.group import group
@@ -19,7 +20,7 @@ from qa.dicom.images import Decode, frames_of
 from qa.dicom.isolated import IsolatedDecoder
 from qa.dicom.pixels import decode
 from qa.dicom.refusal import RefusalError
-from qa.dicom.stack import stack
+from qa.dicom.stack import Stacked, stack
 from qa.errors import EvenfieldError
 from qa.records import Reading, Refused, SourceFile
 
@@ -29,6 +30,7 @@ UNFORESEEN = "it could not be read for a reason this program does not know"
 """How the reason begins where reading a file failed in a way that was not thought of."""
 
 Admit = Callable[[Header], str | None]
+T = TypeVar("T")
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,33 +64,72 @@ def read_files(
             if progress is not None:
                 progress(count, len(files))
     singles, doubles = _each_once(taken)
-    stacks, left_out = stack([frame for each in singles for frame in each.frames], lost)
-    return Reading(group(stacks), tuple(sorted([*refused, *doubles, *left_out], key=lambda each: str(each.path))))
+    for series_uid, double in doubles:
+        refused.append(double)
+        lost[series_uid].append(double)
+    stacks, left_out = _stacked(singles, lost)
+    return Reading(group(stacks), tuple(sorted([*refused, *left_out], key=lambda each: str(each.path))))
 
 
 def _read_one(file: Found, admit: Admit, decode_pixels: Decode) -> tuple[_Taken | Refused | None, str]:
     """Read one file; the Series Instance UID goes with it where the file is of an admitted series."""
-    series_uid = ""
+    headed = _guarded(lambda: _head(file))
+    if headed is None:
+        return None, ""
+    if isinstance(headed, str):
+        return Refused(file.path, headed), ""
+    parsed, header = headed
+    reason = unmeasurable(header) or _without_identifiers(header) or admit(header)
+    if reason is not None:
+        return Refused(file.path, reason), ""
+    source = SourceFile(file.path, header.sop_instance_uid, header.sha256)
+    frames = _guarded(lambda: tuple(frames_of(parsed, header, source, decode_pixels)))
+    if isinstance(frames, str):
+        return Refused(file.path, frames), header.series_instance_uid
+    return _Taken(source, header.series_instance_uid, frames), header.series_instance_uid
+
+
+def _head(file: Found) -> tuple[File, Header] | None:
+    """Read a file's bytes and header; None where it is to be passed over in silence."""
+    content = read_bytes(file)
+    if content is None:
+        return None
+    parsed = parse(content)
+    if parsed.is_directory and not file.asked_for:
+        return None
+    return parsed, header_of(parsed, file.path, hashlib.sha256(content).hexdigest())
+
+
+def _guarded(task: Callable[[], T]) -> T | str:
+    """Do what a file's content could make fail; give its result, or the reason to refuse the file."""
     try:
-        content = read_bytes(file)
-        parsed = None if content is None else parse(content)
-        if content is None or parsed is None or (not file.asked_for and parsed.is_directory):
-            return None, ""
-        header = header_of(parsed, file.path, hashlib.sha256(content).hexdigest())
-        reason = unmeasurable(header) or _without_identifiers(header) or admit(header)
-        if reason is None:
-            series_uid = header.series_instance_uid
-            source = SourceFile(file.path, header.sop_instance_uid, header.sha256)
-            return _Taken(source, series_uid, tuple(frames_of(parsed, header, source, decode_pixels))), series_uid
+        return task()
     except RefusalError as refusal:
-        reason = str(refusal)
+        return str(refusal)
     except (MemoryError, RecursionError):
-        reason = "it asks for more memory than a phantom image needs"
+        return "it asks for more memory than a phantom image needs"
     except EvenfieldError:
         raise
     except Exception as error:  # noqa: BLE001 (the last net: one file, whatever it holds, must not end the run)
-        reason = f"{UNFORESEEN} ({type(error).__name__})"
-    return Refused(file.path, reason), series_uid
+        return f"{UNFORESEEN} ({type(error).__name__})"
+
+
+def _stacked(taken: Sequence[_Taken], lost: Mapping[str, Sequence[Refused]]) -> tuple[list[Stacked], list[Refused]]:
+    """Stack each DICOM series by itself."""
+    by_series: dict[tuple[str, str], list[_Taken]] = defaultdict(list)
+    for each in taken:
+        by_series[each.frames[0].origin.study_instance_uid, each.series_uid].append(each)
+    stacks: list[Stacked] = []
+    refused: list[Refused] = []
+    for (_, uid), members in by_series.items():
+        frames = [frame for each in members for frame in each.frames]
+        outcome = _guarded(partial(stack, frames, lost.get(uid, ())))
+        if isinstance(outcome, str):
+            refused += [Refused(each.source.path, outcome) for each in members]
+        else:
+            stacks += outcome[0]
+            refused += outcome[1]
+    return stacks, refused
 
 
 def _without_identifiers(header: Header) -> str | None:
@@ -99,13 +140,13 @@ def _without_identifiers(header: Header) -> str | None:
     return None
 
 
-def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[Refused]]:
+def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[tuple[str, Refused]]]:
     """Take each SOP instance once: copies of one image are named, and images that differ under one identifier all refused."""
     by_uid: dict[str, list[_Taken]] = defaultdict(list)
     for each in taken:
         by_uid[each.source.sop_instance_uid].append(each)
     singles: list[_Taken] = []
-    refused: list[Refused] = []
+    refused: list[tuple[str, Refused]] = []
     for same in by_uid.values():
         first, *others = same
         if all(_is_copy(first, each) for each in others):
@@ -116,7 +157,7 @@ def _each_once(taken: Sequence[_Taken]) -> tuple[list[_Taken], list[Refused]]:
         else:
             names = " and ".join(each.source.path.name for each in same[:3])
             reason = f"different images share one SOP Instance UID ({names}): keep the right one"
-            refused += [Refused(each.source.path, reason) for each in same]
+            refused += [(each.series_uid, Refused(each.source.path, reason)) for each in same]
     return singles, refused
 
 

@@ -2,7 +2,7 @@
 
 import math
 from collections import Counter, defaultdict
-from collections.abc import Callable, Hashable, Mapping, Sequence
+from collections.abc import Callable, Hashable, Sequence
 from dataclasses import dataclass, replace
 from statistics import median, median_low
 
@@ -32,36 +32,32 @@ class Stacked:
     slopes: tuple[float, ...]
 
 
-def stack(frames: Sequence[Frame], lost: Mapping[str, Sequence[Refused]]) -> tuple[list[Stacked], list[Refused]]:
-    """Sort the frames of any number of DICOM series into stacks of parallel slices of one kind, echo and time.
+def stack(frames: Sequence[Frame], lost: Sequence[Refused] = ()) -> tuple[list[Stacked], list[Refused]]:
+    """Sort the frames of one DICOM series into stacks of parallel slices of one kind, echo and time.
 
     Parameters
     ----------
     frames : sequence of Frame
         In any order.
-    lost : mapping
-        By Series Instance UID, files of the series that were refused; its stacks say so.
+    lost : sequence of Refused
+        Files of the series that were refused; its stacks say so.
 
     Returns
     -------
     stacks, left_out
         `left_out` are files that hold a second image where the series has one already.
     """
-    by_series: dict[tuple[str, str], list[Frame]] = defaultdict(list)
-    for frame in sorted(frames, key=lambda each: each.order):
-        by_series[frame.origin.study_instance_uid, frame.origin.series_instance_uid].append(frame)
     stacks: list[Stacked] = []
     left_out: list[Refused] = []
-    for (_, uid), members in by_series.items():
-        lots = _lots(members)
-        remarks = [*_mixed(lots), *_lost(lost.get(uid, ()))]
-        for lot in lots:
-            parts, extra = _repeats(lot)
-            left_out += [Refused(each.origin.source.path, _extra_reason(each)) for each in extra if each.number == 0]
-            said = remarks + [_extra_remark(each) for each in extra]
-            places = max((_places(part) for part in parts), key=len)
-            for position, part in enumerate(parts, start=1):
-                stacks.append(_stacked(part, position, [*said, *_fewer(_places(part), places, len(parts))]))
+    lots = _lots(sorted(frames, key=lambda each: each.order))
+    remarks = [*_mixed(lots), *_lost(lost)]
+    for lot in lots:
+        parts, extra = _repeats(lot)
+        left_out += [Refused(each.origin.source.path, _extra_reason(each)) for each in extra if each.number == 0]
+        said = remarks + [_extra_remark(each) for each in extra]
+        places = max((_places(part) for part in parts), key=len)
+        for position, part in enumerate(parts, start=1):
+            stacks.append(_stacked(part, position, [*said, *_fewer(_places(part), places, len(parts))]))
     return stacks, left_out
 
 

@@ -155,3 +155,11 @@ def test_the_loggers_are_given_back_as_they_were(write_series):
 def test_what_is_no_mr_image_is_refused(tmp_path, make, changed, reason):
     make.save(make.image(**changed), tmp_path / "a.dcm")
     assert [each.reason for each in read(tmp_path).refused] == [reason]
+
+
+def test_a_failure_of_the_one_who_admits_is_not_taken_for_a_bad_file(write_series):
+    def admit(header):
+        raise ValueError(f"the record of {header.station} is gone")
+
+    with pytest.raises(ValueError, match="the record of NORTH3T is gone"):
+        read(write_series(1), admit=admit)

@@ -112,7 +112,8 @@ def test_time_points_of_a_mosaic_series_are_repeats_and_reversed_phase_encoding_
     ("change", "reason"),
     [
         (lambda d: d.__delitem__((0x0019, 0x100A)), "it is a mosaic that does not say how many slices it holds"),
-        (lambda d: d.__delitem__("SpacingBetweenSlices"), "it is a mosaic without Spacing Between Slices"),
+        (lambda d: d.__delitem__("SpacingBetweenSlices"), "it is a mosaic without a usable Spacing Between Slices"),
+        (lambda d: d.__setattr__("SpacingBetweenSlices", "1e308"), "it is a mosaic without a usable Spacing Between Slices"),
         (lambda d: d[0x0019, 0x100A].__setattr__("value", 50), "it is a mosaic of 50 slices whose size is not a multiple"),
         (lambda d: d[0x0019, 0x100A].__setattr__("value", 60000), "it is a mosaic that does not say how many slices it holds"),
     ],
@@ -135,3 +136,20 @@ def test_text_headers_cut_anywhere_give_what_is_whole(make):
     for end in range(len(raw)):
         assert text_fields(raw[:end]).items() <= whole.items()
     assert text_fields(b"") == {}
+
+
+def test_a_legacy_converted_object_keeps_its_settings_in_unassigned_attributes(tmp_path, make):
+    """PS3.3, C.7.6.16.2.25: what a classic image said and no functional group holds stands there as it was."""
+    dataset = make.enhanced(PLACES, make.pattern((3, 24, 20)))
+    dataset.SOPClassUID = dataset.file_meta.MediaStorageSOPClassUID = "1.2.840.10008.5.1.4.1.1.4.4"
+    shared = dataset.SharedFunctionalGroupsSequence[0]
+    del shared.MRTimingAndRelatedParametersSequence, shared.MRFOVGeometrySequence
+    rest = make.item(RepetitionTime=750, FlipAngle=60, InPlanePhaseEncodingDirection="ROW")
+    shared.UnassignedSharedConvertedAttributesSequence = [rest]
+    for number, group in enumerate(dataset.PerFrameFunctionalGroupsSequence):
+        del group.MREchoSequence, group.MRImageFrameTypeSequence
+        group.UnassignedPerFrameConvertedAttributesSequence = [make.item(EchoTime=30, InstanceNumber=number)]
+    dataset.ImageType = ["ORIGINAL", "PRIMARY", "M", "ND"]
+    make.save(dataset, tmp_path / "legacy.dcm")
+    settings = only(read(tmp_path)).settings
+    assert (settings.repetition_ms, settings.flip_deg, settings.echo_ms, settings.phase_encode) == (750, 60, 30, "row")

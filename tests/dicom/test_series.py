@@ -301,7 +301,12 @@ def test_files_that_differ_under_one_identifier_are_all_refused(write_series, ma
     reading = read(folder)
     assert [each.path.name for each in reading.refused] == ["002.dcm", "other.dcm"]
     assert all("share one SOP Instance UID (002.dcm and other.dcm)" in each.reason for each in reading.refused)
-    assert reading.acquisitions[0].pixels.shape[0] == 2
+    series = reading.acquisitions[0].first
+    assert series.pixels.shape[0] == 2
+    assert [remark[:49] for remark in series.remarks[1:]] == [
+        "002.dcm of its DICOM series was refused: differen",
+        "other.dcm of its DICOM series was refused: differ",
+    ]
 
 
 def test_geometries_of_one_series_are_kept_apart_and_named(tmp_path, make):
