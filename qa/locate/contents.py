@@ -26,6 +26,7 @@ __all__ = ["refine"]
 
 _ANGLES = 128
 _RINGS = 14
+_INNER, _OUTER = 0.1, 0.94
 _STEP_MM = 2.0
 _FAR_MM = 40.0
 _NEAR_MM = 8.0
@@ -177,7 +178,7 @@ def _ring_places(radii_mm: Floats) -> tuple[Floats, Floats]:
 def _expected_rings(phantom: Phantom, thickness_mm: float) -> tuple[Floats, NDArray[np.complex64], Floats]:
     """Radii, and for heights at steps along the whole body the Fourier series of each ring's darkness, and its energy."""
     assert phantom.radius_mm is not None  # noqa: S101 - a body with sections is a cylinder
-    radii: Floats = np.linspace(0.1, 0.94, _RINGS) * phantom.radius_mm
+    radii: Floats = np.linspace(_INNER, _OUTER, _RINGS) * phantom.radius_mm
     half = (phantom.extent_mm or 0.0) / 2
     count = int(half / _STEP_MM)
     heights: Floats = np.arange(-count, count + 1).astype(np.float64) * _STEP_MM
@@ -205,18 +206,16 @@ class _Rings:
         X, Y = _ring_places(radii)
         slices = sorted({s.slice_index for s in pose.sections})
         plane = acquisition.planes[0]
-        values: Floats = np.empty((len(slices), _RINGS, _ANGLES))
-        heights = np.empty(len(slices))
-        for n, index in enumerate(slices):
-            view = SliceView.of(acquisition.planes[index], pose)
-            places = view.to_image(X, Y)
-            columns, rows = (
-                np.clip(np.round(places[..., k] / plane.pixel_mm[1 - k]).astype(np.intp), 0, plane.shape[1 - k] - 1)
-                for k in (0, 1)
-            )
-            values[n] = acquisition.pixels[index][rows, columns]
-            heights[n] = float(view.height(0.0, 0.0))
-        dark = 1 - values / _level(values, X / radii[-1], Y / radii[-1])
+        views = [SliceView.of(acquisition.planes[index], pose) for index in slices]
+        heights = np.array([float(view.height(0.0, 0.0)) for view in views])
+        first = views[0].to_image(X, Y)
+        moves = np.array([view.to_image(np.zeros(()), np.zeros(())) for view in views])
+        places = first + (moves - moves[0])[:, None, None]
+        columns, rows = (
+            np.clip((places[..., k] / plane.pixel_mm[1 - k] + 0.5).astype(np.intp), 0, plane.shape[1 - k] - 1) for k in (0, 1)
+        )
+        values = acquisition.pixels[np.array(slices)[:, None, None], rows, columns].astype(np.float64)
+        dark = 1 - values / _level(values)
         dark = np.clip(dark, -0.5, 1.0) * np.sqrt(radii)[:, None]
         return cls(np.fft.rfft(dark, axis=-1).astype(np.complex64), float(np.sum(dark**2)), heights, thickness)
 
@@ -257,18 +256,28 @@ def _vertex(three: Floats) -> float:
     return float(np.clip(0.5 * (three[0] - three[2]) / bend, -0.5, 0.5)) if bend < 0 else 0.0
 
 
-def _level(values: Floats, x: Floats, y: Floats) -> Floats:
+@lru_cache(maxsize=1)
+def _surface_terms() -> Floats:
+    """Powers of x and y up to the fourth (samples, 15) at the rings' samples, in units of the outermost ring."""
+    X, Y = _ring_places(np.linspace(_INNER, _OUTER, _RINGS) / _OUTER)
+    powers: Floats = np.stack([X ** (n - k) * Y**k for n in range(5) for k in range(n + 1)], axis=-1).reshape(-1, 15)
+    return powers
+
+
+def _level(values: Floats) -> Floats:
     """Signal of the fill on the rings, (S, rings, angles): one smooth surface for all slices, with a gain for each."""
-    usual = np.percentile(values, 70, axis=0)
-    terms = np.stack([x ** (n - k) * y**k for n in range(5) for k in range(n + 1)], axis=-1).reshape(-1, 15)
-    flat = usual.reshape(-1)
-    kept = flat > 0.7 * np.median(flat)
+    rank = int(0.7 * (len(values) - 1) + 0.5)
+    usual = np.partition(values, rank, axis=0)[rank]
+    terms, flat = _surface_terms(), usual.reshape(-1)
+    middle = float(np.median(flat))
+    kept = flat > 0.7 * middle
     for _ in range(3):
-        surface = terms @ np.linalg.lstsq(terms[kept], flat[kept], rcond=None)[0]
+        some = terms[kept]
+        surface = terms @ np.linalg.solve(some.T @ some + 1e-9 * np.eye(15), some.T @ flat[kept])
         kept = flat > 0.9 * surface
         if kept.sum() < 40:
             break
-    surface = np.maximum(surface.reshape(usual.shape), 0.1 * float(np.median(flat)) + 1e-9)
-    gain = np.median(values / surface, axis=(1, 2))
+    surface = np.maximum(surface.reshape(usual.shape), 0.1 * middle + 1e-9)
+    gain = np.median((values / surface).reshape(len(values), -1)[:, ::4], axis=1)
     level: Floats = surface * np.maximum(gain, 1e-6)[:, None, None]
     return level

@@ -4,7 +4,7 @@ A first look finds them to about a pixel (`find_marks`); a fit of the mark's own
 round each one finds its centre to hundredths of a pixel (`fit_marks`).
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,10 +17,11 @@ from qa.phantoms import Lattice, Rods
 
 __all__ = ["Fitted", "find_marks", "fit_marks"]
 
-_BLURS = ((1.0, 0.1), (1.1, 1.0), (1.0, 1.8), (1.3, 0.1), (1.3, 1.3), (1.7, 0.2))
-"""Spacing and box, in pixels, among which the image's own blur is told: cut off sharply, averaged, filtered, zero filled."""
+_BLURS = ((1.0, 0.1), (1.1, 1.0), (1.4, 0.8))
+"""Spacing and box, in pixels, among which the image's own blur is told: sharp, averaged over a pixel, or zero filled."""
 _STEPS = 4
-_TRIAL = 8
+_TRIAL = 6
+_SETTLED_PX = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -176,7 +177,10 @@ def _shape(
 
 @dataclass(frozen=True, eq=False)
 class _Patches:
-    """Pixels round each mark: values (N, P), in-plane places from the patch's own middle, and the weight's reach."""
+    """Pixels round each mark: values (N, P), in-plane places (1, P) from the patch's own middle, and the weight's reach.
+
+    `kept` tells which pixels of a rectangle of `shape` they are.
+    """
 
     values: Floats
     x_mm: Floats
@@ -186,6 +190,7 @@ class _Patches:
     window_mm: float
     soft_mm: float
     inside: NDArray[np.bool_]
+    kept: NDArray[np.intp]
     shape: tuple[int, int]
 
     @property
@@ -196,31 +201,37 @@ class _Patches:
     @classmethod
     def cut(cls, image: NDArray[np.floating], view: SliceView, places: Floats, window_mm: float) -> "_Patches":
         rows_mm, columns_mm = view.plane.pixel_mm
-        half = [int(np.ceil(window_mm / mm)) + 1 for mm in (rows_mm, columns_mm)]
-        down, across = (np.arange(-h, h + 1) for h in half)
+        soft = max(rows_mm, columns_mm)
+        down, across = (np.arange(-h, h + 1) for h in (int(np.ceil(window_mm / mm)) + 1 for mm in (rows_mm, columns_mm)))
+        y, x = (v.ravel() for v in np.meshgrid(down * rows_mm, across * columns_mm, indexing="ij"))
+        kept = np.flatnonzero(np.hypot(x, y) < window_mm + 1.2 * soft)
         row, column = np.round(places[:, 1] / rows_mm).astype(np.intp), np.round(places[:, 0] / columns_mm).astype(np.intp)
-        i, j = row[:, None, None] + down[:, None], column[:, None, None] + across[None, :]
+        i, j = row[:, None] + np.repeat(down, len(across))[kept], column[:, None] + np.tile(across, len(down))[kept]
         height, width = image.shape
-        inside = ((i >= 0) & (i < height)).all(axis=(1, 2)) & ((j >= 0) & (j < width)).all(axis=(1, 2))
-        values = image[np.clip(i, 0, height - 1), np.clip(j, 0, width - 1)].reshape(len(places), -1).astype(np.float64)
-        y, x = (v.reshape(1, -1) for v in np.broadcast_arrays(down[:, None] * rows_mm, across[None, :] * columns_mm))
+        inside = ((i >= 0) & (i < height) & (j >= 0) & (j < width)).all(axis=1)
+        values = image[np.clip(i, 0, height - 1), np.clip(j, 0, width - 1)].astype(np.float64)
         middle = np.stack([column * columns_mm, row * rows_mm], axis=1)
         return cls(
-            values, x, y, places - middle, middle, window_mm, max(view.plane.pixel_mm), inside, (len(down), len(across))
+            values=values,
+            x_mm=x[None, kept],
+            y_mm=y[None, kept],
+            start_mm=places - middle,
+            middle_mm=middle,
+            window_mm=window_mm,
+            soft_mm=soft,
+            inside=inside,
+            kept=kept,
+            shape=(len(down), len(across)),
         )
 
     def some(self, which: NDArray[np.intp]) -> "_Patches":
         """Return a part of the marks."""
-        return _Patches(
-            self.values[which],
-            self.x_mm,
-            self.y_mm,
-            self.start_mm[which],
-            self.middle_mm[which],
-            self.window_mm,
-            self.soft_mm,
-            self.inside[which],
-            self.shape,
+        return replace(
+            self,
+            values=self.values[which],
+            start_mm=self.start_mm[which],
+            middle_mm=self.middle_mm[which],
+            inside=self.inside[which],
         )
 
 
@@ -249,10 +260,11 @@ def _fit(patches: _Patches, shape: Shape, steps: int) -> _Fit:
     """Gauss-Newton on level (1 + slopes) (1 - depth shape), all marks at once."""
     values = patches.values
     centre = patches.start_mm.copy()
-    level = np.maximum(np.percentile(values, 80, axis=1), 1e-9)
+    level = np.maximum(0.95 * values.max(axis=1), 1e-9)
     slopes = np.zeros((len(values), 2))
     depth = np.full(len(values), 0.9)
     limit = 0.7 * patches.soft_mm
+    design = np.empty((len(values), 6, values.shape[1]))
     for _ in range(steps):
         x, y = patches.x_mm - centre[:, :1], patches.y_mm - centre[:, 1:]
         weight = np.clip((patches.window_mm - np.hypot(x, y)) / patches.soft_mm + 0.5, 0.0, 1.0)
@@ -260,7 +272,8 @@ def _fit(patches: _Patches, shape: Shape, steps: int) -> _Fit:
         plane = level[:, None] + slopes[:, :1] * patches.x_mm + slopes[:, 1:] * patches.y_mm
         left = 1 - depth[:, None] * dark
         steep = plane * depth[:, None]
-        design = np.stack([left, patches.x_mm * left, patches.y_mm * left, -plane * dark, steep * by_x, steep * by_y], axis=1)
+        design[:, 0], design[:, 1], design[:, 2] = left, patches.x_mm * left, patches.y_mm * left
+        design[:, 3], design[:, 4], design[:, 5] = -plane * dark, steep * by_x, steep * by_y
         residual = values - plane * left
         weighted = design * weight[:, None, :]
         normal = weighted @ design.transpose(0, 2, 1)
@@ -270,6 +283,8 @@ def _fit(patches: _Patches, shape: Shape, steps: int) -> _Fit:
         level, slopes = level + change[:, 0], slopes + change[:, 1:3]
         depth = np.clip(depth + change[:, 3], 0.02, 2.0)
         centre = centre + np.clip(change[:, 4:], -limit, limit)
+        if np.percentile(np.abs(change[:, 4:]), 95) < _SETTLED_PX * patches.soft_mm:
+            break
     spread = np.linalg.inv(normal)[:, [4, 5], [4, 5]].mean(axis=1)
     return _Fit(centre, depth, level, spread, residual, weight)
 
@@ -284,13 +299,15 @@ def _judge(fit: _Fit, patches: _Patches, section: Rods | Lattice) -> Fitted:
     typical = float(np.median(scatter[good])) if good.any() else 0.0
     good &= scatter < 4 * typical + 0.05 * np.abs(fit.level)
     noise = np.maximum(scatter, 0.7 * typical)
-    factor = _independent(fit, good, patches.shape)
+    factor = _independent(fit, good, patches)
     return Fitted(fit.centre_mm + patches.middle_mm, noise * np.sqrt(fit.spread * factor), fit.depth, good)
 
 
-def _independent(fit: _Fit, good: NDArray[np.bool_], shape: tuple[int, int]) -> float:
+def _independent(fit: _Fit, good: NDArray[np.bool_], patches: _Patches) -> float:
     """Return how many pixels make one independent value: the sum of the residuals' autocorrelation over the nearest lags."""
-    residual = (fit.residual * (fit.weight > 0.5))[good].reshape(-1, *shape)
+    residual = np.zeros((np.count_nonzero(good), patches.shape[0] * patches.shape[1]))
+    residual[:, patches.kept] = (fit.residual * (fit.weight > 0.5))[good]
+    residual = residual.reshape(-1, *patches.shape)
     own = float((residual**2).sum())
     if own <= 0:
         return 1.0

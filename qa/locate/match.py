@@ -18,6 +18,8 @@ _CLEAR = 0.38
 """Share of the pitch within which a mark is taken for the one foretold there."""
 _STRAIGHT = 0.01
 """Scatter, in pitches, below which a lattice is not looked at for bends."""
+_PLAIN = 0.2
+"""Displacement, in pitches, below which the nearest place is taken without growing."""
 _SURE = 0.8
 """Share of the marks that must find a place, or none is believed."""
 
@@ -76,18 +78,24 @@ def match_lattice(
     start = _start(marks)
     if start is None:
         return "the marks in the middle of the image form no square lattice of this pitch"
-    index = _grow(marks, start, lattice)
+    index = _straight(marks, start)
+    if index is None:
+        index = _grow(marks, start, lattice)
     within = np.hypot(*marks.T) < np.hypot(*lattice.T).max() + 0.5
     if (index[within, 0] > _NEVER).sum() < _SURE * within.sum():
         return "the marks in the image follow no square lattice of this pitch, not even a bent one"
     shift = _shift(index, lattice)
-    found = {(int(i), int(j)): k for k, (i, j) in enumerate(index + shift) if i > _NEVER}
-    mark = np.array([found.get((int(i), int(j)), -1) for i, j in lattice], dtype=np.intp)
+    placed = np.flatnonzero(index[:, 0] > _NEVER)
+    where = np.full(_SPAN, -1, dtype=np.intp)
+    where[tuple(np.clip(index[placed] + shift + _MIDDLE, 0, _SPAN[0] - 1).T)] = placed
+    mark = where[tuple((lattice + _MIDDLE).T)]
     foretold = _foretell(index, marks, lattice - shift) @ back.T
     return Matched(mark, foretold * pitch_mm + centre_mm, float(np.degrees(turn)))
 
 
 _NEVER = -1000
+_SPAN = (256, 256)
+_MIDDLE = 128
 
 
 def _turn(marks: Floats, near: float) -> float | None:
@@ -124,6 +132,17 @@ def _terms(places: Floats, order: int) -> Floats:
     x, y = places[..., 0] / 4, places[..., 1] / 4
     terms: Floats = np.stack([x ** (n - b) * y**b for n in range(order + 1) for b in range(n + 1)], axis=-1)
     return terms
+
+
+def _straight(marks: Floats, start: tuple[int, Floats]) -> NDArray[np.intp] | None:
+    """Whole-number places (M, 2) of the marks of a lattice that is hardly bent: the nearest; None where it is not so plain."""
+    seed, place = start
+    index = np.round(marks - marks[seed] + place)
+    design = np.column_stack([np.ones(len(marks)), index])
+    away = marks - design @ np.linalg.lstsq(design, marks, rcond=None)[0]
+    plain = np.abs(index - marks + marks[seed] - place).max() < _PLAIN and np.abs(away).max() < _PLAIN / 2
+    unique = len({(float(i), float(j)) for i, j in index}) == len(index)
+    return index.astype(np.intp) if plain and unique else None
 
 
 def _grow(marks: Floats, start: tuple[int, Floats], lattice: NDArray[np.intp]) -> NDArray[np.intp]:
@@ -200,11 +219,10 @@ def _without_strays(index: NDArray[np.intp], marks: Floats) -> NDArray[np.intp]:
 
 def _shift(index: NDArray[np.intp], lattice: NDArray[np.intp]) -> NDArray[np.intp]:
     """Whole-number shift under which most marks fall on places that the lattice has; none where none is better."""
-    have = {(int(i), int(j)) for i, j in lattice}
-    seen = index[index[:, 0] > _NEVER]
-    best, shift = -1, np.zeros(2, dtype=np.intp)
-    for candidate in sorted(((a, b) for a in (-1, 0, 1) for b in (-1, 0, 1)), key=lambda v: abs(v[0]) + abs(v[1])):
-        inside = sum((int(i) + candidate[0], int(j) + candidate[1]) in have for i, j in seen)
-        if inside > best:
-            best, shift = inside, np.array(candidate, dtype=np.intp)
-    return shift
+    have = np.zeros(_SPAN, dtype=np.bool_)
+    have[tuple((lattice + _MIDDLE).T)] = True
+    seen = index[index[:, 0] > _NEVER] + _MIDDLE
+    candidates = np.array([(0, 0), (1, 0), (-1, 0), (0, 1), (0, -1), (1, 1), (1, -1), (-1, 1), (-1, -1)], dtype=np.intp)
+    inside = [np.count_nonzero(have[tuple(np.clip(seen + c, 0, _SPAN[0] - 1).T)]) for c in candidates]
+    best: NDArray[np.intp] = candidates[int(np.argmax(inside))]
+    return best

@@ -83,15 +83,15 @@ class SliceView:
         along = self.in_plane(X, Y) / np.hypot(X, Y)
         return float(max(abs(along[0]) * self.plane.pixel_mm[1], abs(along[1]) * self.plane.pixel_mm[0]))
 
-    def window(self, x_mm: tuple[float, float], y_mm: tuple[float, float], step: int = 1) -> Window:
-        """Pixels that cover a rectangle of the phantom's frame, those inside the image, every `step`-th of them."""
+    def window(self, x_mm: tuple[float, float], y_mm: tuple[float, float]) -> Window:
+        """Pixels that cover a rectangle of the phantom's frame, those inside the image."""
         corners = self.to_image(np.array([x_mm[0], x_mm[0], x_mm[1], x_mm[1]]), np.array([*y_mm, *y_mm]))
         columns, rows = (
-            slice(max(0, int(np.floor(p.min() / mm))), max(0, min(n, int(np.ceil(p.max() / mm)) + 1)), step)
+            slice(max(0, int(np.floor(p.min() / mm))), max(0, min(n, int(np.ceil(p.max() / mm)) + 1)))
             for p, mm, n in zip(corners.T, self.plane.pixel_mm[::-1], self.plane.shape[::-1], strict=True)
         )
-        x = np.arange(columns.start, columns.stop, step) * self.plane.pixel_mm[1]
-        y = np.arange(rows.start, rows.stop, step)[:, None] * self.plane.pixel_mm[0]
+        x = np.arange(columns.start, columns.stop) * self.plane.pixel_mm[1]
+        y = np.arange(rows.start, rows.stop)[:, None] * self.plane.pixel_mm[0]
         X, Y = (self.origin[k] + self.lay[k, 0] * x + self.lay[k, 1] * y for k in (0, 1))
         return Window(rows, columns, X, Y)
 

@@ -39,7 +39,7 @@ _FAINT_PX = 0.12
 """A mark whose centre is less certain than this is too faint to count."""
 _CURVED_MM = 0.003
 """What the bend of a strong distortion within a mark adds to its centre."""
-_DRAWS = 200
+_DRAWS = 100
 
 
 @dataclass(frozen=True, eq=False)

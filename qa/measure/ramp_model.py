@@ -29,6 +29,7 @@ _LEAK = 0.02
 """Share by which the model of what rings in from the fill may be wrong; it takes weight from pixels near the block's edges."""
 _LEAST_SOFT_MM = 0.1
 _STEPS = 20
+_ACROSS_MM = 0.1
 _PARAMETERS = 12
 _SHIFT, _TURN, _FLOOR, _SOFT, _SPACING, _BOX = 0, 1, 8, 9, 10, 11
 
@@ -175,6 +176,34 @@ class _Expected:
     leak: Floats
 
 
+class _Reader:
+    """Functions known on even steps, each with its slope and others: groups of (value, slope by place, ...).
+
+    Values are read with the bend that their slopes tell (error of fourth order), the rest along straight lines; beyond the
+    ends, the ends.
+    """
+
+    def __init__(self, start: float, step: float, groups: list[list[Floats]]) -> None:
+        self._start, self._step = start, step
+        self._sizes = [len(group) for group in groups]
+        self._table = np.stack([column for group in groups for column in group], axis=1)
+
+    def __call__(self, place: Floats) -> list[list[Floats]]:
+        """Return the same groups at places (P,)."""
+        at = np.clip((place - self._start) / self._step, 0.0, len(self._table) - 1.001)
+        k = at.astype(np.intp)
+        rest = at - k
+        low, high = np.take(self._table, k, axis=0).T, np.take(self._table, k + 1, axis=0).T
+        read = low + rest * (high - low)
+        bend = rest * (1 - rest) * (self._step / 2)
+        groups, first = [], 0
+        for size in self._sizes:
+            read[first] -= bend * (high[first + 1] - low[first + 1])
+            groups.append(list(read[first : first + size]))
+            first += size
+        return groups
+
+
 class _Model:
     """Squared magnitudes of the block's pixels as a function of twelve parameters, with its slopes."""
 
@@ -212,65 +241,61 @@ class _Model:
             strong = near & (share > quiet + height**2 / 4)
             seen = self.section.block_size_mm[0] * int(np.count_nonzero(strong)) / max(1, int(np.count_nonzero(near)))
             tries.append((height, seen))
-        candidates = []
-        for by_eye in (False, True):
-            guess = start.copy()
-            for k, (height, seen) in enumerate(tries):
-                length = max(seen, 2.0) if by_eye else thickness_mm * self.per_mm[k]
-                guess[list(_bar(k))] = self.middles[k], length, height
-            candidates.append(guess)
-        return min(candidates, key=self._cost)
+        for k, (height, seen) in enumerate(tries):
+            expected = thickness_mm * self.per_mm[k]
+            length = expected if 0.6 < seen / expected < 1.6 else max(seen, 2.0)
+            start[list(_bar(k))] = self.middles[k], length, height
+        return start
 
-    def _cost(self, q: Floats) -> float:
-        expected = self.evaluate(q, slopes=False)
-        return float(np.mean((self.pixels.power - expected.power) ** 2 / (expected.noise + expected.leak)))
-
-    def evaluate(self, q: Floats, *, slopes: bool = True) -> _Expected:
+    def evaluate(self, q: Floats) -> _Expected:
         """Return what the parameters make of the pixels."""
         pixels, section = self.pixels, self.section
         u, level = pixels.u, pixels.level
-        v = pixels.v - q[_SHIFT] - q[_TURN] * u
-        response = Response(q[_SPACING] * self.across_mm, max(q[_BOX], 0.1) * self.across_mm)
-        half = section.block_size_mm[1] / 2
-        upper, lower = response.slopes(v + half), response.slopes(v - half)
-        fill = _combine(lower, upper)
-        signal = 1 + fill.value
-        jacobian = np.zeros((_PARAMETERS, u.size)) if slopes else np.zeros((0, 0))
-        steep = fill.by_place.copy()
-        by_spacing, by_box = fill.by_spacing.copy(), fill.by_box.copy()
-        leak = signal.copy()
+        fill, *slits = self._across(q)(pixels.v - q[_SHIFT] - q[_TURN] * u)
+        edge = _edge_table(section, math.sqrt(q[_SOFT]))
         lengths = q[[_bar(0)[1], _bar(1)[1]]]
         thickness = self.slope * 2 * lengths.prod() / lengths.sum()
-        soft = math.sqrt(q[_SOFT])
-        for k, slot in enumerate(section.slots):
-            middle, length, height = q[list(_bar(k))]
-            slit = _combine(
-                response.slopes(v - self.offset[k] + slot.height_mm / 2),
-                response.slopes(v - self.offset[k] - slot.height_mm / 2),
-            )
+        slopes = np.zeros((_PARAMETERS, u.size))
+        signal, steep, by_spacing, by_box = (part.copy() for part in fill)
+        for k, slit in enumerate(slits):
+            to, lo, ho = _bar(k)
+            middle, length, height = q[[to, lo, ho]]
             scale = thickness / length
-            left = rise((self.u[k] - middle + length / 2) * scale, slot.thickness_mm, soft)
-            right = rise((self.u[k] - middle - length / 2) * scale, slot.thickness_mm, soft)
-            bar = height * (left.value - right.value)
-            signal = signal + slit.value * bar
-            if slopes:
-                steep += slit.by_place * bar
-                by_spacing += slit.by_spacing * bar
-                by_box += slit.by_box * bar
-                to, lo, ho = _bar(k)
-                jacobian[to] = slit.value * height * scale * (right.by_place - left.by_place)
-                jacobian[lo] = slit.value * height * scale * (right.by_place + left.by_place) / 2
-                jacobian[ho] = slit.value * (left.value - right.value)
-                jacobian[_SOFT] += slit.value * height * (left.by_soft - right.by_soft) / (2 * soft)
-        if slopes:
-            jacobian[_SHIFT], jacobian[_TURN] = -steep, -steep * u
-            jacobian[_SPACING], jacobian[_BOX] = by_spacing * self.across_mm, by_box * self.across_mm
-            jacobian *= 2 * level**2 * signal
-            jacobian[_FLOOR] = 1.0
+            place = (self.u[k] - middle) * scale
+            ((left, left_slope, left_soft),) = edge(place + thickness / 2)
+            ((right, right_slope, right_soft),) = edge(place - thickness / 2)
+            shape, seen = left - right, slit[0] * height
+            bar = height * shape
+            signal += slit[0] * bar
+            steep += slit[1] * bar
+            by_spacing += slit[2] * bar
+            by_box += slit[3] * bar
+            slopes[to] = seen * (right_slope - left_slope) * scale
+            slopes[lo] = seen * (right_slope + left_slope) * (scale / 2)
+            slopes[ho] = slit[0] * shape
+            slopes[_SOFT] += seen * (left_soft - right_soft) / (2 * math.sqrt(q[_SOFT]))
+        slopes[_SHIFT], slopes[_TURN] = -steep, -steep * u
+        slopes[_SPACING], slopes[_BOX] = by_spacing * self.across_mm, by_box * self.across_mm
+        strong = 2 * level**2 * signal
+        slopes *= strong
+        slopes[_FLOOR] = 1.0
         squared = (level * signal) ** 2
         noise = pixels.sigma**2
-        variance = 2 * noise * (2 * squared + max(q[_FLOOR], noise))
-        return _Expected(squared + q[_FLOOR], jacobian, variance, (2 * level**2 * signal * _LEAK * leak) ** 2)
+        return _Expected(
+            squared + q[_FLOOR], slopes, 2 * noise * (2 * squared + max(q[_FLOOR], noise)), (strong * _LEAK * fill[0]) ** 2
+        )
+
+    def _across(self, q: Floats) -> _Reader:
+        """Image across the block of the fill and of each slot, with slopes by place, spacing and box."""
+        response = Response(q[_SPACING] * self.across_mm, q[_BOX] * self.across_mm)
+        far = float(np.abs(self.pixels.v).max()) + 3.5
+        v: Floats = np.arange(-far, far + _ACROSS_MM, _ACROSS_MM)
+        half = self.section.block_size_mm[1] / 2
+        bounds = [(half, -half)]
+        bounds += [(y - s.height_mm / 2, y + s.height_mm / 2) for y, s in zip(self.offset, self.section.slots, strict=True)]
+        parts = [_combine(response.slopes(v - first), response.slopes(v - second)) for first, second in bounds]
+        parts[0][0] += 1.0
+        return _Reader(-far, _ACROSS_MM, parts)
 
     def solve(self, start: Floats) -> RampFit | str:
         """Gauss-Newton with limited steps; blur and softness are held near what is usual by weak pulls."""
@@ -296,7 +321,7 @@ class _Model:
                 return "the bars of the ramps cannot be told from noise"
             change = np.linalg.solve(normal / np.outer(scale, scale) + 1e-6 * np.eye(_PARAMETERS), right / scale) / scale
             moved = np.clip(q + np.clip(change, -limit, limit), low, high)
-            done = np.abs(moved - q)[[2, 3, 5, 6]].max() < 0.01
+            done = np.abs(moved - q)[[2, 3, 5, 6]].max() < 0.02
             q = moved
             if done:
                 break
@@ -350,11 +375,20 @@ class _Model:
         return np.concatenate(places), np.concatenate(amplitudes)
 
 
-def _combine(first: Step, second: Step) -> Step:
-    """Difference of two steps."""
-    return Step(
+def _combine(first: Step, second: Step) -> list[Floats]:
+    """Difference of two steps: value, and slopes by place, spacing and box."""
+    return [
         first.value - second.value,
         first.by_place - second.by_place,
         first.by_spacing - second.by_spacing,
         first.by_box - second.by_box,
-    )
+    ]
+
+
+def _edge_table(section: Ramps, soft_mm: float) -> _Reader:
+    """Rise of a bar's edge, with slopes by place and softness, against height in the slice."""
+    box = float(np.mean([slot.thickness_mm for slot in section.slots]))
+    far = box / 2 + 5 * soft_mm
+    step = min(soft_mm / 4, box / 8)
+    edge = rise(np.arange(-far, far + step, step), box, soft_mm)
+    return _Reader(-far, step, [[edge.value, edge.by_place, edge.by_soft]])
