@@ -7,7 +7,7 @@ from datetime import date
 import numpy as np
 
 from qa.judge.causes import Movement, likely_causes
-from qa.judge.quantity import figure, lasting_alarm, quantity_state
+from qa.judge.quantity import figure, lasting_alarm, quantity_state, title
 from qa.judge.records import Assessment, Grounds, QuantityState, Standing
 from qa.judge.schedule import Schedule, completeness, days_overdue, due_day
 from qa.judge.streams import Stream, streams
@@ -58,7 +58,7 @@ def assess_streams(
     events = tuple(e for e in events if e.day <= today)
     grounds = replace(grounds, events=events, schedule=schedule)
     last = max(days, default=None)
-    states = _in_use([quantity_state(s, grounds, today) for s in histories], last, schedule)
+    states = _in_use([quantity_state(s, grounds, today, _label(s, histories)) for s in histories], last, grounds)
     order = list(QUANTITIES)
     states.sort(key=lambda s: (order.index(s.quantity) if s.quantity in QUANTITIES else len(order), s.stream.phantom))
     counting = [s for s in states if not s.superseded]
@@ -89,32 +89,64 @@ def assess_streams(
     )
 
 
+def _label(stream: Stream, histories: Sequence[Stream]) -> str:
+    """Say which of several histories of a quantity is meant."""
+    others = [s for s in histories if s is not stream and s.quantity == stream.quantity]
+    label = title(stream.quantity)
+    if any(s.phantom != stream.phantom for s in others):
+        label += f" on {stream.phantom}"
+    alike = [s for s in others if s.phantom == stream.phantom]
+    if any(s.coil != stream.coil for s in alike):
+        label += f" with {stream.coil or 'another coil'}"
+    if any(s.protocol != stream.protocol for s in alike):
+        label += f" ({stream.protocol or 'another protocol'})"
+    return label
+
+
 def _names(states: Iterable[QuantityState]) -> tuple[str, ...]:
     return tuple(dict.fromkeys(s.quantity for s in states))
 
 
-def _in_use(states: list[QuantityState], last: date | None, schedule: Schedule) -> list[QuantityState]:
+def _in_use(states: list[QuantityState], last: date | None, grounds: Grounds) -> list[QuantityState]:
     """Mark what was measured otherwise since, and what has not been measured for too long.
 
     A quantity that is out stays out when it is no longer measured: only another measurement of it can say that it is well.
     On the same phantom one later by a whole interval does; on another phantom, which may be scanned in turn with it, one
-    later by three.
+    later by three, or any after an event that restarted its baseline. Such an event also ends what was drifting before it.
     """
     found = []
     for state in states:
-        days = state.stream.days
-        usual = max(float(np.median(np.diff(days[-_USUAL:]))) if days.size > 1 else 0.0, float(schedule.every_days))
-        others = [s for s in states if s is not state and s.quantity == state.quantity]
+        stream, grace = state.stream, grounds.schedule.grace_days
+        gaps = np.diff(stream.days[-_USUAL:])
+        usual = max(float(np.median(gaps)) if gaps.size else 0.0, float(grounds.schedule.every_days))
+        restart = _restart(stream, grounds)
         superseded = any(
-            int(o.stream.days[-1] - days[-1])
-            > (1 if o.stream.phantom == state.stream.phantom else 3) * (usual + schedule.grace_days)
-            for o in others
+            (other.last_day - stream.last_day).days > (1 if other.phantom == stream.phantom else 3) * (usual + grace)
+            or (restart is not None and other.last_day >= restart)
+            for other in (s.stream for s in states if s is not state and s.quantity == state.quantity)
         )
-        absent = last is not None and last.toordinal() - int(days[-1]) > 2 * usual + schedule.grace_days
+        absent = last is not None and (last - stream.last_day).days > 2 * usual + grace and not superseded
         found.append(
-            replace(state, superseded=superseded, absent_since=state.stream.last_day if absent and not superseded else None)
+            replace(
+                state,
+                superseded=superseded,
+                absent_since=stream.last_day if absent else None,
+                drifting=() if restart else state.drifting,
+            )
         )
     return found
+
+
+def _restart(stream: Stream, grounds: Grounds) -> date | None:
+    """Give the day of the first event after a stream's latest value that restarted its baseline."""
+    return min(
+        (
+            e.day
+            for e in grounds.events
+            if e.restarts_baseline and e.day > stream.last_day and (not e.quantities or stream.quantity in e.quantities)
+        ),
+        default=None,
+    )
 
 
 def _overdue(schedule: Schedule, last: date | None, late: int, today: date) -> list[str]:
@@ -137,7 +169,7 @@ def _out_sentence(state: QuantityState) -> str:
         else ""
     )
     since = "" if state.out_since in {None, stream.last_day} else f", since {state.out_since}"
-    return f"{state.title} is {now}{limit}{word}{since}"
+    return f"{state.label} is {now}{limit}{word}{since}"
 
 
 def _movement(state: QuantityState) -> Movement | None:
@@ -151,9 +183,12 @@ def _movement(state: QuantityState) -> Movement | None:
     since = begun.begun if begun else state.alarm_since or state.out_since or stream.last_day
     now = figure(stream.latest.value, stream.quantity, stream.unit)
     was = "" if np.isnan(centre) else f" from {figure(centre, stream.quantity, stream.unit)}"
-    sentence = f"{state.title} has {'risen' if rising else 'fallen'}{was} to {now}, since about {since.isoformat()}"
+    sentence = f"{state.label} has {'risen' if rising else 'fallen'}{was} to {now}, since about {since.isoformat()}"
     earliest, latest = (begun.earliest, begun.latest) if begun else (since, since)
-    return Movement(stream.quantity, "up" if rising else "down", earliest, latest, sentence, stream.latest.details)
+    called = state.out or bool(state.drifting)
+    return Movement(
+        stream.quantity, "up" if rising else "down", earliest, latest, sentence, stream.latest.details, called=called
+    )
 
 
 def _moved(state: QuantityState) -> bool:
@@ -205,11 +240,11 @@ def _remarks(states: Sequence[QuantityState]) -> Iterable[str]:
     for state in states:
         if _recently_restarted(state):
             start = state.stream.starts[-1]
-            restarted.setdefault(f"on {start.day.isoformat()} {start.reason}", []).append(state.title)
+            restarted.setdefault(f"on {start.day.isoformat()} {start.reason}", []).append(state.label)
     for why, titles in restarted.items():
         yield f"{', '.join(dict.fromkeys(titles))}: charts start anew, because {why}"
     for state in states:
         if state.absent_since is not None:
-            yield f"{state.title} on {state.stream.phantom} has not been measured since {state.absent_since.isoformat()}"
+            yield f"{state.label} has not been measured since {state.absent_since.isoformat()}"
         if state.not_judged and "no limit for" not in state.not_judged:
-            yield f"{state.title} is not judged: {state.not_judged}"
+            yield f"{state.label} is not judged: {state.not_judged}"

@@ -23,7 +23,8 @@ _MOST = 3
 class Movement:
     """A quantity that has moved.
 
-    Which way; between which days that began; the sentence that says so; and details of its latest measurement.
+    Which way; between which days that began; the sentence that says so; details of its latest measurement; and whether a
+    person is called for it, because it is out of limits or drifting.
     """
 
     quantity: str
@@ -32,6 +33,7 @@ class Movement:
     latest: date
     sentence: str
     details: Mapping[str, Any]
+    called: bool = True
 
 
 @dataclass(frozen=True)
@@ -96,18 +98,23 @@ def likely_causes(
     Returns
     -------
     tuple of Cause
-        The likeliest first, three at most; empty where nothing moved or no pattern fits.
+        Those first that explain most of what a person is called for, and of these the most telling; three at most. What moved
+        and calls nobody is evidence, but is not explained for its own sake, the set-up excepted.
     """
     events = tuple(events)
     fitting = []
     for pattern in patterns() if table is None else table:
         used = _movements(pattern, movements)
         around = None if used is None else _circumstances(pattern, used, events, changes)
-        if used is not None and around is not None:
+        if used is None or around is None:
+            continue
+        called = {m.quantity for m in used if m.called}
+        if called or pattern.only or pattern.changed:
             evidence = tuple(dict.fromkeys([*(m.sentence for m in used), *around]))
-            fitting.append((pattern.weight, Cause(pattern.name, pattern.look, evidence, pattern.source)))
+            cause = Cause(pattern.name, pattern.look, evidence, pattern.source)
+            fitting.append(((-len(called), -pattern.weight), cause))
     # Sorting keeps the order of the table among equals.
-    return tuple(cause for _, cause in sorted(fitting, key=lambda f: -f[0])[:_MOST])
+    return tuple(cause for _, cause in sorted(fitting, key=lambda f: f[0])[:_MOST])
 
 
 def _movements(pattern: Pattern, movements: Sequence[Movement]) -> list[Movement] | None:

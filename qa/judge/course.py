@@ -1,10 +1,10 @@
-"""How a quantity has been moving: straight, broken or stepped, each as likely as the history makes it.
+"""How a quantity has been moving: straight, broken, stepped or both, each as likely as the history makes it.
 
-Three kinds of course compete: a straight line over the whole window; a level that turns into a
-line at some session; a level that jumps to another at some session. Each is fitted by least squares for every session at
-which it may begin, and weighted by its marginal likelihood under flat priors of level, change and log scatter. So what
-hangs on the course, when it began and where it leads, is averaged over all that the history leaves open instead of resting
-on one best fit: for a jump no date is foretold, and for a slow drift the date allows for its uncertain beginning.
+Four kinds of course compete: a straight line over the whole window; a level that turns into a line at some session; a level
+that jumps to another at some session; a level that jumps and goes on as a line. Each is fitted by least squares for every
+session at which it may begin, and weighted by its marginal likelihood under flat priors of level, change and log scatter.
+So what hangs on the course, when it began and where it leads, is averaged over all that the history leaves open instead
+of resting on one best fit: for a jump no date is foretold, and for a slow drift the date allows for its uncertain beginning.
 
 Autocorrelation of the residuals lowers the number of sessions that count. Single sessions far from their neighbours are
 left out.
@@ -19,13 +19,15 @@ from qa.geometry import Floats
 from qa.judge.student import normal_scores
 from qa.judge.trend import correlation_left, inflation
 
-__all__ = ["BROKEN", "STEP", "STRAIGHT", "Course", "fit_course", "spikes"]
+__all__ = ["BROKEN", "JUMP", "STEP", "STRAIGHT", "Course", "fit_course", "spikes"]
 
-STRAIGHT, BROKEN, STEP = 0, 1, 2
-_AFTER_BREAK = 6
-_AFTER_STEP = 2
-_BEFORE_STEP = 3
+STRAIGHT, BROKEN, STEP, JUMP = 0, 1, 2, 3
+_BEFORE = 3
+_AFTER_BREAK, _AFTER_STEP, _AFTER_JUMP = (6, 3), 2, (5, 4)
+"""Sessions after the beginning that a course needs: more where it is to be followed ahead than where it is only dated."""
 _SPIKE = 5.0
+_RARE = 0.1
+"""How likely a jump that goes on as a line is beforehand, against a step or a broken line: it takes two things at once."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -35,13 +37,13 @@ class Course:
     Attributes
     ----------
     kind : (k,) int
-        `STRAIGHT`, `BROKEN` or `STEP`.
+        `STRAIGHT`, `BROKEN`, `STEP` or `JUMP` (and go on as a line).
     begins : (k,) float
-        Day on which the change begins; for a step the first session after it.
+        Day on which the change begins; for a step or jump the first session after it.
     weight : (k,) float
         Probability of each; they sum to 1.
-    level, change : (k,) float
-        Mean before it begins, and change from there to the last session.
+    before, level, change : (k,) float
+        Mean before it begins and right after, and change from there to the last session.
     scatter : float
         Standard deviation of sessions about the likeliest course.
     correlation : float
@@ -51,6 +53,7 @@ class Course:
     kind: NDArray[np.int64]
     begins: Floats
     weight: Floats
+    before: Floats
     level: Floats
     change: Floats
     scatter: float
@@ -59,7 +62,6 @@ class Course:
     _freedom: float
     _variance: Floats
     _sums: Floats
-    _count: int
 
     def probability(self, kind: int) -> float:
         """Give the probability of a kind of course."""
@@ -69,11 +71,12 @@ class Course:
         """Give the probability that the mean lies beyond a limit on (m,) days, from the last session on."""
         from scipy.special import ndtr
 
-        span = np.where(self.kind == STEP, 1.0, self._last - self.begins)[:, np.newaxis]
-        h = np.where(self.kind[:, np.newaxis] == STEP, 1.0, (days - self.begins[:, np.newaxis]) / span)
+        flat = (self.kind == STEP)[:, np.newaxis]
+        span = np.where(flat[:, 0], 1.0, self._last - self.begins)[:, np.newaxis]
+        h = np.where(flat, 1.0, (days - self.begins[:, np.newaxis]) / span)
         mean = self.level[:, np.newaxis] + self.change[:, np.newaxis] * h
-        one, square = self._sums[:, :, np.newaxis]
-        n = self._count
+        n, one, square = self._sums[:, :, np.newaxis]
+        # Of a step only the sessions after it tell where it has led to: the formula for a line gives that, too, at h = 1.
         error = np.sqrt(self._variance[:, np.newaxis] * (square - 2 * h * one + n * h * h) / (n * square - one * one))
         ahead = (mean - limit) / error if rising else (limit - mean) / error
         return np.asarray(self.weight @ ndtr(normal_scores(ahead, self._freedom)))
@@ -89,9 +92,8 @@ def fit_course(days: Floats, values: Floats, *, straight: bool) -> Course:
     values : (n,) float
         Values.
     straight : bool
-        Take the straight line for as likely beforehand as all broken lines together, and all steps: right where the
-        question is where it leads. Otherwise it is one of the broken lines, and broken lines and steps are equally likely:
-        right where a change is known and the question is when it began.
+        Take the straight line for as likely beforehand as all broken lines together: right where the question is where it
+        leads. Otherwise it is one of the broken lines: right where a change is known and the question is when it began.
 
     Returns
     -------
@@ -100,53 +102,62 @@ def fit_course(days: Floats, values: Floats, *, straight: bool) -> Course:
 
     Notes
     -----
-    Marginal likelihood of a linear model with flat priors: |X'X|^-1/2 SSE^-(n - 2)/2. The change is measured at the last
-    session for every course, so that the flat prior means the same for all of them.
+    Marginal likelihood of a linear model of p parameters with flat priors: |X'X|^-1/2 SSE^-(n - p)/2. Changes are measured
+    at the last session for every course, so that the flat prior means the same for all; the height of a jump that goes on
+    as a line, its further parameter, is held to lie anywhere within the range of the values, up or down.
     """
     keep = ~spikes(values)
-    t, x = days[keep], values[keep]
-    n, last = x.size, float(t[-1])
-    breaks, steps = t[: max(n - _AFTER_BREAK, 1)], t[_BEFORE_STEP : n - _AFTER_STEP]
-    kind = np.repeat([BROKEN, STEP], [breaks.size, steps.size])
-    if straight:
-        kind[0] = STRAIGHT
-    begins = np.concatenate((breaks, steps))
+    t, centre = days[keep], float(values[keep].mean())
+    y = values[keep] - centre
+    n, last = t.size, float(t[-1])
+    ahead = 0 if straight else 1
+    starts = {
+        BROKEN: t[: n - _AFTER_BREAK[ahead]],
+        STEP: t[_BEFORE : n - _AFTER_STEP + 1],
+        JUMP: t[_BEFORE : n - _AFTER_JUMP[ahead] + 1],
+    }
+    kind = np.repeat(list(starts), [s.size for s in starts.values()])
+    begins = np.concatenate(list(starts.values()))
     since = t - begins[:, np.newaxis]
-    h = np.where(
-        kind[:, np.newaxis] == STEP,
-        since >= 0,
-        np.maximum(since, 0.0) / np.where(last > begins, last - begins, 1.0)[:, np.newaxis],
-    )
-    one, square = h.sum(axis=1), (h * h).sum(axis=1)
-    determinant = n * square - one * one
-    centre = float(x.mean())
-    y = x - centre
-    change = n * (h @ y) / determinant
-    level = -change * one / n
-    residuals = y - level[:, np.newaxis] - change[:, np.newaxis] * h
+    after = since >= 0
+    span = np.where(last > begins, last - begins, 1.0)[:, np.newaxis]
+    h = np.where(kind[:, np.newaxis] == STEP, after, np.maximum(since, 0.0) / span)
+    # A jump's line is fitted to the sessions after it, and its level before to those before: two fits that share nothing.
+    used = np.where(kind[:, np.newaxis] == JUMP, after, 1.0)
+    apart = kind == JUMP
+    count, one, square, total = used.sum(axis=1), h.sum(axis=1), (h * h).sum(axis=1), used @ y
+    determinant = count * square - one * one
+    change = (count * (h @ y) - one * total) / determinant
+    level = (total - change * one) / count
+    before = np.where(apart, (y.sum() - total) / np.maximum(n - count, 1), level)
+    fitted = np.where(used > 0, level[:, np.newaxis] + change[:, np.newaxis] * h, before[:, np.newaxis])
+    residuals = y - fitted
     # A history without any scatter would weigh its best fit infinitely: keep what a double can tell apart.
     squares = np.maximum((residuals**2).sum(axis=1), 1e-20 * max(float(y @ y), 1e-300))
     best = int(np.argmin(squares))
     correlation = correlation_left(residuals[best])
     factor = inflation(correlation)
     freedom = max(n / factor - 3, 3.0)
-    logarithm = -(freedom + 1) / 2 * np.log(squares) - 0.5 * np.log(determinant)
+    logarithm = -(freedom + 1 - apart) / 2 * np.log(squares) - 0.5 * np.log(determinant)
+    reach = 2 * max(float(np.ptp(y)), 1e-150) * np.sqrt(np.maximum(n - count, 1) * n / (2 * np.pi)) / _RARE
+    logarithm -= np.where(apart, np.log(reach), 0.0)
+    if straight:
+        kind[0] = STRAIGHT
     logarithm -= np.log(np.bincount(kind)[kind])
     weight = np.exp(logarithm - logarithm.max())
-    variance = squares / (n - 3) * factor
     return Course(
         kind,
         begins,
         weight / weight.sum(),
+        before + centre,
         level + centre,
         change,
         float(np.sqrt(squares[best] / (n - 3))),
         correlation,
         last,
         freedom,
-        variance,
-        np.stack((one, square)),
-        n,
+        squares / (n - 3) * factor,
+        np.stack((count, one, square)),
     )
 
 

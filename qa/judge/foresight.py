@@ -6,14 +6,15 @@ from datetime import date, timedelta
 from typing import Literal
 
 import numpy as np
-from numpy.typing import ArrayLike
+from numpy.typing import ArrayLike, NDArray
 
 from qa.geometry import Floats
-from qa.judge.course import STEP, fit_course
+from qa.judge.course import JUMP, STEP, Course, fit_course
 from qa.judge.trend import correlation_left, inflation, mann_kendall, theil_sen
 
-__all__ = ["CONFIDENCE", "WINDOW", "Forecast", "Onset", "Trend", "forecast", "onset", "pettitt", "trend"]
+__all__ = ["CONFIDENCE", "WINDOW", "Forecast", "Onset", "OnsetKind", "Trend", "forecast", "onset", "pettitt", "trend"]
 
+OnsetKind = Literal["step", "ramp", "step and ramp"]
 WINDOW = 52
 """Sessions that trend and forecast look back on: a year of weeks."""
 _ONSET_WINDOW = 104
@@ -62,12 +63,12 @@ class Forecast:
 class Onset:
     """When a change began: the likeliest session and an interval that holds it with a probability of `CONFIDENCE`.
 
-    `kind` is "step" or "ramp", whichever is likelier, and `probability` says by how much; of a step, `begun` is the first
-    session after it. `before_history` says that a ramp may have begun before the first session looked at. `change` is from
-    before to the last session, in the quantity's unit.
+    `kind` is the likeliest, with its `probability`: "step", "ramp", or "step and ramp" for a jump that goes on as a drift.
+    Of a step, `begun` is the first session after it. `before_history` says that a ramp may have begun before the first
+    session looked at. `change` is from before to the last session, in the quantity's unit.
     """
 
-    kind: Literal["step", "ramp"]
+    kind: OnsetKind
     begun: date
     earliest: date
     latest: date
@@ -173,21 +174,29 @@ def onset(days: ArrayLike, values: ArrayLike, *, alarmed: bool = False) -> Onset
     course = fit_course(t, x, straight=False)
     if not alarmed and pettitt(x, inflation(course.correlation))[1] > _LEVEL:
         return None
-    step = course.probability(STEP)
-    among = np.where((course.kind == STEP) == (step > 0.5), course.weight, 0.0)
+    chances: dict[OnsetKind, float] = {"step": course.probability(STEP), "step and ramp": course.probability(JUMP)}
+    chances["ramp"] = 1.0 - chances["step"] - chances["step and ramp"]
+    kind = max(chances, key=lambda k: chances[k])
+    among = np.where(_of(course, kind), course.weight, 0.0)
     order = np.argsort(course.begins, kind="stable")
     share, begins = np.cumsum(course.weight[order]), course.begins[order]
     tail = (1 - CONFIDENCE) / 2
     early, late = (float(begins[min(int(np.searchsorted(share, q)), share.size - 1)]) for q in (tail, 1 - tail))
     return Onset(
-        "step" if step > 0.5 else "ramp",
+        kind,
         _day(course.begins[int(np.argmax(among))]),
         _day(early),
         _day(late),
-        float(among @ course.change / among.sum()),
-        max(step, 1 - step),
-        step <= 0.5 and early == float(t[0]),
+        float(among @ (course.level + course.change - course.before) / among.sum()),
+        chances[kind],
+        kind == "ramp" and early == float(t[0]),
     )
+
+
+def _of(course: Course, kind: OnsetKind) -> NDArray[np.bool_]:
+    if kind == "step":
+        return np.asarray(course.kind == STEP)
+    return np.asarray(course.kind == JUMP if kind == "step and ramp" else course.kind < STEP)
 
 
 def pettitt(values: ArrayLike, inflated: float = 1.0) -> tuple[int, float]:

@@ -18,13 +18,20 @@ from qa.judge.streams import Stream
 from qa.quantities import QUANTITIES, Sense
 from qa.records import Limit, Verdict
 
-__all__ = ["figure", "lasting_alarm", "quantity_state"]
+__all__ = ["figure", "lasting_alarm", "quantity_state", "title"]
 
 _MARGIN = 0.25
 """Share of the margin to a limit that must be used up before an alarm counts as drifting towards it."""
 _SMOOTHED = 40
+_DATED = 12
+"""Sessions of an alarm that are used for dating it."""
 _LASTING = ("ewma", "cusum", "nelson-2", "nelson-3", "nelson-5", "nelson-6")
 """Rules that a single odd session does not trip."""
+
+
+def title(quantity: str) -> str:
+    """Give what a report calls a quantity."""
+    return QUANTITIES[quantity].title if quantity in QUANTITIES else quantity
 
 
 def figure(value: float, quantity: str, unit: str) -> str:
@@ -33,7 +40,7 @@ def figure(value: float, quantity: str, unit: str) -> str:
     return f"{value:.{decimals}f}" + ("" if unit == "1" else f" {unit}")
 
 
-def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantityState:
+def quantity_state(stream: Stream, grounds: Grounds, today: date, label: str = "") -> QuantityState:
     """Judge one history as of a day.
 
     Parameters
@@ -44,6 +51,8 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
         Its limits tell why a verdict is missing and whether a limit moves with the values.
     today : datetime.date
         The day.
+    label : str
+        What sentences call it; its title otherwise.
 
     Returns
     -------
@@ -70,10 +79,13 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
     coming = None
     if fixed and verdict is not None and moving is not None and moving.real:
         coming = forecast(days, values, verdict.lower, verdict.upper, grounds.forecast_days)
+    # What has happened since an alarm was well on tells nothing more of when it began, and would only bend the fit.
+    known = days.size - _alarms(chart) + _DATED if alarm else days.size
     changed = alarm or out is not None or (moving is not None and moving.real)
     shift, sigmas, worse, used = _shift(stream, chart, verdict if fixed else None, grounds.rules.weight)
     state = QuantityState(
         stream=stream,
+        label=label or title(stream.quantity),
         verdict=verdict,
         not_judged=""
         if verdict is not None
@@ -81,14 +93,14 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date) -> QuantitySta
         chart=chart,
         control=_control(chart),
         rules=tuple(text for rule, text in RULES.items() if rule in chart.tripped and chart.tripped[rule][-1]),
-        alarm_since=_row(stream, reversed(chart.out.tolist())),
+        alarm_since=date.fromordinal(int(stream.days[-_alarms(chart)])) if alarm else None,
         shift=shift,
         shift_sigmas=sigmas,
         worse=worse,
         margin_used=used,
         trend=moving,
         forecast=coming,
-        onset=onset(days, values, alarmed=True) if changed else None,
+        onset=onset(days[:known], values[:known], alarmed=True) if changed else None,
         baseline=baseline_for(context.baselines, stream.quantity, context),
         out_since=out,
         superseded=False,
@@ -103,6 +115,11 @@ def _row(stream: Stream, latest_first: Iterable[bool]) -> date | None:
     """Give the first day of the unbroken row of flags that ends with the latest value; None where that has none."""
     length = sum(1 for _ in takewhile(bool, latest_first))
     return date.fromordinal(int(stream.days[-length])) if length else None
+
+
+def _alarms(chart: ControlChart) -> int:
+    """Count the sessions of the alarm that is on."""
+    return sum(1 for _ in takewhile(bool, reversed(chart.out.tolist())))
 
 
 def _control(chart: ControlChart) -> ControlState:
@@ -162,9 +179,9 @@ def _drifting(state: QuantityState, *, fixed: bool, awaiting: bool) -> list[str]
     if verdict is not None and is_out(verdict.conformity):
         return found
     if verdict is not None and verdict.conformity == "conditional pass":
-        found.append(f"{state.title} is {now}: within its limit ({verdict.limit}), but not with its expanded uncertainty")
+        found.append(f"{state.label} is {now}: within its limit ({verdict.limit}), but not with its expanded uncertainty")
     if verdict is not None and verdict.warned:
-        found.append(f"{state.title} is {now}: at its warning level, limit {verdict.limit}")
+        found.append(f"{state.label} is {now}: at its warning level, limit {verdict.limit}")
     if stream.quantity in QUANTITIES and QUANTITIES[stream.quantity].setup:
         return found
     if state.forecast is not None:
@@ -172,18 +189,18 @@ def _drifting(state: QuantityState, *, fixed: bool, awaiting: bool) -> list[str]
     lasting = lasting_alarm(state.chart)
     if lasting and state.worse and fixed and state.margin_used is not None and state.margin_used >= _MARGIN:
         found.append(
-            f"{state.title} has been out of control since {_iso(state.alarm_since)} and has gone "
+            f"{state.label} has been out of control since {_iso(state.alarm_since)} and has gone "
             f"{100 * min(state.margin_used, 1):.0f} % of the way to its limit"
         )
     if awaiting and state.worse and lasting:
-        found.append(f"{state.title} has been out of control since {_iso(state.alarm_since)}, and {state.not_judged}")
+        found.append(f"{state.label} has been out of control since {_iso(state.alarm_since)}, and {state.not_judged}")
     return found
 
 
 def _foretold(state: QuantityState, coming: Forecast) -> str:
     limit = figure(coming.limit, state.quantity, state.stream.unit)
     return (
-        f"{state.title} is heading for its limit of {limit}: if it goes on, it gets there on {coming.crossing.isoformat()} "
+        f"{state.label} is heading for its limit of {limit}: if it goes on, it gets there on {coming.crossing.isoformat()} "
         f"(90 % interval {coming.earliest.isoformat()} to {coming.latest.isoformat()})"
     )
 

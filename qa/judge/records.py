@@ -65,6 +65,8 @@ class QuantityState:
     ----------
     stream : Stream
         Its history; a quantity that is measured in several ways has a state for each.
+    label : str
+        What sentences call it: its title, and on which phantom or with which coil where there are several.
     verdict : Verdict or None
         Of the latest value, as the record keeps it.
     not_judged : str
@@ -99,6 +101,7 @@ class QuantityState:
     """
 
     stream: Stream
+    label: str
     verdict: Verdict | None
     not_judged: str
     chart: ControlChart

@@ -260,3 +260,71 @@ def test_the_same_input_gives_the_same_answer(make, grounds):
     for a, b in zip(first.quantities, second.quantities, strict=True):
         assert np.array_equal(a.chart.smoothed, b.chart.smoothed, equal_nan=True)
         assert (a.trend, a.forecast, a.onset, a.shift) == (b.trend, b.forecast, b.onset, b.shift)
+
+
+def two_phantoms(make, grounds, weeks, later=()):
+    """A sphere every week, a cylinder every fourth; `later` replaces values from a week on: (week, phantom, values)."""
+    sessions = []
+    for week, values in enumerate(usual(weeks)):
+        day = make.first + timedelta(weeks=week)
+        parts = []
+        for number, phantom in enumerate(("sphere-170", "cylinder-200")):
+            if number and week % 4:
+                continue
+            changed = {k: v for start, where, new in later if week >= start and where == phantom for k, v in new.items()}
+            parts.append(
+                make.acquisition(
+                    2 * week + number, day, values | changed, limits=LIMITS, baselines=grounds.baselines, phantom=phantom
+                )
+            )
+        sessions.append(make.session(day, *parts))
+    return sessions
+
+
+def test_several_histories_of_a_quantity_are_told_apart_in_words(make, grounds):
+    sessions = two_phantoms(make, grounds, 30, [(28, "cylinder-200", {"ghosting": 3.0})])
+    found = assess("north-3t", sessions, grounds, sessions[-1].day)
+    assert found.reasons == ("Percent signal ghosting on cylinder-200 is 3.00 %, limit at most 2.5 %",)
+    assert found.out == ("ghosting",)
+    assert {s.label for s in found.quantities if s.quantity == "snr"} == {
+        "Signal-to-noise ratio, two images on cylinder-200",
+        "Signal-to-noise ratio, two images on sphere-170",
+    }
+
+
+def test_a_repair_that_restarts_the_baseline_ends_what_drifted_or_failed_before_it(make, grounds):
+    low = {"snr": 189.0, "ghosting": 3.0}
+    sessions = two_phantoms(
+        make, grounds, 31, [(28, "cylinder-200", low), (28, "sphere-170", low), (29, "sphere-170", usual(1)[0])]
+    )
+    before = assess("north-3t", sessions[:29], grounds, sessions[28].day)
+    assert (before.out, before.drifting) == (("ghosting",), ("snr",))
+    # The cylinder is not due again yet; the sphere is well since the repair.
+    repair = Event("north-3t", sessions[28].day + timedelta(days=3), "repair", "coil and amplifier", restarts_baseline=True)
+    mended = replace(grounds, events=(repair,))
+    at_once = assess("north-3t", sessions[:29], mended, repair.day)
+    assert (at_once.out, at_once.drifting) == (("ghosting",), ())
+    after = assess("north-3t", sessions[:30], mended, sessions[29].day)
+    assert (after.standing, after.out) == ("within limits", ())
+    without = assess("north-3t", sessions[:30], grounds, sessions[29].day)
+    assert without.out == ("ghosting",)
+
+
+def test_a_slow_natural_drift_without_a_limit_is_not_explained_for_its_own_sake(make, grounds):
+    values = usual(60)
+    for week in range(60):
+        values[week]["centre_frequency"] -= 2e-6 * week
+    found = judged(make, values, grounds)
+    assert found.standing == "within limits"
+    assert found.causes == ()
+
+
+def test_the_beginning_of_a_jump_that_goes_on_is_dated_and_stays_dated(make, grounds):
+    values = usual(60)
+    for week in range(30, 60):
+        values[week]["ghosting"] = (0.9 + 0.04 * min(week - 30, 15), 0.05, {})
+    day = make.first + timedelta(weeks=30)
+    early, late = (state(judged(make, values[:n], grounds), "ghosting").onset for n in (45, 60))
+    assert early.earliest <= day <= early.latest
+    assert early.kind == "step and ramp"
+    assert late == early
