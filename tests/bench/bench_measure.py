@@ -1,4 +1,4 @@
-"""How long it takes to read, locate and measure a pair of 11-slice 256 x 256 series, against pydicom's read-and-decode of the files."""
+"""How long reading, locating and measuring a pair of 11-slice 256 x 256 series takes, against pydicom's read and decode."""
 
 import argparse
 import tempfile
@@ -42,7 +42,9 @@ def bench(phantom: Phantom, rounds: int) -> None:
         print(f"  locate                  {locating:7.1f} ms")
         print(f"  measure                 {measuring:7.1f} ms")
         for routine in ROUTINES:
-            print(f"    {routine.quantities[0]:20s}  {best(lambda r=routine: list(r.run(scan, pose, phantom)), rounds):7.1f} ms")
+            print(
+                f"    {routine.quantities[0]:20s}  {best(lambda r=routine: list(r.run(scan, pose, phantom)), rounds):7.1f} ms"
+            )
         total = reading + locating + measuring
         print(f"  all                     {total:7.1f} ms, {total / plain:.1f} times pydicom (bar: 6)")
 
