@@ -13,6 +13,7 @@ from qa.simulate import Setup, default_setup
 from qa.simulate.faults import with_fault
 
 __all__ = [
+    "FAULTS_BEGIN",
     "LAST_MONDAY",
     "PHYSICIST",
     "SITE_TOML",
@@ -95,6 +96,13 @@ class Acceptance:
 def _monday(week: int) -> date:
     return FIRST_MONDAY + timedelta(weeks=week)
 
+
+FAULTS_BEGIN = {
+    "north-3t": _monday(_FADES_FROM),
+    "south-1t5": _monday(_SERVICED),
+    "west-3t": _monday(_CREEPS_FROM),
+}
+"""The first Monday on which each scanner is not what it was."""
 
 _COIL_QUANTITIES = ("snr", "snr_background", "uniformity_piu", "uniformity_naad")
 

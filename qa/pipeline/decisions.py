@@ -250,7 +250,8 @@ def what_if(department: Department, file: Path) -> tuple[AlteredVerdict, ...]:
     truths = {name: true_values(phantom) for name, phantom in department.site.phantoms.items()}
     baselines = [kept.what for kept in record.baselines()]
     events = [kept.what for kept in record.events()]
-    return altered_verdicts(record.sessions(), site.limits, baselines, events, truths)
+    fields = {scanner.name: scanner.field_strength_T for scanner in department.site.scanners}
+    return altered_verdicts(record.sessions(), site.limits, baselines, events, truths, field_strengths_T=fields)
 
 
 def set_baseline(

@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any, cast, get_args
 
 from qa.errors import UsageError
-from qa.judge import RULES, Assessment, QuantityState, assess, is_out, missed_days
+from qa.judge import RULES, Assessment, QuantityState, assess, compare_fleet, is_out, missed_days
 from qa.pipeline.department import Department
 from qa.pipeline.pictures import picture_of, pictures_of
 from qa.pipeline.survey import grounds_for
@@ -28,12 +28,13 @@ from qa.report.content import (
     ScannerReport,
     SignOff,
 )
+from qa.report.fleet_content import FleetReport, fleet_scanner
 from qa.report.numbers import long_date
 from qa.report.words import count_of
 from qa.site import SiteScanner
 from qa.version import __version__
 
-__all__ = ["scanner_report", "write_reports"]
+__all__ = ["fleet_report", "scanner_report", "write_reports"]
 
 
 def write_reports(
@@ -46,7 +47,7 @@ def write_reports(
     page: str | None = None,
     progress: Progress = no_progress,
 ) -> tuple[Path, ...]:
-    """Render the report of each scanner.
+    """Render the report of each scanner, and that of the fleet where no scanner is named.
 
     Parameters
     ----------
@@ -66,7 +67,7 @@ def write_reports(
     Returns
     -------
     tuple of pathlib.Path
-        The files written, in the order of the scanners.
+        The files written, in the order of the scanners, the fleet's last.
 
     Raises
     ------
@@ -78,6 +79,7 @@ def write_reports(
         The disk failed.
     """
     from qa.report.files import save_report
+    from qa.report.fleet import render_fleet_report
     from qa.report.scanner import render_scanner_report
 
     site = department.site
@@ -97,7 +99,57 @@ def write_reports(
         content = scanner_report(department, scanner, since, until, dated)
         content = replace(content, page_size=cast("PageSize", paper))
         written.append(save_report(site.reports, scanner.name, dated, render_scanner_report(content)))
+    if not names:
+        fleet = replace(fleet_report(department, since, until, dated), page_size=cast("PageSize", paper))
+        written.append(save_report(site.reports, "fleet", dated, render_fleet_report(fleet)))
     return tuple(written)
+
+
+def fleet_report(department: Department, first: date, last: date, as_of: date) -> FleetReport:
+    """Gather what the report of all scanners shows."""
+    site, record = department.site, department.record
+    assessments, scanners = [], []
+    for scanner in site.scanners:
+        history = record.sessions(scanner.name, to_day=min(last, as_of))
+        grounds = grounds_for(department, scanner)
+        assessment = assess(scanner.name, history, grounds, as_of)
+        assessments.append(assessment)
+        scanners.append(
+            fleet_scanner(
+                assessment,
+                history,
+                schedule=grounds.schedule,
+                events=grounds.events,
+                first=first,
+                last=min(last, as_of),
+                description=_description(scanner),
+            )
+        )
+    models = {s.name: f"{s.model}, {s.field_strength_T:g} T" for s in site.scanners if s.model}
+    version, digest = _limits_in_force(department)
+    return FleetReport(
+        department=site.department.name,
+        first_day=first,
+        last_day=last,
+        scanners=tuple(scanners),
+        software_version=__version__,
+        limits_version=version,
+        limits_sha256=digest,
+        record_head=record.head().hash,
+        as_of=as_of,
+        comparison=compare_fleet(assessments, models),
+        page_size=site.report.page,
+    )
+
+
+def _description(scanner: SiteScanner) -> str:
+    return ", ".join(text for text in (scanner.model, f"{scanner.field_strength_T:g} T", scanner.location) if text)
+
+
+def _limits_in_force(department: Department) -> tuple[int, str]:
+    """Version and hash of the latest limits; 0 and nothing where none were kept yet."""
+    sets = department.record.limit_sets()
+    return (sets[-1].version, sets[-1].sha256) if sets else (0, "")
 
 
 def scanner_report(department: Department, scanner: SiteScanner, first: date, last: date, as_of: date) -> ScannerReport:
@@ -107,8 +159,7 @@ def scanner_report(department: Department, scanner: SiteScanner, first: date, la
     grounds = grounds_for(department, scanner)
     assessment = assess(scanner.name, history, grounds, as_of)
     sessions = tuple(s for s in history if s.day >= first)
-    limit_sets = record.limit_sets()
-    in_force = limit_sets[-1] if limit_sets else None
+    version, digest = _limits_in_force(department)
     schedule = grounds.schedule.with_events(grounds.events)
     before = _report_before(site.reports, scanner.name, as_of)
     earlier = None if before is None else assess(scanner.name, history, grounds, before)
@@ -116,15 +167,15 @@ def scanner_report(department: Department, scanner: SiteScanner, first: date, la
     return ScannerReport(
         department=site.department.name,
         scanner=scanner.name,
-        description=", ".join(text for text in (scanner.model, f"{scanner.field_strength_T:g} T", scanner.location) if text),
+        description=_description(scanner),
         first_day=first,
         last_day=last,
         standing=assessment.standing,
         standing_sentence=_standing_sentence(assessment),
         sessions=sessions,
         software_version=__version__,
-        limits_version=in_force.version if in_force else 0,
-        limits_sha256=in_force.sha256 if in_force else "",
+        limits_version=version,
+        limits_sha256=digest,
         record_head=record.head().hash,
         as_of=as_of,
         pictures=tuple(p for a in (history[-1].acquisitions if history else ()) for p in pictures_of(department, a)),
@@ -266,7 +317,7 @@ def _change_point(state: QuantityState) -> Iterable[ChangePoint]:
     onset = state.onset
     if onset is None:
         return
-    word = "step" if onset.kind == "step" else "steady change"
+    word = {"step": "step", "ramp": "steady change"}.get(onset.kind, onset.kind)
     between = f"between {onset.earliest.isoformat()} and {onset.latest.isoformat()}"
     sentence = f"A {word} began about {onset.begun.isoformat()} ({between})."
     yield ChangePoint(onset.begun, onset.earliest, onset.latest, sentence)

@@ -65,4 +65,5 @@ def grounds_for(department: Department, scanner: SiteScanner) -> Grounds:
         events=tuple(kept.what for kept in record.events(scanner.name)),
         schedule=Schedule(scanner.every_days, scanner.grace_days, scanner.since, site.downtimes_of(scanner.name)),
         rules=control_rules(site.charts),
+        field_strength_T=scanner.field_strength_T,
     )
