@@ -2,6 +2,7 @@
 
 import base64
 import math
+from collections import Counter
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -20,6 +21,7 @@ __all__ = ["DrawnPicture", "KeyEntry", "draw_picture", "grey_window"]
 _SCALE_BARS_MM = (1, 2, 5, 10, 20, 50, 100, 200)
 _SCALE_STRIP_MM = 4.5
 _NUMBER_SIZE = 6.2
+_FEW = 4
 _CASING = "#000000"
 _LINE = "#ffffff"
 _ROUND = 4.1 * np.array([(math.cos(turn), math.sin(turn)) for turn in np.linspace(0, 2 * math.pi, 25)])
@@ -51,6 +53,13 @@ def grey_window(picture: Picture) -> tuple[float, float]:
         return 0.0, 1.0
     low, high = min(0.0, float(finite.min())), float(np.percentile(finite, 99.8))
     return low, high if high > low else low + 1.0
+
+
+def _numbered(regions: tuple[Region, ...]) -> list[int]:
+    """Tell which regions carry their number: all but the many of one name, such as the rods of a lattice, whose first does."""
+    count = Counter(region.name for region in regions)
+    first = {region.name: k for k, region in reversed(list(enumerate(regions)))}
+    return [k for k, region in enumerate(regions) if count[region.name] <= _FEW or first[region.name] == k]
 
 
 def _outline(region: Region) -> tuple[list[float], list[float]]:
@@ -156,12 +165,13 @@ def draw_picture(
     mm_per_point = 1 / (MM * scale)
     inset = 5.5 * mm_per_point
     box = (left + inset, right - inset, top + inset, bottom - inset)
-    anchors = [_anchor(region, x, y, 4.6 * mm_per_point) for region, (x, y) in zip(picture.regions, outlines, strict=True)]
+    numbered = _numbered(picture.regions)
+    anchors = [_anchor(picture.regions[k], *outlines[k], 4.6 * mm_per_point) for k in numbered]
     anchors = [(min(max(x, box[0]), box[1]), min(max(y, box[2]), box[3])) for x, y in anchors]
     places = [plot.at(x, y)[0] for x, y in _spread(anchors, 9.5 * mm_per_point, box)]
     plot.path([place + _ROUND for place in places], closed=True, facecolor=_LINE, edgecolor=_CASING, linewidth=0.5, zorder=7)
-    for (x, y), region in zip(places, picture.regions, strict=True):
-        number = str(names.index(region.name) + 1)
+    for (x, y), k in zip(places, numbered, strict=True):
+        number = str(names.index(picture.regions[k].name) + 1)
         baseline = float(y) - CAP_HEIGHT / 2 * _NUMBER_SIZE
         plot.text(float(x), baseline, number, _NUMBER_SIZE, weight=600, color=_CASING, ha="center", va="baseline", zorder=8)
     _draw_scale_bar(figure, width, scale)
