@@ -17,7 +17,7 @@ from qa.phantoms import Lattice, Rods
 
 __all__ = ["Fitted", "find_marks", "fit_marks"]
 
-_BLURS = ((1.0, 0.1), (1.1, 1.0), (1.4, 0.8))
+_BLURS = ((1.0, 0.1), (1.1, 1.0), (1.4, 0.8), (1.8, 1.8))
 """Spacing and box, in pixels, among which the image's own blur is told: sharp, averaged over a pixel, or zero filled."""
 _STEPS = 4
 _TRIAL = 6

@@ -35,7 +35,7 @@ _SCALE = ("slope of the lattice along the image axis", 1)
 _FAR_MM = 50.0
 _CIRCLES_MM = (100.0, 150.0, 200.0)
 _LEAST_U_PX = 0.008
-_FAINT_PX = 0.12
+_FAINT_PX = 0.2
 """A mark whose centre is less certain than this is too faint to count."""
 _CURVED_MM = 0.003
 """What the bend of a strong distortion within a mark adds to its centre."""
@@ -275,8 +275,5 @@ def _scales(field: _Field) -> list[Measurement]:
 
 def _regions(field: _Field, section: Rods | Lattice) -> tuple[Region, ...]:
     """Draw a circle round every mark that was found."""
-    radius = section.rod_diameter_mm / 2 if isinstance(section, Rods) else section.bar_width_mm
-    return tuple(
-        Region(f"{i}, {j}", "circle", field.slice_index + 1, ((float(x), float(y)),), radius)
-        for (i, j), (x, y) in zip(field.index, field.image_mm, strict=True)
-    )
+    name, radius = ("rods", section.rod_diameter_mm / 2) if isinstance(section, Rods) else ("crossings", section.bar_width_mm)
+    return tuple(Region(name, "circle", field.slice_index + 1, ((float(x), float(y)),), radius) for x, y in field.image_mm)

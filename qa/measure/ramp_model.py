@@ -28,10 +28,12 @@ __all__ = ["RampFit", "fit_ramps"]
 _LEAK = 0.02
 """Share by which the model of what rings in from the fill may be wrong; it takes weight from pixels near the block's edges."""
 _LEAST_SOFT_MM = 0.1
+_LEAST_GHOST = 0.006
+"""What else may lie over the block in phase with it, as a share of the fill: a ghost of the body, in most scans."""
 _STEPS = 20
 _ACROSS_MM = 0.1
-_PARAMETERS = 12
-_SHIFT, _TURN, _FLOOR, _SOFT, _SPACING, _BOX = 0, 1, 8, 9, 10, 11
+_PARAMETERS = 14
+_SHIFT, _TURN, _FLOOR, _SOFT, _SPACING, _BOX, _GHOST, _SCALE = 0, 1, 8, 9, 10, 11, 12, 13
 
 
 def _bar(slot: int) -> tuple[int, int, int]:
@@ -251,7 +253,7 @@ class _Model:
         """Return what the parameters make of the pixels."""
         pixels, section = self.pixels, self.section
         u, level = pixels.u, pixels.level
-        fill, *slits = self._across(q)(pixels.v - q[_SHIFT] - q[_TURN] * u)
+        fill, *slits = self._across(q)((pixels.v - q[_SHIFT] - q[_TURN] * u) * (1 - q[_SCALE]))
         edge = _edge_table(section, math.sqrt(q[_SOFT]))
         lengths = q[[_bar(0)[1], _bar(1)[1]]]
         thickness = self.slope * 2 * lengths.prod() / lengths.sum()
@@ -274,15 +276,18 @@ class _Model:
             slopes[lo] = seen * (right_slope + left_slope) * (scale / 2)
             slopes[ho] = slit[0] * shape
             slopes[_SOFT] += seen * (left_soft - right_soft) / (2 * math.sqrt(q[_SOFT]))
-        slopes[_SHIFT], slopes[_TURN] = -steep, -steep * u
+        slopes[_SHIFT], slopes[_TURN], slopes[_SCALE] = -steep, -steep * u, -steep * pixels.v
         slopes[_SPACING], slopes[_BOX] = by_spacing * self.across_mm, by_box * self.across_mm
         strong = 2 * level**2 * signal
-        slopes *= strong
-        slopes[_FLOOR] = 1.0
+        slopes *= 2 * level**2 * (signal + q[_GHOST])
+        slopes[_FLOOR], slopes[_GHOST] = 1.0, strong
         squared = (level * signal) ** 2
         noise = pixels.sigma**2
         return _Expected(
-            squared + q[_FLOOR], slopes, 2 * noise * (2 * squared + max(q[_FLOOR], noise)), (strong * _LEAK * fill[0]) ** 2
+            squared + q[_GHOST] * strong + q[_FLOOR],
+            slopes,
+            2 * noise * (2 * squared + max(q[_FLOOR], noise)),
+            (strong * _LEAK * fill[0]) ** 2,
         )
 
     def _across(self, q: Floats) -> _Reader:
@@ -302,12 +307,12 @@ class _Model:
         pixels = self.pixels
         width = self.section.block_size_mm[0]
         q = start
-        usual = np.array([1.0, 0.5, 0.04])
-        pull = 1 / np.array([0.3, 0.7, 1.0]) ** 2
-        held = [_SPACING, _BOX, _SOFT]
-        limit = np.array([0.5, 0.02, 5, 6, 0.1, 5, 6, 0.1, np.inf, 0.1, 0.15, 0.3])
-        low = np.array([-3, -0.1, -width, 1, 0.005, -width, 1, 0.005, 0, _LEAST_SOFT_MM**2, 0.9, 0.1])
-        high = np.array([3, 0.1, width, 2 * width, 2, width, 2 * width, 2, np.inf, 4, 3, 3])
+        usual = np.array([1.0, 0.5, 0.04, 0.0, 0.0])
+        pull = 1 / np.array([0.3, 0.7, 1.0, _LEAST_GHOST, 0.01]) ** 2
+        held = [_SPACING, _BOX, _SOFT, _GHOST, _SCALE]
+        limit = np.array([0.5, 0.02, 5, 6, 0.1, 5, 6, 0.1, np.inf, 0.1, 0.15, 0.3, 0.02, 0.02])
+        low = np.array([-3, -0.1, -width, 1, 0.005, -width, 1, 0.005, 0, _LEAST_SOFT_MM**2, 0.9, 0.1, -0.1, -0.06])
+        high = np.array([3, 0.1, width, 2 * width, 2, width, 2 * width, 2, np.inf, 4, 3, 3, 0.1, 0.06])
         for _ in range(_STEPS):
             expected = self.evaluate(q)
             residual = pixels.power - expected.power
