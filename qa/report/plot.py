@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Plot"]
 
+_DECIMALS = 2
+"""Of places in points: four micrometres, and half the text of a path."""
+
 
 class Plot:
     """A rectangle of a figure with a range of values along x and y.
@@ -70,7 +73,12 @@ class Plot:
         options.setdefault("facecolor", "none")
         options.setdefault("edgecolor", "none")
         self.figure.add_artist(
-            PathPatch(Path(np.concatenate(pieces), codes), transform=IdentityTransform(), clip_on=False, **options)
+            PathPatch(
+                Path(np.round(np.concatenate(pieces), _DECIMALS), codes),
+                transform=IdentityTransform(),
+                clip_on=False,
+                **options,
+            )
         )
 
     def segments(self, starts: Floats, ends: Floats, **options: Any) -> None:  # noqa: ANN401 - matplotlib's
@@ -79,7 +87,7 @@ class Plot:
         from matplotlib.path import Path
         from matplotlib.transforms import IdentityTransform
 
-        vertices = np.stack([starts, ends], axis=1).reshape(-1, 2)
+        vertices = np.round(np.stack([starts, ends], axis=1).reshape(-1, 2), _DECIMALS)
         codes = np.tile([Path.MOVETO, Path.LINETO], len(starts))
         path = Path(vertices, codes)
         self.figure.add_artist(PathPatch(path, fill=False, transform=IdentityTransform(), clip_on=False, **options))

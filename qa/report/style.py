@@ -6,6 +6,7 @@ searched in the PDF. The same data give the same bytes: no date, no random ident
 """
 
 import io
+import re
 import struct
 import zlib
 from functools import lru_cache
@@ -55,6 +56,7 @@ CAP_HEIGHT = 0.714
 """Height of capitals and figures, as a share of the size of letters."""
 _MM_PER_INCH = 25.4
 _FIRST_GROUP = b'<g id="figure_1">'
+_UPRIGHT = re.compile(rb"M (\S+) (\S+) \nL \1 (\S+) \n")
 MM = 72 / _MM_PER_INCH
 """Points in a millimetre."""
 
@@ -93,7 +95,8 @@ def to_svg(figure: "Figure", under: bytes = b"") -> bytes:
     buffer = io.BytesIO()
     with mpl.rc_context({"svg.fonttype": "none", "svg.hashsalt": "evenfield", "path.simplify": False}):
         figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": None})
-    return buffer.getvalue().replace(_FIRST_GROUP, _FIRST_GROUP + under, 1)
+    drawn = _UPRIGHT.sub(rb"M \1 \2V \3\n", buffer.getvalue())
+    return drawn.replace(_FIRST_GROUP, _FIRST_GROUP + under, 1)
 
 
 def grey_png(shown: NDArray[np.uint8]) -> bytes:

@@ -33,8 +33,8 @@ def time_ticks(first: date, last: date) -> tuple[list[date], list[str], list[dat
     months = [date(year, month, 1) for year in range(first.year, last.year + 1) for month in range(1, 13)]
     months = [month for month in months if first <= month <= last]
     if span <= 500:
-        named = months if span <= 430 else months[::2]
-        return named, _month_names(named), []
+        named = months if span <= 250 else [month for month in months if month.month % 2]
+        return named, _month_names(named), months
     if span <= 3 * 366:
         named = [month for month in months if month.month in {1, 4, 7, 10}]
         return named, _month_names(named), months
