@@ -1,7 +1,7 @@
 """Signal-free air: where it lies, and whether what is in it is noise."""
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -83,13 +83,19 @@ def _share_out(sizes: dict[tuple[str, str], float], wanted: float) -> dict[tuple
 
 @dataclass(frozen=True)
 class AirNoise:
-    """Noise in air: mean and standard deviation of the magnitude, the distribution they fit, correlation, number of pixels."""
+    """Noise in air.
+
+    Mean and standard deviation of the magnitude, the distribution they fit, correlation, number of pixels, and how many of
+    them make one independent value of a variance: the sum of the autocorrelation of squared deviations, which for
+    magnitudes of noise alone is more than the square of their own.
+    """
 
     mean: float
     sd: float
     chi: Chi
     correlation: Correlation
     pixels: int
+    shared: float
 
     @property
     def sigma(self) -> float:
@@ -99,7 +105,7 @@ class AirNoise:
     @property
     def u_relative(self) -> float:
         """Relative standard uncertainty of `sigma` from the independent pixels there are."""
-        return math.sqrt((self.chi.kurtosis - 1) / 4 * self.correlation.variance_factor / self.pixels)
+        return math.sqrt((self.chi.kurtosis - 1) / 4 * self.shared / self.pixels)
 
 
 def air_noise(
@@ -151,7 +157,7 @@ def air_noise(
     if reason:
         return reason
     chi = whole if near else found.chi
-    return AirNoise(found.mean, found.sd, chi, found.correlation, found.pixels), {name: boxes[name] for name in parts}
+    return replace(found, chi=chi), {name: boxes[name] for name in parts}
 
 
 def _not_noise(found: AirNoise, ratio: float, near: bool) -> str:
@@ -204,4 +210,6 @@ def _sum_up(parts: list[Floats], step: float = 0.0) -> AirNoise:
         residual[: part.shape[0], at : at + part.shape[1]] = part - mean
         inside[: part.shape[0], at : at + part.shape[1]] = 1
         at += part.shape[1] + 8
-    return AirNoise(mean, sd, Chi.with_ratio(mean / sd), correlation(residual, inside), values.size)
+    squared = (residual**2 - float((residual**2).sum()) / values.size) * inside
+    shared = max(1.0, correlation(squared, inside).mean_factor)
+    return AirNoise(mean, sd, Chi.with_ratio(mean / sd), correlation(residual, inside), values.size, shared)

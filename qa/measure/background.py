@@ -54,7 +54,7 @@ def snr_background(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[
         "channels": air.chi.channels,
         "factor": air.chi.sd,
         "pixels": air.pixels,
-        "independent_pixels": air.pixels / air.correlation.variance_factor,
+        "independent_pixels": air.pixels / air.shared,
     }
     regions = (field.region, *(rectangle(name, field.slice_index, *box) for name, box in used.items()))
     return [

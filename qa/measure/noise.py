@@ -109,7 +109,7 @@ def correlation(residual: Floats, inside: Floats) -> Correlation:
     Returns
     -------
     Correlation
-        What chance alone gives at a lag (three standard errors of no correlation) counts as none.
+        What chance alone gives at a lag (two standard errors of no correlation) counts as none.
     """
     held = residual * inside
     variance = float((held * held).sum() / max(inside.sum(), 1))
@@ -120,7 +120,7 @@ def correlation(residual: Floats, inside: Floats) -> Correlation:
             pairs = float((mask[:, lag:] * mask[:, :-lag]).sum())
             found = float((values[:, lag:] * values[:, :-lag]).sum())
             ratio = found / pairs / variance if pairs > 1 and variance > 0 else 0.0
-            lags.append(ratio if pairs > 1 and abs(ratio) > 3 / math.sqrt(pairs) else 0.0)
+            lags.append(ratio if pairs > 1 and abs(ratio) > 2 / math.sqrt(pairs) else 0.0)
         axes.append(tuple(lags))
     return Correlation(axes[0], axes[1])
 

@@ -85,7 +85,7 @@ def _single_image_noise(image: Floats, field: Field, air: AirNoise | None) -> No
     if left.sigma < 1.2 * air.sigma:
         return left
     axes = (tuple(math.sqrt(max(r, 0.0)) for r in lags) for lags in (air.correlation.along_x, air.correlation.along_y))
-    return Noise(air.sigma, Correlation(*axes), air.pixels / air.correlation.variance_factor)
+    return Noise(air.sigma, Correlation(*axes), air.pixels / air.shared)
 
 
 def _plain_surface(image: Floats, field: Field, noise: Noise) -> Floats:
