@@ -89,8 +89,12 @@ def _rigid(seen: Floats, true: Floats) -> Floats:
 
 
 def _scales(setup: Setup, seen: Floats, true: Floats) -> tuple[float, float]:
-    """Deviation of scale along the image axes, percent: least squares of the place seen on the place of an ideal scan."""
-    ideal = true @ (setup.axes.T[:2] @ setup.orientation[:, :2]).T
+    """Deviation of scale along the image axes, percent: least squares of the place seen on the turned ideal lattice.
+
+    A turn does not scale: what a tilt foreshortens is taken back to the nearest turn.
+    """
+    u, _, vt = np.linalg.svd(setup.axes.T[:2] @ setup.orientation[:, :2])
+    ideal = true @ (u @ vt).T
     a, b = seen - seen.mean(axis=0), ideal - ideal.mean(axis=0)
     slopes = (a * b).sum(axis=0) / (b * b).sum(axis=0)
     return 100 * (float(slopes[0]) - 1), 100 * (float(slopes[1]) - 1)
