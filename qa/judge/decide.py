@@ -20,14 +20,12 @@ import math
 from collections.abc import Sequence
 
 from qa.judge.limits import Bounds, Context, Unresolved, bounds, choose
-from qa.records import Conformity, DecisionRule, Limit, Measurement, Verdict
+from qa.records import CONFORMITIES, OUT_OF_LIMITS, Conformity, DecisionRule, Limit, Measurement, Verdict
 
 __all__ = ["COVERAGE_FACTOR", "conformity", "conformity_probability", "is_out", "judge", "why_not_judged"]
 
 COVERAGE_FACTOR = 2.0
 """Expanded uncertainty over standard uncertainty."""
-
-_WORDS: tuple[Conformity, ...] = ("pass", "conditional pass", "conditional fail", "fail")
 
 
 def conformity_probability(
@@ -96,7 +94,7 @@ def conformity(value: float, standard_uncertainty: float, limit: Bounds, rule: D
         else:
             grade = 3
         worst = max(worst, grade)
-    return _WORDS[worst]
+    return CONFORMITIES[worst]
 
 
 def judge(measurement: Measurement, limits: Sequence[Limit], context: Context) -> Verdict | None:
@@ -161,7 +159,7 @@ def why_not_judged(measurement: Measurement, limits: Sequence[Limit], context: C
 
 def is_out(word: Conformity) -> bool:
     """Tell whether a verdict means that the value lies outside its tolerance limits, whatever its uncertainty."""
-    return word in ("conditional fail", "fail")
+    return word in OUT_OF_LIMITS
 
 
 def _ratio(difference: float, u: float) -> float:

@@ -17,6 +17,7 @@ from qa.records.figures import (
 )
 from qa.records.judged import (
     CONFORMITIES,
+    OUT_OF_LIMITS,
     Baseline,
     Conformity,
     DecisionRule,
@@ -44,6 +45,7 @@ from qa.records.scans import (
 
 __all__ = [
     "CONFORMITIES",
+    "OUT_OF_LIMITS",
     "Acquisition",
     "Baseline",
     "Conformity",

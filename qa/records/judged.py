@@ -8,6 +8,7 @@ from qa.records.figures import Measurement
 
 __all__ = [
     "CONFORMITIES",
+    "OUT_OF_LIMITS",
     "Baseline",
     "Conformity",
     "DecisionRule",
@@ -20,6 +21,8 @@ __all__ = [
 
 Conformity = Literal["pass", "conditional pass", "conditional fail", "fail"]
 CONFORMITIES: tuple[Conformity, ...] = ("pass", "conditional pass", "conditional fail", "fail")
+OUT_OF_LIMITS: tuple[Conformity, ...] = ("conditional fail", "fail")
+"""Those that mean that the value lies outside its limits, whatever its uncertainty."""
 DecisionRule = Literal["simple", "guarded"]
 EventKind = Literal["service", "repair", "replacement", "upgrade", "calibration", "protocol change", "downtime", "note"]
 

@@ -54,38 +54,55 @@ class Session:
 
 @dataclass(frozen=True, eq=False)
 class History:
-    """Many acquisitions and their n figures as columns, so that ten years of a fleet can be judged at once.
+    """The a acquisitions of one or many scanners and their n figures as columns: ten years of a fleet at once.
 
-    Rows stand in order of scanner, day, time and place in the acquisition. What is not here (details, regions, the verdict's
-    sentence) is read for single rows by acquisition and position.
+    Acquisitions stand in order of scanner, day and time; figures in that of their acquisitions and of their place in them.
+    What is not here (unit, details, regions, the verdict) is read for single figures, by identifier and position.
 
     Attributes
     ----------
-    acquisitions : tuple of RecordedAcquisition
-        Without figures, files, series and what was not measured; equal settings and scanners are one object.
-    quantities, methods : tuple
-        Names of the quantities, and (method, version) pairs, that the rows point to.
-    acquisition, quantity, method : (n,) int
-        Indices into these.
+    scanner_names, phantoms : tuple of str
+        What the acquisitions point to, as do `settings` and `scanners`.
+    settings : tuple of Settings
+        Without the centre frequency, which is another each time.
+    scanners : tuple of Scanner
+        What the headers say.
+    quantities : tuple of str
+        What the figures point to, as do `methods`.
+    methods : tuple of (str, int)
+        Method and its version.
+    identifiers, days : (a,) int
+        As in `RecordedAcquisition`; day of the session as proleptic ordinal (`date.toordinal`).
+    scanner_name, phantom, setting, scanner : (a,) int
+        Indices into the tuples above.
+    acquisition : (n,) int
+        Index of each figure's acquisition.
     position : (n,) int
-        Place in the acquisition, from 1.
+        Place in it, from 1.
+    quantity, method : (n,) int
+        Indices into the tuples above.
     values, uncertainties : (n,) float
         In the quantity's unit; standard uncertainties.
-    conformity : (n,) int
-        Index into `CONFORMITIES`; -1 where no limit was applied.
-    lower, upper : (n,) float
-        Bounds that were applied; NaN where open.
+    out : (n,) bool
+        Where the verdict is one of `OUT_OF_LIMITS`.
     """
 
-    acquisitions: tuple[RecordedAcquisition, ...]
+    scanner_names: tuple[str, ...]
+    phantoms: tuple[str, ...]
+    settings: tuple[Settings, ...]
+    scanners: tuple[Scanner, ...]
     quantities: tuple[str, ...]
     methods: tuple[tuple[str, int], ...]
+    identifiers: NDArray[np.int64]
+    days: NDArray[np.int64]
+    scanner_name: NDArray[np.int64]
+    phantom: NDArray[np.int64]
+    setting: NDArray[np.int64]
+    scanner: NDArray[np.int64]
     acquisition: NDArray[np.int64]
     position: NDArray[np.int64]
     quantity: NDArray[np.int64]
     method: NDArray[np.int64]
     values: Floats
     uncertainties: Floats
-    conformity: NDArray[np.int64]
-    lower: Floats
-    upper: Floats
+    out: NDArray[np.bool_]

@@ -1,15 +1,17 @@
 """Ten years of a fleet as columns: what judgement needs of every figure, read in one pass."""
 
-from collections.abc import Iterator, Sequence
+import re
+from collections.abc import Hashable, Iterator, Sequence
+from dataclasses import replace
 from datetime import date
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, Select, select
 
-from qa.records import CONFORMITIES, History, Judged, Measurement, Session
+from qa.records import OUT_OF_LIMITS, History, Judged, Measurement, Session
 from qa.store import queries, rows
-from qa.store.tables import details, measurements, verdicts
+from qa.store.tables import acquisitions, details, measurements, sessions, verdicts
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -18,9 +20,10 @@ if TYPE_CHECKING:
 
 __all__ = ["history_between", "judged_at", "light_sessions"]
 
-_BATCH = 20_000
-_CODES = {word: code for code, word in enumerate(CONFORMITIES)}
-
+_BATCH = 500
+"""Rows at a time: with more, Python looks for garbage among them again and again."""
+_FREQUENCY = re.compile(r'"frequency_MHz":[^,}]*')
+T = TypeVar("T", bound=Hashable)
 
 Period = tuple[str | None, date | None, date | None]
 """Scanner, first and last day; None where open."""
@@ -28,18 +31,20 @@ Period = tuple[str | None, date | None, date | None]
 
 def history_between(connection: Connection, period: Period) -> History:
     """Read all figures of a period that no later entry has taken the place of."""
-    build = rows.Builder()
-    found = tuple(build.acquisition(row) for row in queries.acquisition_rows(connection, *period))
-    columns = _Columns()
+    made = _Acquisitions(connection, period)
     m, v = measurements.c, verdicts.c
-    for batch in _figures(
-        connection,
-        period,
-        (m.entry, m.position, m.quantity, m.value, m.standard_uncertainty, m.method, m.method_version),
-        (v.conformity, v.lower, v.upper),
-    ):
-        columns.add(batch)
-    return columns.history(found)
+    columns = (m.entry, m.position, m.quantity, m.value, m.standard_uncertainty, m.method, m.method_version)
+    query = select(*columns).order_by(m.entry, m.position)
+    outside = select(v.entry, v.position).where(v.conformity.in_(OUT_OF_LIMITS)).order_by(v.entry, v.position)
+    if any(bound is not None for bound in period[:2]):
+        # Where but a last day is named almost all is wanted: reading the whole and leaving the rest out is faster.
+        wanted = queries.standing_acquisitions(*period)
+        query, outside = query.where(m.entry.in_(wanted)), outside.where(v.entry.in_(wanted))
+    figures = _Figures()
+    for batch in _batches(connection, query):
+        figures.add(batch)
+    out = [row for batch in _batches(connection, outside) for row in batch]
+    return figures.history(made, out)
 
 
 def light_sessions(connection: Connection, period: Period) -> tuple[Session, ...]:
@@ -74,6 +79,11 @@ def _figures(
     )
     if any(bound is not None for bound in period):
         query = query.where(m.c.entry.in_(queries.standing_acquisitions(*period)))
+    return _batches(connection, query)
+
+
+def _batches(connection: Connection, query: Select[Any]) -> Iterator[Sequence[Any]]:
+    """Read rows in batches of the driver's own tuples: there may be 300,000, and anything more costs seconds."""
     cursor = connection.connection.cursor()
     try:
         cursor.execute(str(query.compile(dialect=connection.dialect, compile_kwargs={"literal_binds": True})))
@@ -83,54 +93,123 @@ def _figures(
         cursor.close()
 
 
-class _Columns:
-    """Gathers batches of rows into arrays; words become numbers in the order in which they are met."""
+class _Numbers(dict[T, int]):
+    """Things by number, in the order in which they are met."""
+
+    def __missing__(self, key: T) -> int:
+        number = self[key] = len(self)
+        return number
+
+
+class _Acquisitions:
+    """The acquisitions of a period as columns, in order of scanner, day and time."""
+
+    def __init__(self, connection: Connection, period: Period) -> None:
+        a, s = acquisitions.c, sessions.c
+        query = (
+            select(a.entry, s.scanner_name, s.day, a.phantom, a.settings, a.scanner)
+            .join(sessions, s.entry == a.session)
+            .where(a.entry.in_(queries.standing_acquisitions(*period)))
+            .order_by(s.scanner_name, s.day, a.acquired_at, a.entry)
+        )
+        entry, name, day, phantom, setting, scanner = _columns(
+            [row for batch in _batches(connection, query) for row in batch], 6
+        )
+        build = rows.Builder()
+        names, phantoms = _Numbers[str](), _Numbers[str]()
+        settings, scanners = _Numbers[str](), _Numbers[str]()
+        texts: dict[str, str] = {}
+        # The frequency alone would make every acquisition's settings a text of their own.
+        keys = [_FREQUENCY.sub("", text) for text in setting]
+        for key, text in zip(keys, setting, strict=True):
+            texts.setdefault(key, text)
+        self.identifiers = np.array(entry, dtype=np.int64)
+        self.days = _ordinals(day)
+        self.scanner_name = _numbered(names, name)
+        self.phantom = _numbered(phantoms, phantom)
+        self.setting = _numbered(settings, keys)
+        self.scanner = _numbered(scanners, scanner)
+        self.scanner_names, self.phantoms = tuple(names), tuple(phantoms)
+        self.settings = tuple(replace(build.setting(texts[key]), frequency_MHz=None) for key in settings)
+        self.scanners = tuple(build.scanner(text) for text in scanners)
+
+
+class _Figures:
+    """Gathers batches of rows into arrays."""
 
     def __init__(self) -> None:
-        self._quantities: dict[str, int] = {}
-        self._methods: dict[tuple[str, int], int] = {}
+        self._kinds = _Numbers[tuple[str, str, int]]()
         self._whole: list[NDArray[np.int64]] = []
         self._real: list[Floats] = []
 
     def add(self, batch: Sequence[Sequence[Any]]) -> None:
-        """Take (entry, position, quantity, value, uncertainty, method, version, conformity, lower, upper) rows in."""
-        entry, position, quantity, value, uncertainty, method, version, conformity, lower, upper = zip(*batch, strict=True)
-        quantities, methods = self._quantities, self._methods
-        whole = (
-            entry,
-            position,
-            [quantities.setdefault(name, len(quantities)) for name in quantity],
-            [methods.setdefault(pair, len(methods)) for pair in zip(method, version, strict=True)],
-            [_CODES.get(word, -1) for word in conformity],
-        )
-        self._whole.append(np.array(whole, dtype=np.int64))
-        self._real.append(np.array((value, uncertainty, lower, upper), dtype=np.float64))
+        """Take (entry, position, quantity, value, uncertainty, method, version) rows in."""
+        entry, position, quantity, value, uncertainty, method, version = zip(*batch, strict=True)
+        kinds = self._kinds
+        kind = [kinds[one] for one in zip(quantity, method, version, strict=True)]
+        self._whole.append(np.array((entry, position, kind), dtype=np.int64))
+        self._real.append(np.array((value, uncertainty), dtype=np.float64))
 
-    def history(self, found: tuple[Any, ...]) -> History:
+    def history(self, made: _Acquisitions, outside: Sequence[Sequence[Any]]) -> History:
         """Put the rows in order of the acquisitions; those of acquisitions that are not among them are left out."""
-        whole = np.concatenate(self._whole, axis=1) if self._whole else np.zeros((5, 0), np.int64)
-        real = np.concatenate(self._real, axis=1) if self._real else np.zeros((4, 0))
-        entries = np.array([one.identifier for one in found], dtype=np.int64)
-        rank = np.full(max(entries.max(initial=0), whole[0].max(initial=0)) + 1, -1)
-        rank[entries] = np.arange(entries.size)
+        whole = np.concatenate(self._whole, axis=1) if self._whole else np.zeros((3, 0), np.int64)
+        real = np.concatenate(self._real, axis=1) if self._real else np.zeros((2, 0))
+        out = _found(whole[0], whole[1], outside)
+        rank = np.full(max(made.identifiers.max(initial=0), whole[0].max(initial=0)) + 1, -1)
+        rank[made.identifiers] = np.arange(made.identifiers.size)
         place = rank[whole[0]]
         order = np.argsort(place, kind="stable")
         order = order[place[order] >= 0]
-        whole, real = whole[:, order], real[:, order]
+        quantities, methods = _Numbers[str](), _Numbers[tuple[str, int]]()
+        quantity = _numbered(quantities, [one for one, _, _ in self._kinds])
+        method = _numbered(methods, [(name, version) for _, name, version in self._kinds])
+        kind = whole[2, order]
         return History(
-            acquisitions=found,
-            quantities=tuple(self._quantities),
-            methods=tuple(self._methods),
+            scanner_names=made.scanner_names,
+            phantoms=made.phantoms,
+            settings=made.settings,
+            scanners=made.scanners,
+            quantities=tuple(quantities),
+            methods=tuple(methods),
+            identifiers=made.identifiers,
+            days=made.days,
+            scanner_name=made.scanner_name,
+            phantom=made.phantom,
+            setting=made.setting,
+            scanner=made.scanner,
             acquisition=place[order],
-            position=whole[1],
-            quantity=whole[2],
-            method=whole[3],
-            values=real[0],
-            uncertainties=real[1],
-            conformity=whole[4],
-            lower=real[2],
-            upper=real[3],
+            position=whole[1, order],
+            quantity=quantity[kind],
+            method=method[kind],
+            values=real[0, order],
+            uncertainties=real[1, order],
+            out=out[order],
         )
+
+
+def _columns(found: Sequence[Sequence[Any]], count: int) -> Sequence[Sequence[Any]]:
+    return list(zip(*found, strict=True)) if found else [()] * count
+
+
+def _numbered(numbers: _Numbers[T], things: Sequence[T]) -> "NDArray[np.int64]":
+    return np.array([numbers[one] for one in things], dtype=np.int64)
+
+
+def _ordinals(days: Sequence[str]) -> "NDArray[np.int64]":
+    once = {day: date.fromisoformat(day).toordinal() for day in set(days)}
+    return np.array([once[day] for day in days], dtype=np.int64)
+
+
+def _found(entry: "NDArray[np.int64]", position: "NDArray[np.int64]", wanted: Sequence[Sequence[int]]) -> "NDArray[np.bool_]":
+    """Mark the rows, which are in order of entry and position, whose pair is among those wanted."""
+    found = np.zeros(entry.size, dtype=bool)
+    if entry.size and wanted:
+        pairs = np.array(wanted, dtype=np.int64)
+        places = int(max(position.max(), pairs[:, 1].max())) + 1
+        key, asked = entry * places + position, pairs[:, 0] * places + pairs[:, 1]
+        at = np.minimum(np.searchsorted(key, asked), key.size - 1)
+        found[at[key[at] == asked]] = True
+    return found
 
 
 def judged_at(connection: Connection, places: Sequence[tuple[int, int]]) -> tuple[Judged, ...]:

@@ -218,8 +218,8 @@ class Builder:
             phantom_sha256=row.phantom_sha256,
             acquired_at=datetime.fromisoformat(row.acquired_at),
             taken_in_at=datetime.fromisoformat(row.taken_in_at),
-            scanner=self._scanner(row.scanner),
-            settings=self._setting(row.settings),
+            scanner=self.scanner(row.scanner),
+            settings=self.setting(row.settings),
             series_uids=tuple(dict.fromkeys(one.series_instance_uid for one in series)),
             files=tuple(SourceFile(Path(file.path), file.sop_instance_uid, file.sha256) for file in files),
             centre_patient=None if row.centre_x_mm is None else centre,
@@ -233,12 +233,14 @@ class Builder:
             limits_sha256=row.limits_sha256,
         )
 
-    def _scanner(self, text: str) -> Scanner:
+    def scanner(self, text: str) -> Scanner:
+        """Read what the header said of the scanner."""
         if text not in self._scanners:
             self._scanners[text] = Scanner(**{k: v for k, v in json.loads(text).items() if k in _SCANNER_FIELDS})
         return self._scanners[text]
 
-    def _setting(self, text: str) -> Settings:
+    def setting(self, text: str) -> Settings:
+        """Read what the header said of the protocol."""
         if text not in self._settings:
             given: dict[str, Any] = {
                 k: tuple(v) if isinstance(v, list) else v for k, v in json.loads(text).items() if k in _SETTINGS_FIELDS

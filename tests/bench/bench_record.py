@@ -124,7 +124,7 @@ def main() -> None:
             assert found.whole, found.problems
             print(f"verify   {took:6.2f} s, {took / plain:.2f} times reading all rows; {found.head.number} entries")
             took, history = seconds(record.history)
-            print(f"history  {took:6.2f} s for {len(history.values)} figures of {len(history.acquisitions)} acquisitions")
+            print(f"history  {took:6.2f} s for {history.values.size} figures of {history.identifiers.size} acquisitions")
             took, fleet = seconds(lambda: record.sessions(details=False))
             print(f"sessions {took:6.2f} s for all {len(fleet)} sessions without details")
             took, sessions = seconds(lambda: record.sessions("scanner-00"))

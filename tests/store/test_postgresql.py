@@ -81,7 +81,7 @@ def test_a_record_on_a_server_says_the_same_as_one_in_a_file(url, path, make):
             history = record.history()
             found.append((
                 record.head(), record.sessions(), record.events(), record.baselines(), record.sign_offs(), record.limit_sets(),
-                record.refusals(), record.last_days(), history.values.tolist(), history.acquisitions,
+                record.refusals(), record.last_days(), history.values.tolist(), history.identifiers.tolist(),
                 record.known_files([f"{2:032x}{0:032x}", "x"]),
             ))  # fmt: skip
     assert found[0] == found[1]
