@@ -6,13 +6,16 @@ import numpy as np
 
 from qa.geometry import Floats, Plane
 from qa.locate.outline import Outline, Silhouette, find_outlines, find_silhouettes
-from qa.phantoms import Phantom
+from qa.phantoms import Phantom, Rods
 from qa.records import Acquisition, CrossSection, NotLocated, Pose
 
 __all__ = ["SIZE_TOLERANCE", "locate_body"]
 
 SIZE_TOLERANCE = 0.04
 """How far the size may be from the definition before it is taken for another phantom: gradients are out by less."""
+
+_BENT_TOLERANCE = 0.1
+"""The same for a phantom whose lattice tells what it is, and which is there to show how far an image is bent."""
 
 _OVALITY = 0.05
 _SECOND_OBJECT = 0.01
@@ -50,7 +53,7 @@ def locate_body(acquisition: Acquisition, phantom: Phantom) -> Pose | NotLocated
         return NotLocated(silhouettes)
     silhouettes = _of_body(silhouettes)
     outlines = find_outlines(pixels, planes[0], silhouettes)
-    reason = _not_round(silhouettes, outlines)
+    reason = _not_round(silhouettes, outlines, max(_OVALITY, _tolerance(phantom)))
     if reason:
         return NotLocated(reason)
     return (
@@ -68,7 +71,12 @@ def _of_body(silhouettes: tuple[Silhouette, ...]) -> tuple[Silhouette, ...]:
     return tuple(s for s in large if s.brightness > 0.6 * usual)
 
 
-def _not_round(silhouettes: tuple[Silhouette, ...], outlines: tuple[Outline, ...]) -> str:
+def _tolerance(phantom: Phantom) -> float:
+    """How far the size may be from the definition."""
+    return _BENT_TOLERANCE if any(isinstance(s, Rods) for s in phantom.sections) else SIZE_TOLERANCE
+
+
+def _not_round(silhouettes: tuple[Silhouette, ...], outlines: tuple[Outline, ...], most: float) -> str:
     """Say why the outlines are not a round body's; an empty string when they are."""
     largest = max(s.radius_mm for s in silhouettes)
     if max(s.second for s in silhouettes if s.radius_mm > 0.8 * largest) > _SECOND_OBJECT:
@@ -79,7 +87,7 @@ def _not_round(silhouettes: tuple[Silhouette, ...], outlines: tuple[Outline, ...
     if max(o.outside for o in seen) > 0.01:
         return "the phantom is cut by the edge of the image: centre it, or enlarge the field of view"
     worst = float(np.median([o.ovality for o in seen]))
-    if worst > _OVALITY:
+    if worst > most:
         return (
             f"the object is {200 * worst / (1 - worst):.0f} % out of round: this is not the phantom, "
             "it does not lie across its axis, or the image is grossly distorted"
@@ -178,7 +186,7 @@ def _u_plane(sections: tuple[CrossSection, ...]) -> float:
 
 def _wrong_size(phantom: Phantom, radius: float, *, one_slice: bool) -> str:
     true = phantom.radius_mm
-    if true is None or abs(radius / true - 1) <= SIZE_TOLERANCE:
+    if true is None or abs(radius / true - 1) <= _tolerance(phantom):
         return ""
     where = ", or the slice does not pass through its centre" if one_slice and radius < true else ""
     return f"the object's diameter is {2 * radius:.0f} mm, where {phantom.name} has {2 * true:.0f} mm: another phantom{where}"
