@@ -140,6 +140,9 @@ def _plain(value: Any) -> Any:  # noqa: ANN401 - any field of Setup
 
 def _figure(row: Row, one: Measurement, truth: Truth, machine: Scan) -> Figure:
     true = truth.value if one.slice is None else truth.by_slice.get(one.slice, truth.value)
+    if row.detail in truth.details:
+        # What sets the two apart is noise and shading, which neighbouring slices share.
+        true += truth.details[row.detail] - truth.value
     match row.scale:
         case "pixels":
             scale = 1 / _pixel_along(one.quantity, machine.setup.pixel_mm)
