@@ -74,7 +74,7 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date, label: str = "
     fixed = verdict is not None and (limit is None or limit.per_day is None)
     chart = control_chart(stream.days, stream.values, [start.index for start in stream.starts], grounds.rules)
     days, values = stream.days[stream.segment], stream.values[stream.segment]
-    alarm, out = bool(chart.out[-1]), _row(stream, (v is not None and is_out(v.conformity) for v in reversed(stream.verdicts)))
+    alarm, out = bool(chart.out[-1]), _row(stream, reversed(stream.out.tolist()))
     moving = trend(days, values)
     coming = None
     if fixed and verdict is not None and moving is not None and moving.real:

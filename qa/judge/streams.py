@@ -5,19 +5,21 @@ stream goes on, in a new segment; settings that are used side by side make strea
 day: measured again on the same day, the last counts.
 """
 
+from bisect import bisect_left
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date
 from itertools import pairwise
 from operator import attrgetter
+from typing import Generic, NamedTuple, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats
-from qa.records import Event, Judged, Measurement, RecordedAcquisition, Session, Settings, Verdict
+from qa.records import OUT_OF_LIMITS, Event, Judged, Measurement, RecordedAcquisition, Session, Settings, Verdict
 
-__all__ = ["SegmentStart", "Stream", "streams"]
+__all__ = ["Conditions", "Group", "SegmentStart", "Stream", "Ways", "chains", "restarts_of", "segment_starts", "streams"]
 
 _Values = tuple[object, ...]
 _SAME = 0.01
@@ -66,7 +68,7 @@ class Stream:
     values, uncertainties : (n,) float
         In `unit`; standard uncertainties.
     verdicts : tuple of Verdict or None
-        As the record keeps them.
+        As the record keeps them; of a stream that was made from columns only the latest is there.
     acquisitions : tuple of int
         Identifiers of the recorded acquisitions, to find the image.
     starts : tuple of SegmentStart
@@ -75,6 +77,8 @@ class Stream:
         The latest value with its details.
     slice_thickness_mm, field_strength_T : float or None
         Of the latest value, for choosing its limit.
+    was_out : (n,) bool or None
+        What `out` gives; None where the verdicts say it.
     """
 
     scanner_name: str
@@ -92,6 +96,14 @@ class Stream:
     latest: Measurement
     slice_thickness_mm: float | None = None
     field_strength_T: float | None = None
+    was_out: NDArray[np.bool_] | None = None
+
+    @property
+    def out(self) -> NDArray[np.bool_]:
+        """Where a value lay outside its limits, whatever its uncertainty."""
+        if self.was_out is not None:
+            return self.was_out
+        return np.array([v is not None and v.conformity in OUT_OF_LIMITS for v in self.verdicts], dtype=bool)
 
     @property
     def last_day(self) -> date:
@@ -104,9 +116,20 @@ class Stream:
         return slice(self.starts[-1].index, None)
 
 
-_Conditions = tuple[int, str, str, int]
+Conditions = tuple[int, str, str, int]
 """Settings by number, scanner software, method and its version: plain tuples, because there are as many as figures."""
-_Point = tuple[int, _Conditions, Judged, RecordedAcquisition]
+_Point = tuple[int, Conditions, Judged, RecordedAcquisition]
+T = TypeVar("T")
+
+
+class Group(NamedTuple, Generic[T]):
+    """Points with the same phantom and settings: days of the first and the last, their protocols, and the points."""
+
+    first: int
+    last: int
+    begins: str
+    ends: str
+    points: T
 
 
 def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[Stream, ...]:
@@ -125,7 +148,7 @@ def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[
     tuple of Stream
         In order of quantity, phantom and first day.
     """
-    ways = _Ways()
+    ways = Ways()
     found: dict[tuple[str, str], dict[int, dict[int, _Point]]] = {}
     for session in sorted(sessions, key=lambda s: s.day):
         day = session.day.toordinal()
@@ -136,15 +159,20 @@ def streams(sessions: Iterable[Session], events: Sequence[Event] = ()) -> tuple[
                 conditions = (way, software, measurement.method, measurement.method_version)
                 by_way = found.setdefault((measurement.quantity, acquisition.phantom), {})
                 by_way.setdefault(way, {})[day] = (day, conditions, judged, acquisition)
-    restarts = sorted((e for e in events if e.restarts_baseline), key=lambda e: e.day)
     return tuple(
-        _stream(chain, ways, [e for e in restarts if not e.quantities or quantity in e.quantities])
+        _stream([point for group in chain for point in group.points], ways, restarts_of(events, quantity))
         for (quantity, _), by_way in sorted(found.items())
-        for chain in _chains([list(points.values()) for points in by_way.values()])
+        for chain in chains(_group(list(points.values())) for points in by_way.values())
     )
 
 
-class _Ways:
+def restarts_of(events: Iterable[Event], quantity: str) -> list[Event]:
+    """Give the events that restart a quantity, in order of their days."""
+    concerned = (e for e in events if e.restarts_baseline and (not e.quantities or quantity in e.quantities))
+    return sorted(concerned, key=lambda e: e.day)
+
+
+class Ways:
     """Settings by number; such as differ by less than 1 % in every figure are the same."""
 
     def __init__(self) -> None:
@@ -152,6 +180,7 @@ class _Ways:
         self.numbers: dict[_Values, int] = {}
 
     def number(self, settings: Settings) -> int:
+        """Give the number of these settings; new ones get the next."""
         values = _values(settings)
         found = self.numbers.get(values)
         if found is None:
@@ -180,31 +209,58 @@ def _say(value: object) -> str:
     return "unknown" if value is None or value == "" else str(value)
 
 
-def _chains(groups: Iterable[list[_Point]]) -> list[list[_Point]]:
+def _group(points: list[_Point]) -> Group[list[_Point]]:
+    first, last = points[0], points[-1]
+    return Group(first[0], last[0], first[3].settings.protocol, last[3].settings.protocol, points)
+
+
+def chains(groups: Iterable[Group[T]]) -> list[list[Group[T]]]:
     """Join groups that follow each other in time, those of one protocol first; such as overlap stay apart."""
-    chains: list[list[_Point]] = []
-    for group in sorted(groups, key=lambda g: (g[0][0], g[-1][0])):
-        ended = [chain for chain in chains if chain[-1][0] < group[0][0]]
+    found: list[list[Group[T]]] = []
+    for group in sorted(groups, key=lambda g: (g.first, g.last)):
+        ended = [chain for chain in found if chain[-1].last < group.first]
         if ended:
-            max(ended, key=lambda c: (_protocol(c[-1]) == _protocol(group[0]), c[-1][0])).extend(group)
+            max(ended, key=lambda c: (c[-1].ends == group.begins, c[-1].last)).append(group)
         else:
-            chains.append(group)
-    return chains
+            found.append([group])
+    return found
 
 
-def _protocol(point: _Point) -> str:
-    return point[3].settings.protocol
+def segment_starts(
+    days: Sequence[int],
+    changed: Iterable[int],
+    conditions: Callable[[int], Conditions],
+    ways: Ways,
+    restarts: Iterable[Event],
+) -> tuple[SegmentStart, ...]:
+    """Say where a stream starts anew.
+
+    Parameters
+    ----------
+    days : sequence of int
+        Of its values, strictly increasing.
+    changed : iterable of int
+        Indices of the values whose conditions are not those of the value before.
+    conditions : callable
+        Gives the conditions of a value.
+    ways : Ways
+        What the conditions' numbers mean.
+    restarts : iterable of Event
+        That concern the quantity, from `restarts_of`.
+    """
+    reasons = {index: list(_changes(conditions(index - 1), conditions(index), ways)) for index in changed}
+    for event in restarts:
+        index = bisect_left(days, event.day.toordinal())
+        if 0 < index < len(days):
+            reasons.setdefault(index, []).append(f"the baseline was restarted: {event.text}")
+    later = (SegmentStart(i, date.fromordinal(days[i]), "; ".join(reasons[i])) for i in sorted(reasons) if reasons[i])
+    return (SegmentStart(0, date.fromordinal(days[0]), "the first session"), *later)
 
 
-def _stream(points: list[_Point], ways: _Ways, restarts: Sequence[Event]) -> Stream:
+def _stream(points: list[_Point], ways: Ways, restarts: Sequence[Event]) -> Stream:
     days, conditions, judged, acquisitions = zip(*points, strict=True)
-    starts = [SegmentStart(0, date.fromordinal(days[0]), "the first session")]
-    events = [(event.day.toordinal(), event.text) for event in restarts]
-    for index, (old, new) in enumerate(pairwise(conditions), start=1):
-        reasons = [] if old == new else list(_changes(old, new, ways))
-        reasons += [f"the baseline was restarted: {text}" for day, text in events if days[index - 1] < day <= days[index]]
-        if reasons:
-            starts.append(SegmentStart(index, date.fromordinal(days[index]), "; ".join(reasons)))
+    changed = (index for index, (old, new) in enumerate(pairwise(conditions), start=1) if old != new)
+    starts = segment_starts(days, changed, conditions.__getitem__, ways, restarts)
     measurements = [j.measurement for j in judged]
     latest, last = measurements[-1], acquisitions[-1]
     return Stream(
@@ -219,14 +275,14 @@ def _stream(points: list[_Point], ways: _Ways, restarts: Sequence[Event]) -> Str
         np.array([m.standard_uncertainty for m in measurements], dtype=float),
         tuple([j.verdict for j in judged]),
         tuple([a.identifier for a in acquisitions]),
-        tuple(starts),
+        starts,
         latest,
         last.settings.slice_thickness_mm,
         last.scanner.field_strength_T,
     )
 
 
-def _changes(old: _Conditions, new: _Conditions, ways: _Ways) -> Iterator[str]:
+def _changes(old: Conditions, new: Conditions, ways: Ways) -> Iterator[str]:
     if old[0] != new[0]:
         for word, a, b in zip(_SETTING_WORDS.values(), ways.known[old[0]], ways.known[new[0]], strict=True):
             if not _same(a, b):
@@ -237,5 +293,5 @@ def _changes(old: _Conditions, new: _Conditions, ways: _Ways) -> Iterator[str]:
         yield f"the method changed from {_method(old)} to {_method(new)}"
 
 
-def _method(conditions: _Conditions) -> str:
+def _method(conditions: Conditions) -> str:
     return f"{conditions[2]} (version {conditions[3]})"
