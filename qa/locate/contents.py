@@ -115,7 +115,8 @@ def _turned_by_lattice(acquisition: Acquisition, pose: Pose, phantom: Phantom, s
     c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
     left = a - b @ np.array([[c, s], [-s, c]])
     u_turn = math.degrees(math.sqrt(float(np.sum(left**2)) / max(1, a.size - 3) / float(np.sum(b**2))))
-    return replace(_moved(pose, _Guess(1.0, reversed=False, shift_mm=0.0, turn_deg=turn)), u_rotation_deg=u_turn)
+    turned = _moved(pose, _Guess(1.0, reversed=False, shift_mm=0.0, turn_deg=turn))
+    return replace(turned, u_rotation_deg=math.hypot(u_turn, _LEAST_U_DEG))
 
 
 def _upright(pose: Pose, plane: Plane) -> Pose:

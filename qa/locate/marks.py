@@ -89,7 +89,26 @@ def find_marks(image: NDArray[np.floating], view: SliceView, section: Rods | Lat
     strength = dark[rows, columns]
     usual = float(np.median(np.sort(strength)[::-1][: _expected(section)]))
     kept = strength > 0.45 * usual
-    return np.stack([window.X[rows[kept], columns[kept]], window.Y[rows[kept], columns[kept]]], axis=1)
+    rows, columns = rows[kept], columns[kept]
+    places = np.stack(
+        [
+            (window.columns.start + columns + _vertex(dark, rows, columns, across=True)) * pixel[1],
+            (window.rows.start + rows + _vertex(dark, rows, columns, across=False)) * pixel[0],
+        ],
+        axis=1,
+    )
+    return view.to_phantom(places)
+
+
+def _vertex(values: NDArray[np.floating], rows: NDArray[np.intp], columns: NDArray[np.intp], *, across: bool) -> Floats:
+    """Place of a parabola's vertex through a peak and its two neighbours along one axis, pixels from the peak."""
+    down, right = (0, 1) if across else (1, 0)
+    height, width = values.shape
+    before = values[np.maximum(rows - down, 0), np.maximum(columns - right, 0)].astype(np.float64)
+    after = values[np.minimum(rows + down, height - 1), np.minimum(columns + right, width - 1)].astype(np.float64)
+    bend = before - 2 * values[rows, columns] + after
+    shift: Floats = np.clip(0.5 * (before - after) / np.where(bend < 0, bend, -1.0), -0.5, 0.5)
+    return shift
 
 
 def _expected(section: Rods | Lattice) -> int:
