@@ -7,7 +7,7 @@ from typing import cast, get_args
 from qa.errors import UsageError
 from qa.report.commission_content import CampaignResult, Case, CommissionResult, Figure, Tally
 from qa.report.commission_plots import draw_errors
-from qa.report.commission_words import TallyLine, commission_document, missed_words, tally_line
+from qa.report.commission_words import TallyLine, commission_document, missed_words, missing_words, tally_line
 from qa.report.content import CAUTIONS, PageSize
 from qa.report.data import AttachedFile
 from qa.report.figures_json import to_json
@@ -173,9 +173,7 @@ def _campaign(campaign: CampaignResult, number: int, width_mm: float, figures: d
         sentence=f"{count_of(len(campaign.cases), 'scan')}, seeds {campaign.first_seed} to {last}.",
         lines=tuple(tally_line(tally) for tally in campaign.tallies),
         not_measured=tuple(
-            Fact(_heading(tally), f"{reason} ({count_of(count, 'scan')}, first with seed {seed})")
-            for tally in campaign.tallies
-            for reason, count, seed in tally.missing
+            Fact(reason[:1].upper() + reason[1:], names) for reason, names in missing_words(campaign, _heading)
         ),
         remarks=tuple(Fact(_heading(tally), tally.remark) for tally in campaign.tallies if tally.remark),
         charts=_charts(campaign, number, width_mm, figures),

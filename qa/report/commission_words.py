@@ -1,7 +1,7 @@
 """A commissioning run in words: lines of its table, one case, and the JSON document."""
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -18,6 +18,7 @@ __all__ = [
     "commission_table",
     "commission_text",
     "missed_words",
+    "missing_words",
     "tally_line",
 ]
 
@@ -149,11 +150,7 @@ def _campaign_text(campaign: CampaignResult) -> str:
         )  # fmt: skip
     lines = [head, table_text(_HEADS, rows)]
     lines += [f"bar of {words}: {bar}" for bar, words in _bars(campaign.tallies)]
-    lines += [
-        f"not measured: {tally.row}: {reason} ({count_of(count, 'case')}, first with seed {seed})"
-        for tally in campaign.tallies
-        for reason, count, seed in tally.missing
-    ]
+    lines += [f"not measured: {names}: {reason}" for reason, names in missing_words(campaign, lambda tally: tally.row)]
     lines += [f"{tally.row}: {tally.remark}" for tally in campaign.tallies if tally.remark]
     missed = [tally for tally in campaign.tallies if tally.met is False]
     if missed:
@@ -161,6 +158,18 @@ def _campaign_text(campaign: CampaignResult) -> str:
     else:
         lines.append("every bar was met")
     return "\n".join(lines)
+
+
+def missing_words(campaign: CampaignResult, name: Callable[[Tally], str]) -> list[tuple[str, str]]:
+    """Say why something was not measured, in how many cases and in which first; and of what, by the names given."""
+    held: dict[tuple[str, int, int], list[str]] = {}
+    for tally in campaign.tallies:
+        for missing in tally.missing:
+            held.setdefault(missing, []).append(name(tally))
+    return [
+        (f"{reason} ({count_of(count, 'case')}, first with seed {seed})", "; ".join(names))
+        for (reason, count, seed), names in held.items()
+    ]
 
 
 def _bars(tallies: Sequence[Tally]) -> list[tuple[str, str]]:
