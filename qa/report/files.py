@@ -9,11 +9,11 @@ from pathlib import Path
 
 from qa.errors import FaultError
 
-__all__ = ["save_report"]
+__all__ = ["file_stem", "save_report", "why_not_written"]
 
 _CAUSES = {
-    errno.ENOSPC: "the disk is full: free some space and run the report again",
-    errno.EDQUOT: "the disk quota is used up: free some space and run the report again",
+    errno.ENOSPC: "the disk is full: free some space and run the command again",
+    errno.EDQUOT: "the disk quota is used up: free some space and run the command again",
     errno.EACCES: "there is no permission to write there: give this user write permission on the folder",
     errno.EPERM: "there is no permission to write there: give this user write permission on the folder",
     errno.EROFS: "the disk is read-only: make it writable or move the department folder",
@@ -24,15 +24,15 @@ _ALLOWED = frozenset("abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ012345
 _LONGEST_NAME_BYTES = 120
 
 
-def _file_stem(scanner: str) -> str:
+def file_stem(scanner: str) -> str:
     """Turn a scanner's name into a part of a file name that every file system takes; letters of any script stay."""
     text = "".join(c if c in _ALLOWED or c.isalnum() else "-" for c in scanner).strip("-.") or "scanner"
     return text.encode()[:_LONGEST_NAME_BYTES].decode(errors="ignore")
 
 
-def _fault(path: Path, error: OSError) -> FaultError:
-    cause = _CAUSES.get(error.errno or 0, f"the system says {error.strerror or error}: see to it and run the report again")
-    return FaultError(f"The report {path} was not written: {cause}.")
+def why_not_written(error: OSError) -> str:
+    """Say what kept a file from being written, and what to do, as the end of a sentence."""
+    return _CAUSES.get(error.errno or 0, f"the system says {error.strerror or error}: see to it and run the command again")
 
 
 def _link_new(temporary: Path, target: Path) -> bool:
@@ -91,7 +91,7 @@ def save_report(folder: Path, scanner: str, day: date, pdf: bytes) -> Path:
         The disk is full, permission is missing, or the system failed otherwise.
     """
     year = folder / f"{day.year:04d}"
-    stem = f"{_file_stem(scanner)}_{day.isoformat()}"
+    stem = f"{file_stem(scanner)}_{day.isoformat()}"
     target = year / f"{stem}.pdf"
     temporary: Path | None = None
     try:
@@ -107,7 +107,7 @@ def save_report(folder: Path, scanner: str, day: date, pdf: bytes) -> Path:
             number += 1
             target = year / f"{stem}_{number}.pdf"
     except OSError as error:
-        raise _fault(target, error) from error
+        raise FaultError(f"The report {target} was not written: {why_not_written(error)}.") from error
     finally:
         if temporary is not None:
             with contextlib.suppress(OSError):

@@ -56,7 +56,7 @@ class CalendarRow:
 
 @dataclass(frozen=True)
 class OverviewRow:
-    """One scanner in the table of standings."""
+    """One scanner in the table of standings; `keys` sort its columns: standing, last session, next due, share made."""
 
     name: str
     description: str
@@ -66,6 +66,7 @@ class OverviewRow:
     last_session: str
     next_due: str
     kept: str
+    keys: tuple[str, str, str, str]
 
 
 @dataclass(frozen=True)
@@ -167,6 +168,12 @@ def _overview(scanners: Iterable[FleetScanner]) -> tuple[OverviewRow, ...]:
             last_session=long_date(scanner.last_session) if scanner.last_session else "none",
             next_due=long_date(scanner.next_due) if scanner.next_due else "\u2013",
             kept=_kept(scanner),
+            keys=(
+                str(_STANDINGS.index(scanner.standing)),
+                scanner.last_session.isoformat() if scanner.last_session else "",
+                scanner.next_due.isoformat() if scanner.next_due else "9999",
+                f"{scanner.made / scanner.expected:.6f}" if scanner.expected else "2",
+            ),
         )
         for scanner in rows
     )

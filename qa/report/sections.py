@@ -40,6 +40,7 @@ __all__ = [
     "notices",
     "pictures",
     "provenance",
+    "region_words",
     "signatures",
     "trends",
 ]
@@ -313,16 +314,18 @@ def _compared(one: Comparison, name: str, figures: Figures) -> Compared:
     return Compared(good, bad)
 
 
+def region_words(name: str) -> str:
+    """Name a region as a key does."""
+    return _REGIONS.get(name, name)
+
+
 def _shown(
     picture: Picture, figure: str, title: str, largest_mm: float, figures: Figures, *,
     window: tuple[float, float] | None = None, remark: str = "", used_by: Mapping[tuple[str, int], str] = _NOBODY,
 ) -> Shown:  # fmt: skip
     drawn = draw_picture(picture, largest_mm, largest_mm, window)
     figures[figure] = drawn.svg
-    entries = [
-        (entry.number, _REGIONS.get(entry.name, entry.name), used_by.get((entry.name, picture.slice), ""))
-        for entry in drawn.key
-    ]
+    entries = [(entry.number, region_words(entry.name), used_by.get((entry.name, picture.slice), "")) for entry in drawn.key]
     names = ", ".join(f"{number} {name}" for number, name, _ in entries)
     return Shown(
         title=clipped(title, 120),

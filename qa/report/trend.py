@@ -30,7 +30,7 @@ from qa.report.style import (
 )
 from qa.report.timeline import days, time_ticks
 
-__all__ = ["draw_trend", "marks_present", "pieces_of", "value_ticks"]
+__all__ = ["draw_trend", "marks_present", "pieces_of", "point_places", "value_ticks"]
 
 _PLOT_MM = 25.0
 _LEFT_MM, _RIGHT_MM, _BOTTOM_MM, _TOP_MM, _FLAGS_MM = 18.0, 25.0, 4.8, 1.2, 3.2
@@ -300,6 +300,24 @@ def _last_shown(chart: TrendChart) -> date:
     return max(chart.last_day, min(wanted, chart.last_day + longest))
 
 
+def _area(chart: TrendChart, width_mm: float) -> tuple[Plot, date]:
+    """Lay out the plotting area; return it, and the last day on its time axis."""
+    figure = new_figure(width_mm, _PLOT_MM + _BOTTOM_MM + _TOP_MM + (_FLAGS_MM if chart.events else 0.0))
+    last_shown = _last_shown(chart)
+    first, last = days(chart.first_day), days(last_shown) + 1
+    margin = 0.01 * (last - first) + max(0.0, _LEAST_DAYS - (last - first)) / 2
+    box = (_LEFT_MM, _BOTTOM_MM, width_mm - _LEFT_MM - _RIGHT_MM, _PLOT_MM)
+    return Plot(figure, box, (first - margin, last + margin), _value_range(chart)), last_shown
+
+
+def point_places(chart: TrendChart, width_mm: float) -> list[tuple[float, float]]:
+    """Tell where the points of a chart lie: shares of its width from the left, and of its height from the top."""
+    plot, _ = _area(chart, width_mm)
+    width, height = (72 * float(inches) for inches in plot.figure.get_size_inches())
+    places = plot.at([days(p.at) for p in chart.points], [p.value for p in chart.points])
+    return [(float(x) / width, 1 - float(y) / height) for x, y in places]
+
+
 def draw_trend(chart: TrendChart, width_mm: float) -> bytes:
     """Draw one quantity over time.
 
@@ -327,12 +345,7 @@ def draw_trend(chart: TrendChart, width_mm: float) -> bytes:
     """
     if not chart.points:
         raise ValueError("a trend chart needs at least one point, got none")
-    figure = new_figure(width_mm, _PLOT_MM + _BOTTOM_MM + _TOP_MM + (_FLAGS_MM if chart.events else 0.0))
-    last_shown = _last_shown(chart)
-    first, last = days(chart.first_day), days(last_shown) + 1
-    margin = 0.01 * (last - first) + max(0.0, _LEAST_DAYS - (last - first)) / 2
-    box = (_LEFT_MM, _BOTTOM_MM, width_mm - _LEFT_MM - _RIGHT_MM, _PLOT_MM)
-    plot = Plot(figure, box, (first - margin, last + margin), _value_range(chart))
+    plot, last_shown = _area(chart, width_mm)
     _draw_axes(plot, chart, last_shown)
     _draw_missing(plot, chart)
     _name_lines(plot, _draw_limits(plot, chart) + _draw_history(plot, chart))
@@ -340,7 +353,7 @@ def draw_trend(chart: TrendChart, width_mm: float) -> bytes:
     _draw_happenings(plot, chart)
     if chart.forecast is not None:
         _draw_forecast(plot, chart, chart.forecast)
-    return to_svg(figure)
+    return to_svg(plot.figure)
 
 
 def marks_present(charts: Sequence[TrendChart]) -> tuple[Mark, ...]:
