@@ -157,5 +157,6 @@ def _position(setup: Setup, section: WedgeBars, name: str) -> dict[str, Truth]:
         place = on_plane(setup, plane, X, Y)
         ends.append(np.stack(image_place(setup, plane, place[0], place[1])))
     down = setup.axes.T[:2] @ setup.orientation[:, 1]
-    value = 0.5 * float((ends[0] - ends[1]) @ (down / np.hypot(*down))) * math.copysign(1, section.bars[0].slope)
+    apart = section.bars[0].slope - section.bars[1].slope
+    value = float((ends[0] - ends[1]) @ (down / np.hypot(*down))) / apart
     return {name: Truth(value, {number: value}, {"slice": number, "on_axis_mm": on_axis})}
