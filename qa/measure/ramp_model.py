@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from qa.geometry import Floats
 from qa.locate.response import Response, Step
 from qa.locate.view import SliceView
-from qa.measure.profiles import rise
+from qa.measure.profiles import Reader, rise
 from qa.phantoms import Ramps
 
 __all__ = ["RampFit", "fit_ramps"]
@@ -178,34 +178,6 @@ class _Expected:
     leak: Floats
 
 
-class _Reader:
-    """Functions known on even steps, each with its slope and others: groups of (value, slope by place, ...).
-
-    Values are read with the bend that their slopes tell (error of fourth order), the rest along straight lines; beyond the
-    ends, the ends.
-    """
-
-    def __init__(self, start: float, step: float, groups: list[list[Floats]]) -> None:
-        self._start, self._step = start, step
-        self._sizes = [len(group) for group in groups]
-        self._table = np.stack([column for group in groups for column in group], axis=1)
-
-    def __call__(self, place: Floats) -> list[list[Floats]]:
-        """Return the same groups at places (P,)."""
-        at = np.clip((place - self._start) / self._step, 0.0, len(self._table) - 1.001)
-        k = at.astype(np.intp)
-        rest = at - k
-        low, high = np.take(self._table, k, axis=0).T, np.take(self._table, k + 1, axis=0).T
-        read = low + rest * (high - low)
-        bend = rest * (1 - rest) * (self._step / 2)
-        groups, first = [], 0
-        for size in self._sizes:
-            read[first] -= bend * (high[first + 1] - low[first + 1])
-            groups.append(list(read[first : first + size]))
-            first += size
-        return groups
-
-
 class _Model:
     """Squared magnitudes of the block's pixels as a function of twelve parameters, with its slopes."""
 
@@ -290,7 +262,7 @@ class _Model:
             (strong * _LEAK * fill[0]) ** 2,
         )
 
-    def _across(self, q: Floats) -> _Reader:
+    def _across(self, q: Floats) -> Reader:
         """Image across the block of the fill and of each slot, with slopes by place, spacing and box."""
         response = Response(q[_SPACING] * self.across_mm, q[_BOX] * self.across_mm)
         far = float(np.abs(self.pixels.v).max()) + 3.5
@@ -300,7 +272,7 @@ class _Model:
         bounds += [(y - s.height_mm / 2, y + s.height_mm / 2) for y, s in zip(self.offset, self.section.slots, strict=True)]
         parts = [_combine(response.slopes(v - first), response.slopes(v - second)) for first, second in bounds]
         parts[0][0] += 1.0
-        return _Reader(-far, _ACROSS_MM, parts)
+        return Reader(-far, _ACROSS_MM, parts)
 
     def solve(self, start: Floats) -> RampFit | str:
         """Gauss-Newton with limited steps; blur and softness are held near what is usual by weak pulls."""
@@ -337,9 +309,9 @@ class _Model:
         noise = residual[clean] / np.sqrt(expected.noise[clean])
         misfit = float(np.mean(noise**2))
         scatter = (weighted * expected.noise) @ weighted.T * (misfit * _together(noise, where))
-        return self._result(q, normal, scatter, misfit)
+        return self._result(q, normal, scatter, misfit, residual)
 
-    def _result(self, q: Floats, normal: Floats, scatter: Floats, misfit: float) -> RampFit:
+    def _result(self, q: Floats, normal: Floats, scatter: Floats, misfit: float, residual: Floats) -> RampFit:
         free = [k for k in range(_PARAMETERS) if not (k == _SOFT and q[k] <= _LEAST_SOFT_MM**2 * 1.001)]
         covariance = np.zeros_like(normal)
         scale = np.sqrt(np.diag(normal)[free])
@@ -349,7 +321,7 @@ class _Model:
         bars = np.array([_bar(0), _bar(1)])
         lengths = q[bars[:, 1]]
         thickness = float(self.slope * 2 * lengths.prod() / lengths.sum())
-        heights, amplitudes = self._profile(q, thickness)
+        heights, amplitudes = self._profile(q, residual)
         return RampFit(
             middles_mm=q[bars[:, 0]] + self.section.block_centre_mm[0],
             lengths_mm=lengths,
@@ -366,17 +338,25 @@ class _Model:
             amplitudes=amplitudes,
         )
 
-    def _profile(self, q: Floats, thickness: float) -> tuple[Floats, Floats]:
-        """Height in the slice and squared amplitude of the pixels in the middle of each slot, in shares of the bar's."""
-        pixels = self.pixels
+    def _profile(self, q: Floats, residual: Floats) -> tuple[Floats, Floats]:
+        """Height in the slice and squared amplitude, in shares of the bar's, of the pixels in the middle of each slot.
+
+        The squared amplitude is that of the fitted shape and what the pixel's power is off it: what rings in is left out.
+        """
+        pixels, section = self.pixels, self.section
+        edge = _edge_table(section, math.sqrt(q[_SOFT]))
+        lengths = q[[_bar(0)[1], _bar(1)[1]]]
+        thickness = self.slope * 2 * lengths.prod() / lengths.sum()
         places, amplitudes = [], []
-        for k, slot in enumerate(self.section.slots):
+        for k, slot in enumerate(section.slots):
             middle, length, height = q[list(_bar(k))]
             near = np.abs(pixels.v - q[_SHIFT] - q[_TURN] * pixels.u - self.offset[k]) < max(
                 0.3 * slot.height_mm, 0.6 * self.across_mm
             )
-            places.append((self.u[k][near] - middle) * thickness / length * math.copysign(1, self.slopes[k]))
-            amplitudes.append((pixels.power[near] - q[_FLOOR]) / (pixels.level[near] * height) ** 2)
+            place = (self.u[k][near] - middle) * thickness / length
+            ((left, *_),), ((right, *_),) = edge(place + thickness / 2), edge(place - thickness / 2)
+            places.append(place * math.copysign(1, self.slopes[k]))
+            amplitudes.append((left - right) ** 2 + residual[near] / (pixels.level[near] * height) ** 2)
         return np.concatenate(places), np.concatenate(amplitudes)
 
 
@@ -390,10 +370,10 @@ def _combine(first: Step, second: Step) -> list[Floats]:
     ]
 
 
-def _edge_table(section: Ramps, soft_mm: float) -> _Reader:
+def _edge_table(section: Ramps, soft_mm: float) -> Reader:
     """Rise of a bar's edge, with slopes by place and softness, against height in the slice."""
     box = float(np.mean([slot.thickness_mm for slot in section.slots]))
     far = box / 2 + 5 * soft_mm
     step = min(soft_mm / 4, box / 8)
     edge = rise(np.arange(-far, far + step, step), box, soft_mm)
-    return _Reader(-far, step, [[edge.value, edge.by_place, edge.by_soft]])
+    return Reader(-far, step, [[edge.value, edge.by_place, edge.by_soft]])
