@@ -4,9 +4,11 @@ No file, no database and no clock: the day comes in as an argument, and the same
 `judge` holds one measurement against its limit; `assess` judges a scanner with its whole history as of a day.
 """
 
+from qa.judge.abreast import control_charts
 from qa.judge.assess import assess, assess_streams
 from qa.judge.baseline import BASELINE_SESSIONS, NoBaseline, baseline_from, in_force, propose_baseline
 from qa.judge.causes import likely_causes
+from qa.judge.columns import ScannerStreams, scanner_streams
 from qa.judge.control import FALSE_ALARM_RATE, RULES, ControlChart, ControlRules, control_chart
 from qa.judge.decide import conformity, conformity_probability, is_out, judge, why_not_judged
 from qa.judge.derived import frequency_drift, with_derived
@@ -38,6 +40,7 @@ __all__ = [
     "NoBaseline",
     "Onset",
     "QuantityState",
+    "ScannerStreams",
     "Schedule",
     "SegmentStart",
     "Stream",
@@ -55,6 +58,7 @@ __all__ = [
     "conformity",
     "conformity_probability",
     "control_chart",
+    "control_charts",
     "control_rules",
     "days_overdue",
     "describe",
@@ -69,6 +73,7 @@ __all__ = [
     "onset",
     "problems",
     "propose_baseline",
+    "scanner_streams",
     "schedule_of",
     "streams",
     "trend",

@@ -6,7 +6,9 @@ from datetime import date
 
 import numpy as np
 
+from qa.judge.abreast import control_charts
 from qa.judge.causes import Movement, likely_causes
+from qa.judge.control import ControlChart
 from qa.judge.quantity import figure, lasting_alarm, quantity_state, title
 from qa.judge.records import Assessment, Grounds, QuantityState, Standing
 from qa.judge.schedule import Schedule, completeness, days_overdue, due_day
@@ -49,16 +51,42 @@ def assess(scanner_name: str, history: Iterable[Session], grounds: Grounds, toda
 
 
 def assess_streams(
-    scanner_name: str, histories: Sequence[Stream], days: Sequence[date], grounds: Grounds, today: date
+    scanner_name: str,
+    histories: Sequence[Stream],
+    days: Sequence[date],
+    grounds: Grounds,
+    today: date,
+    *,
+    charts: Sequence[ControlChart] | None = None,
 ) -> Assessment:
-    """Judge a scanner from streams that were made before, as `assess` does; `days` are those of all its sessions."""
+    """Judge a scanner from streams that were made before, as `assess` does.
+
+    Parameters
+    ----------
+    scanner_name : str
+        Whose they are.
+    histories : sequence of Stream
+        All its streams.
+    days : sequence of datetime.date
+        Those of all its sessions.
+    grounds, today
+        As for `assess`.
+    charts : sequence of ControlChart, optional
+        Those of the streams, in their order, where they were made before for many scanners at once (`control_charts`).
+    """
     events = tuple(e for e in grounds.events if e.scanner_name == scanner_name)
     # Downtime may be planned ahead; of the rest only what has happened counts.
     schedule = grounds.schedule.with_events(events)
     events = tuple(e for e in events if e.day <= today)
     grounds = replace(grounds, events=events, schedule=schedule)
     last = max(days, default=None)
-    states = _in_use([quantity_state(s, grounds, today, _label(s, histories)) for s in histories], last, grounds)
+    if charts is None:
+        charts = control_charts(histories, grounds.rules)
+    judged = [
+        quantity_state(stream, grounds, today, _label(stream, histories), chart)
+        for stream, chart in zip(histories, charts, strict=True)
+    ]
+    states = _in_use(judged, last, grounds)
     order = list(QUANTITIES)
     states.sort(key=lambda s: (order.index(s.quantity) if s.quantity in QUANTITIES else len(order), s.stream.phantom))
     counting = [s for s in states if not s.superseded]

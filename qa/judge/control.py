@@ -47,13 +47,22 @@ from qa.judge.charts import nelson, tabular_cusum
 from qa.judge.student import normal_score, normal_scores, student_bound
 
 __all__ = [
+    "CALM",
+    "CORRELATION_AT_MOST",
     "FALSE_ALARM_RATE",
     "LEARNING",
+    "QUARANTINE",
+    "REFERENCE",
     "RULES",
     "ControlChart",
     "ControlRules",
+    "Walked",
+    "assemble",
     "control_chart",
     "first_outliers",
+    "judged_segments",
+    "steps_of",
+    "walk",
 ]
 
 LEARNING = 10
@@ -62,9 +71,11 @@ QUARANTINE = 8
 """Sessions after which one joins the reference, if no alarm came."""
 REFERENCE = 104
 """Sessions of a segment that may join the reference: two years of weeks, so that a season is not taken for a change."""
-_CORRELATION_AT_MOST = 0.4
+CORRELATION_AT_MOST = 0.4
+"""Autocorrelation that is allowed for at most."""
 _OUTLIER = 8.0
-_CALM = 2.0
+CALM = 2.0
+"""Standard deviations within which the smoothed course is calm."""
 
 FALSE_ALARM_RATE: Mapping[float, float] = MappingProxyType({0.0: 0.0056, 0.3: 0.0074})
 """Share of sessions in which the default rules start a false alarm, by lag-one autocorrelation of the stable series."""
@@ -188,6 +199,16 @@ def control_chart(
     """
     rules = rules or ControlRules()
     day, x = np.asarray(days, dtype=float), np.asarray(values, dtype=float)
+    return assemble(x, starts, (walk(day[s], x[s], rules) for s in judged_segments(starts, x.size)), rules)
+
+
+def judged_segments(starts: Sequence[int], n: int) -> Iterator[slice]:
+    """Give the segments that are long enough to be judged."""
+    return (slice(first, end) for first, end in pairwise([*starts, n]) if end - first > LEARNING)
+
+
+def assemble(x: Floats, starts: Sequence[int], walked: Iterable["Walked"], rules: ControlRules) -> ControlChart:
+    """Make the charts of one history of what came of each of its `judged_segments`."""
     n = x.size
     columns = np.full((8, n), np.nan)
     correlations = np.full(n, np.nan)
@@ -200,16 +221,11 @@ def control_chart(
         if on
     }
     tripped["outlier"] = np.zeros(n, dtype=bool)
-    bounds = [*starts, n]
-    for number, (first, end) in enumerate(pairwise(bounds)):
+    for number, (first, end) in enumerate(pairwise([*starts, n])):
         segment[first:end] = number
-        if end - first <= LEARNING:
-            continue
-        judged = slice(first + LEARNING, end)
-        outlier = first_outliers(x[first : first + LEARNING])
+    for place, (outlier, models, z, (smooth, deviation)) in zip(judged_segments(starts, n), walked, strict=True):
+        first, judged = place.start, slice(place.start + LEARNING, place.stop)
         tripped["outlier"][first : first + LEARNING] = outlier
-        # Sums of squares are taken about the first value, or they would lose all digits of a centre frequency.
-        models, z, (smooth, deviation) = _walk(x[first:end] - x[first], _steps(day[first:end]), outlier, rules)
         mean, sigma, spread, freedom, correlation, _, sessions = models
         centre, reach, half = x[first] + mean, student_bound(3.0, freedom) * spread, rules.width * deviation * sigma
         count[judged], correlations[judged] = sessions, correlation
@@ -241,6 +257,27 @@ def _trips(
     if rules.moving_range:
         jumps = np.abs(np.diff(z, prepend=z[0])) / np.sqrt(2 * (1 - correlation))
         yield "moving-range", jumps > rules.jump
+
+
+class Walked(NamedTuple):
+    """What came of one segment of n sessions.
+
+    Attributes
+    ----------
+    outlier : (LEARNING,) bool
+        First sessions far from the rest.
+    models : (7, n - LEARNING) float
+        What the reference said of each further session: the fields of `_Model`.
+    scores : (n - LEARNING,) float
+        Deviations as standard normal values.
+    course : (2, n - LEARNING) float
+        The smoothed course and its standard deviation.
+    """
+
+    outlier: NDArray[np.bool_]
+    models: Floats
+    scores: Floats
+    course: Floats
 
 
 class _Model(NamedTuple):
@@ -285,11 +322,12 @@ class _Reference:
         if self.pairs > 2:
             covariance = self.products - mean * (self.before + self.after) + self.pairs * mean * mean
             raw = covariance / self.pairs / (variance * (n - 1) / n)
-            correlation = min(max(raw + (1 + 4 * raw) / n + 1 / math.sqrt(n), 0.0), _CORRELATION_AT_MOST)
+            correlation = min(max(raw + (1 + 4 * raw) / n + 1 / math.sqrt(n), 0.0), CORRELATION_AT_MOST)
         # Correlated sessions tell less of their mean (variance up by f) and seem to scatter less than they do.
         f = (1 + correlation) / (1 - correlation)
         sigma = math.sqrt(variance * (n - 1) / max(n - f, 1.0))
-        freedom = (n - 1) * (1 - correlation**2) / (1 + correlation**2)
+        square = correlation * correlation
+        freedom = (n - 1) * (1 - square) / (1 + square)
         return _Model(mean, sigma, sigma * math.sqrt(1 + f / n), freedom, correlation, f / (n + f), n)
 
 
@@ -317,11 +355,10 @@ class _Smoother:
         self.value, self.variance, self.covariance, self.weights = value, variance, covariance, weights
 
 
-def _walk(x: Floats, steps: list[float], outlier: NDArray[np.bool_], rules: ControlRules) -> tuple[Floats, Floats, Floats]:
-    """Go along one segment; a loop, because what joins the reference hangs on what was said before.
-
-    Returns, from the first judged session on, the models as columns, the scores, and the smoothed course with its deviation.
-    """
+def walk(day: Floats, x: Floats, rules: ControlRules) -> Walked:
+    """Go along one segment; a loop, because what joins the reference hangs on what was said before."""
+    # Sums of squares are taken about the first value, or they would lose all digits of a centre frequency.
+    x, steps, outlier = x - x[0], steps_of(day), first_outliers(x[:LEARNING])
     values, bad = x.tolist(), outlier.tolist() + [False] * (x.size - LEARNING)
     reference, smooth = _Reference(), _Smoother(rules.weight)
     for i in range(LEARNING):
@@ -339,7 +376,7 @@ def _walk(x: Floats, steps: list[float], outlier: NDArray[np.bool_], rules: Cont
             model = reference.model()
         z = normal_score((values[i] - model.mean) / model.spread, model.freedom)
         ((smoothed, deviation),) = smooth.course((z,), (steps[i],), model)
-        calm = abs(smoothed) < _CALM * deviation
+        calm = abs(smoothed) < CALM * deviation
         if abs(z) > 3:
             bad[i] = True
         if rules.ewma and abs(smoothed) > rules.width * deviation:
@@ -352,10 +389,10 @@ def _walk(x: Floats, steps: list[float], outlier: NDArray[np.bool_], rules: Cont
     by_session = np.empty((len(_Model._fields), x.size - LEARNING))
     by_session[:, : len(models)] = np.array(models).T
     by_session[:, len(models) :] = np.array(model)[:, np.newaxis]
-    return by_session, np.concatenate((scores, rest)), np.array(course).T
+    return Walked(outlier, by_session, np.concatenate((scores, rest)), np.array(course).T)
 
 
-def _steps(day: Floats) -> list[float]:
+def steps_of(day: Floats) -> list[float]:
     """Gap before each session in usual intervals; whole where a session came on time."""
     gaps = np.diff(day)
     ratio = gaps / max(float(np.median(gaps[: LEARNING - 1])), 1 / 24)

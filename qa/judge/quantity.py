@@ -40,7 +40,9 @@ def figure(value: float, quantity: str, unit: str) -> str:
     return f"{value:.{decimals}f}" + ("" if unit == "1" else f" {unit}")
 
 
-def quantity_state(stream: Stream, grounds: Grounds, today: date, label: str = "") -> QuantityState:
+def quantity_state(
+    stream: Stream, grounds: Grounds, today: date, label: str = "", chart: ControlChart | None = None
+) -> QuantityState:
     """Judge one history as of a day.
 
     Parameters
@@ -53,6 +55,8 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date, label: str = "
         The day.
     label : str
         What sentences call it; its title otherwise.
+    chart : ControlChart, optional
+        Its chart, where that was made before.
 
     Returns
     -------
@@ -72,7 +76,8 @@ def quantity_state(stream: Stream, grounds: Grounds, today: date, label: str = "
     verdict = stream.verdicts[-1]
     limit = choose(grounds.limits, stream.quantity, context).limit
     fixed = verdict is not None and (limit is None or limit.per_day is None)
-    chart = control_chart(stream.days, stream.values, [start.index for start in stream.starts], grounds.rules)
+    if chart is None:
+        chart = control_chart(stream.days, stream.values, [start.index for start in stream.starts], grounds.rules)
     days, values = stream.days[stream.segment], stream.values[stream.segment]
     alarm, out = bool(chart.out[-1]), _row(stream, reversed(stream.out.tolist()))
     moving = trend(days, values)

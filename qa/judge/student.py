@@ -21,9 +21,9 @@ def normal_score(t: float, freedom: float) -> float:
     return math.copysign(scale * math.sqrt(math.log1p(t * t / freedom)), t)
 
 
-def normal_scores(t: Floats, freedom: float) -> Floats:
+def normal_scores(t: Floats, freedom: Floats | float) -> Floats:
     """Do as `normal_score` for many at once; one at a time plain Python is faster."""
-    scale = (freedom - 2 / 3 + 0.1 / freedom) / math.sqrt(freedom - 5 / 6)
+    scale = (freedom - 2 / 3 + 0.1 / freedom) / np.sqrt(freedom - 5 / 6)
     return np.copysign(scale * np.sqrt(np.log1p(t * t / freedom)), t)
 
 
