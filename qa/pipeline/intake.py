@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 __all__ = ["Intake", "Taken", "take_in"]
 
 _ELSEWHERE = Path("outside the department folder")
+_STAYS = Path("still in the inbox")
 
 
 @dataclass(frozen=True, eq=False)
@@ -219,15 +220,16 @@ def _refuse(department: Department, gate: _Gate, one: Refused) -> Refused:
     """Record a refusal; a file in the inbox moves to the refused folder, under a name that holds nothing of its sender's."""
     from qa.store.archive import refuse_file
 
-    site = department.site
+    site, sha256 = department.site, gate.hashes.get(one.path, "")
+    shown = _ELSEWHERE
     if _inside(one.path, site.inbox):
         target = refuse_file(one.path, site.refused, department.today, one.reason)
-        shown, one = target.relative_to(site.folder), replace(one, path=target)
-    else:
-        shown = _ELSEWHERE
-    department.record.refuse(shown, one.reason, gate.hashes.get(one.path, ""), department.now)
+        shown = _STAYS if target == one.path else target.relative_to(site.folder)
+        one = replace(one, path=target)
+    department.record.refuse(shown, one.reason, sha256, department.now)
     return one
 
 
 def _inside(path: Path, folder: Path) -> bool:
-    return path.resolve().is_relative_to(folder.resolve())
+    """Tell whether a path lies in a folder; where a link itself lies counts, not where it leads."""
+    return path.parent.resolve().is_relative_to(folder.resolve())

@@ -135,13 +135,16 @@ def refuse_file(original: Path, refused: Path, day: date, reason: str) -> Path:
     Returns
     -------
     pathlib.Path
-        Its new place, named by the hash of its content.
+        Its new place, named by the hash of its content. What is not a plain file (a pipe, a link that leads nowhere) or
+        cannot be read has no content to keep: it stays where it is.
 
     Raises
     ------
     FaultError
         The disk failed; the original stays.
     """
+    if original.is_symlink() or not original.is_file() or not os.access(original, os.R_OK):
+        return original
     try:
         sha256 = _sha256(original)
         suffix = original.suffix if re.fullmatch(r"\.[A-Za-z0-9]{1,5}", original.suffix) else ""

@@ -120,3 +120,21 @@ def test_the_picture_comes_back_from_the_archive(department, scans):
     assert np.array_equal(picture.pixels, taken.outcome.acquisition.pixels[0])
     assert len(ghost.regions) == 5
     assert set(ghost.regions) <= set(picture.regions)
+
+
+def test_what_is_no_plain_file_stays_and_stops_nothing(department, scans):
+    import os
+
+    _send(scans(), department)
+    os.mkfifo(department / "inbox" / "pipe.dcm")
+    (department / "inbox" / "link.dcm").symlink_to(department / "nowhere")
+    (department / "inbox" / "circle").symlink_to(department / "inbox")
+    (department / "inbox" / "folder.dcm").mkdir()
+    with open_department(department, NOW) as opened:
+        intake = take_in(opened)
+        kept = [refusal.path for refusal in opened.record.refusals()]
+    assert len(intake.taken) == 1
+    assert {one.path.name for one in intake.refused} <= {"pipe.dcm", "link.dcm"}
+    assert intake.refused
+    assert set(kept) == {"still in the inbox"}
+    assert {p.name for p in (department / "inbox").iterdir()} == {"pipe.dcm", "link.dcm", "circle"}
