@@ -13,7 +13,7 @@ from qa.report.fleet_content import Episode, FleetReport, FleetScanner, WeekStat
 from qa.report.numbers import MINUS, THIN_SPACE, long_date, rounded, short_date
 from qa.report.page import Fact
 from qa.report.render import fill_template, to_pdf
-from qa.report.scanner import page_identifier
+from qa.report.scanner import STANDING_MARKS, page_identifier
 from qa.report.words import about, clipped, count_of, sentence, typeset, value_words
 
 __all__ = ["FleetPage", "lay_out_fleet", "render_fleet_report"]
@@ -32,7 +32,6 @@ _LETTERS: dict[WeekState, str] = {
     "not due": "\u2013",
 }
 _STANDINGS: tuple[Standing, ...] = ("out of limits", "overdue", "drifting", "within limits")
-_STANDING_MARKS = {"within limits": "pass", "drifting": "conditional-pass", "out of limits": "fail", "overdue": "overdue"}
 _COMPARED_ACROSS = 6
 
 
@@ -162,7 +161,7 @@ def _overview(scanners: Iterable[FleetScanner]) -> tuple[OverviewRow, ...]:
         OverviewRow(
             name=scanner.name,
             description=scanner.description,
-            mark=_STANDING_MARKS[scanner.standing],
+            mark=STANDING_MARKS[scanner.standing],
             standing=scanner.standing,
             sentence=f"{sentence(scanner.sentence, f'{scanner.standing}:')}.",
             last_session=long_date(scanner.last_session) if scanner.last_session else "none",
@@ -241,7 +240,7 @@ def _summary(content: FleetReport) -> tuple[str, str, tuple[Fact, ...]]:
     if worst == "within limits":
         return f"All {count_of(len(content.scanners), 'scanner')} within limits.", "pass", facts
     said = [f"{counts[word]} {word}" for word in _STANDINGS if counts[word]]
-    return f"Of {count_of(len(content.scanners), 'scanner')}, {', '.join(said)}.", _STANDING_MARKS[worst], facts
+    return f"Of {count_of(len(content.scanners), 'scanner')}, {', '.join(said)}.", STANDING_MARKS[worst], facts
 
 
 def _provenance(content: FleetReport, attached: Sequence[AttachedFile]) -> tuple[Fact, ...]:

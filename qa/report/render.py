@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from jinja2 import Environment
     from markupsafe import Markup
 
-__all__ = ["fill_template", "to_pdf"]
+__all__ = ["TooManyPagesError", "fill_template", "to_pdf"]
 
 
 _JOINED = re.compile(f"(\\S{{1,24}}(?:{THIN_SPACE}\\S{{1,24}})+)")
@@ -27,6 +27,10 @@ _UNDATED = date(1970, 1, 1)
 _UNPRINTABLE = re.compile(
     "[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x9f\ud800-\udfff\u202a-\u202e\u2066-\u2069\ufdd0-\ufdef\ufffe\uffff]"
 )
+
+
+class TooManyPagesError(Exception):
+    """A page that has to fit a number of sheets does not."""
 
 
 def _printable(content: object) -> object:
@@ -88,6 +92,7 @@ def to_pdf(
     *,
     attached: Sequence[AttachedFile] = (),
     as_of: date = _UNDATED,
+    most_pages: int | None = None,
 ) -> bytes:
     """Lay HTML out as an archival PDF (PDF/A-3a: tagged, fonts embedded).
 
@@ -105,6 +110,8 @@ def to_pdf(
         Data files that travel inside.
     as_of : date
         The day they are dated with.
+    most_pages : int or None
+        Pages that it may have.
 
     Returns
     -------
@@ -113,6 +120,8 @@ def to_pdf(
 
     Raises
     ------
+    TooManyPagesError
+        It has more than `most_pages`.
     FaultError
         A part of the report is missing from this installation, or WeasyPrint's own libraries are.
     """
@@ -130,7 +139,7 @@ def to_pdf(
     fonts = FontConfiguration()
     fetcher = OwnFiles(shipped_folder("templates"), figures)
     sheet = CSS(string=page_css, font_config=fonts, url_fetcher=fetcher)
-    document = HTML(string=html, base_url=f"{TEMPLATE_SCHEME}:/", url_fetcher=fetcher)
+    page = HTML(string=html, base_url=f"{TEMPLATE_SCHEME}:/", url_fetcher=fetcher)
     midnight = datetime.combine(as_of, time())
     files = [
         Attachment(
@@ -139,13 +148,15 @@ def to_pdf(
         )
         for file in attached
     ]  # fmt: skip
+    options = {"pdf_variant": "pdf/a-3a", "pdf_identifier": identifier, "attachments": files}
     try:
         with warnings.catch_warnings():
             # WeasyPrint leaves closing its colour profile's file to the garbage collector.
             warnings.simplefilter("ignore", ResourceWarning)
-            pdf = document.write_pdf(
-                stylesheets=[sheet], attachments=files, font_config=fonts, pdf_variant="pdf/a-3a", pdf_identifier=identifier
-            )
+            document = page.render(font_config=fonts, stylesheets=[sheet], **options)
+            if most_pages is not None and len(document.pages) > most_pages:
+                raise TooManyPagesError(len(document.pages))
+            pdf = document.write_pdf(**options)
     except FatalURLFetchingError as error:
         raise FaultError(f"The report is not complete ({error}): install this copy of evenfield again.") from error
     if not isinstance(pdf, bytes):

@@ -25,11 +25,11 @@ from qa.report.sections import (
 from qa.report.streams import histories
 from qa.report.words import clipped, sentence, typeset
 
-__all__ = ["lay_out_scanner", "render_scanner_report"]
+__all__ = ["STANDING_MARKS", "lay_out_scanner", "page_identifier", "render_scanner_report"]
 
 _PAPER_WIDTH_MM = {"A4": 210.0, "Letter": 215.9}
 _SIDE_MARGIN_MM = 16.0
-_STANDING_MARKS = {"within limits": "pass", "drifting": "conditional-pass", "out of limits": "fail", "overdue": "overdue"}
+STANDING_MARKS = {"within limits": "pass", "drifting": "conditional-pass", "out of limits": "fail", "overdue": "overdue"}
 
 
 def lay_out_scanner(content: ScannerReport) -> tuple[ScannerPage, Figures, tuple[AttachedFile, ...]]:
@@ -48,7 +48,7 @@ def lay_out_scanner(content: ScannerReport) -> tuple[ScannerPage, Figures, tuple
         created=content.as_of.isoformat(),
         as_of=long_date(content.as_of),
         standing=content.standing[:1].upper() + content.standing[1:],
-        standing_mark=_STANDING_MARKS[content.standing],
+        standing_mark=STANDING_MARKS[content.standing],
         standing_sentence=f"{sentence(content.standing_sentence, f'{content.standing}:')}.",
         notices=notices(content),
         causes=causes(content),

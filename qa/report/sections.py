@@ -42,6 +42,7 @@ __all__ = [
     "provenance",
     "region_words",
     "signatures",
+    "table_row",
     "trends",
 ]
 
@@ -100,7 +101,8 @@ def _state_words(course: Course | None) -> str:
     return course.state if course else "\u2013"
 
 
-def _row(judged: Judged, history: History | None, spark: str) -> Row:
+def table_row(judged: Judged, history: History | None, spark: str) -> Row:
+    """Lay one judged value out as a row; without a history it has neither control state nor sparkline."""
     found = judged.measurement
     of = about(found.quantity, found.unit)
     value, spread = rounded(found.value, expanded(found), of.decimals)
@@ -135,7 +137,7 @@ def groups(content: ScannerReport, found: Sequence[History], figures: Figures) -
             spark = f"spark-{number}" if len(history.chart.points) > 1 else ""
             if spark and spark not in figures:
                 figures[spark] = draw_spark(history.chart)
-            rows.append(_row(judged, history, spark))
+            rows.append(table_row(judged, history, spark))
         collected.append(
             Group(
                 title=stream.title + (f", {acquisition.acquired_at:%H:%M}" if stream in repeated else ""),

@@ -27,8 +27,9 @@ def fleet_of(made, names, first):
     standings = ("out of limits", "within limits", "overdue")
     scanners = tuple(
         FleetScanner(
-            name, "Meridian, 3 T", standings[n % 3], "In words.", made.last_day - timedelta(days=n), made.last_day + timedelta(days=7 - n),
-            52, 50 - n, (), weeks, (dataclasses.replace(episode, scanner=name),) if n % 3 == 0 else (),
+            name, "Meridian, 3 T", standings[n % 3], "In words.", made.last_day - timedelta(days=n),
+            made.last_day + timedelta(days=7 - n), 52, 50 - n, (), weeks,
+            (dataclasses.replace(episode, scanner=name),) if n % 3 == 0 else (),
         )
         for n, name in enumerate(names)
     )  # fmt: skip
