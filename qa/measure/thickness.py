@@ -26,7 +26,7 @@ __all__ = ["slice_thickness", "thickness_from_bars"]
 
 _METHOD = ("two crossed ramps, 2AB/(A+B) times slope (NEMA MS 5)", 1)
 _NAME = "slice_thickness"
-_UNSEEN_MM = 0.01
+_UNSEEN_MM = 0.007
 _LOST_MM = 0.6
 _SEEN = 10.0
 _BINS = 61
@@ -41,7 +41,7 @@ def slice_thickness(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable
     """Measure the slice thickness.
 
     Standard uncertainty: of the two lengths from the fit, whose weights are the variances of squared magnitudes, multiplied
-    where residuals are larger than these or correlated; and 0.01 mm for what the model leaves out.
+    where residuals are larger than these or correlated; and 0.007 mm for what the model leaves out.
     """
     section = next((s for s in phantom.sections if isinstance(s, Ramps)), None)
     if section is None:
