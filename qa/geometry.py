@@ -198,7 +198,14 @@ class Rim:
 
 
 def find_rim(
-    images: NDArray[np.floating], plane: Plane, centres_mm: Floats, radii_mm: Floats, angles: Floats, *, reach_px: float
+    images: NDArray[np.floating],
+    plane: Plane,
+    centres_mm: Floats,
+    radii_mm: Floats,
+    angles: Floats,
+    *,
+    reach_px: float,
+    coarse: bool = False,
 ) -> Rim:
     """Find the outermost fall through half height near an expected radius.
 
@@ -220,8 +227,9 @@ def find_rim(
     angles : (N,) float
         Angles of the radii, evenly round the circle, radians.
     reach_px : float
-        How far from the expected radius to look, mean pixels; above 8 the search is coarse and takes the median inside as
-        plateau.
+        How far from the expected radius to look, mean pixels.
+    coarse : bool
+        Look in steps of a pixel, and take the median inside as plateau, which an insert does not pull down.
 
     Returns
     -------
@@ -229,7 +237,6 @@ def find_rim(
         Edge, plateau and floor along each radius.
     """
     pixel = float(np.mean(plane.pixel_mm))
-    coarse = reach_px > 8
     step = pixel if coarse else pixel / 2
     offsets = np.arange(-reach_px * pixel, reach_px * pixel + step / 2, step)
     distance = radii_mm[:, :, None] + offsets

@@ -124,7 +124,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     angles = np.linspace(0, 2 * np.pi, 96, endpoint=False)
     reach = 9 + 0.1 * float(radii.max()) / pixel
     edges = find_rim(
-        images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), 96)), angles, reach_px=reach
+        images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), 96)), angles, reach_px=reach, coarse=True
     ).radius_mm
     rigid, _ = robust_fit(harmonics(angles, 1), edges, 0.3 * pixel)
     shape, _ = robust_fit(harmonics(angles, 2), edges, 0.3 * pixel, np.pad(rigid, ((0, 0), (0, 2))))

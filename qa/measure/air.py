@@ -148,12 +148,13 @@ def air_noise(
     ratio = found.mean / found.sd
     whole = Chi(float(max(1, round(found.chi.channels))))
     near = abs(ratio / whole.ratio - 1) < 3 * found.u_relative + 0.01
-    reason = _not_noise(found, ratio, near)
-    if not reason and repeat is not None:
+    reason = ""
+    if repeat is not None:
         again = [part - _pixels(repeat, plane, boxes[name]) for name, part in parts.items()]
         steady = math.sqrt(float(np.mean([p.var() for p in again])) / 2)
         if found.sd > steady * (1.1 + 4 * found.u_relative):
             reason = "the background holds more than noise: part of it is the same in both repeats, as a ghost or ringing is"
+    reason = reason or _not_noise(found, ratio, near)
     if reason:
         return reason
     chi = whole if near else found.chi

@@ -9,12 +9,13 @@ them. The fit is to squared magnitudes less the squared floor, in which noise ha
 """
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from qa.geometry import Floats, Plane, find_rim, harmonics, robust_fit
+from qa.measure.air import air_corners, air_noise
 from qa.measure.regions import body_slice, figure
 from qa.phantoms import Phantom, Rods
 from qa.records import Acquisition, CrossSection, Measurement, NotMeasured, Pose, Region
@@ -29,9 +30,11 @@ _WINDOW_DEG = 10.0
 _NEAR = 0.65
 _CUBIC = -0.55
 _RAYS = 180
+_REACH_PX = 12.0
 _ORDER = 4
-_UNSEEN_PX = 0.0025
+_UNSEEN_PX = 0.0015
 _UNCLEAR = 0.06
+_SCATTER = 1.1
 _OF_LARGEST = {1: 1.0, 2: 1.12, 3: 1.19, 4: 1.25}
 """Half the 95 % point of the largest of so many absolute standard normal values, rounded: noise drives a largest value up."""
 
@@ -52,7 +55,7 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     """Measure the four diameters and what follows from them.
 
     Standard uncertainty: of the fit from its residuals; of a ghost of unknown phase on the edge (half its amplitude over
-    the slope, over the square root of 2); and 0.0025 pixel an edge for what the model of an edge leaves
+    the slope, over the square root of 2); and 0.0015 resolution lengths an edge for what the model of an edge leaves
     out. That of the largest distortion allows for as many lengths as noise could have made the largest.
     """
     with_rods = any(isinstance(s, Rods) for s in phantom.sections)
@@ -61,7 +64,7 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     if isinstance(section, str):
         return [NotMeasured(name, section) for name in (*(f"length_{a}" for a in ANGLES), *derived)]
     plane = scan.planes[section.slice_index]
-    edge = _edge_pixels(scan.pixels[section.slice_index], plane, section)
+    edge = _edge_pixels(scan, section)
     depth, u_depth = _depth_mm(scan, pose, phantom, section)
     found: dict[int, tuple[float, float]] = {}
     results: list[Measurement | NotMeasured] = []
@@ -94,14 +97,16 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     return results
 
 
-def _edge_pixels(image: Floats, plane: Plane, section: CrossSection) -> _Edge | None:
+def _edge_pixels(scan: Acquisition, section: CrossSection) -> _Edge | None:
     """Gather the pixels near the edge, each with its distance from a smooth outline and its height over the floor."""
+    image, plane = scan.pixels[section.slice_index], scan.planes[section.slice_index]
     pixel = float(np.mean(plane.pixel_mm))
     angles = np.linspace(0, 2 * np.pi, _RAYS, endpoint=False)
     centre = np.array([section.centre_mm])
     start = np.full((1, _RAYS), section.radius_mm)
+    reach = min(max(0.3 * section.radius_mm / pixel, 6.0), _REACH_PX)
     for order in (2, _ORDER):
-        rim = find_rim(image[None], plane, centre, start, angles, reach_px=8)
+        rim = find_rim(image[None], plane, centre, start, angles, reach_px=reach)
         shape, _ = robust_fit(harmonics(angles, order), rim.radius_mm, 0.05 * pixel)
         if not np.isfinite(shape).all():
             return None
@@ -114,8 +119,7 @@ def _edge_pixels(image: Floats, plane: Plane, section: CrossSection) -> _Edge | 
     angle = np.arctan2(down, across) % (2 * np.pi)
     wrapped = np.append(angles, 2 * np.pi)
     outline, plateau, floor = (np.interp(angle, wrapped, np.append(v[0], v[0, 0])) for v in (start, rim.plateau, rim.floor))
-    least, low = (float(v) for v in np.percentile(rim.floor, [10, 25]))
-    quiet = least + 2 * (low - least)  # what is above this is more than the floor's own scatter
+    quiet = _quiet(scan, section, rim.floor)
     strong = plateau > 2 * floor
     dy, dx = plane.pixel_mm
     span = np.where(strong, plateau - floor, 1.0)
@@ -127,6 +131,20 @@ def _edge_pixels(image: Floats, plane: Plane, section: CrossSection) -> _Edge | 
         outline=outline,
         ghost=np.sqrt(np.clip(floor - quiet, 0, None) / np.where(strong, plateau, 1.0)),
     )
+
+
+def _quiet(scan: Acquisition, section: CrossSection, floor: Floats) -> float:
+    """Squared magnitude of noise alone, with its scatter: what is above it beside the edge is a ghost.
+
+    From air clear of ghosts; or the floor where it is lowest, round the edge.
+    """
+    least, low = (float(v) for v in np.percentile(floor, [10, 25]))
+    quiet = least + 2 * (low - least)
+    plane = scan.planes[section.slice_index]
+    found = air_noise(scan.pixels[section.slice_index], plane, air_corners(plane, section, scan.settings.phase_encode))
+    if isinstance(found, str):
+        return quiet
+    return min(quiet, (found[0].mean ** 2 + found[0].sd ** 2) * _SCATTER)
 
 
 def _diameter(edge: _Edge, angle_deg: int, plane: Plane) -> tuple[tuple[float, float], float, float] | None:
@@ -141,7 +159,7 @@ def _diameter(edge: _Edge, angle_deg: int, plane: Plane) -> tuple[tuple[float, f
         sides.append(
             (edge.distance[near], edge.unit[near], edge.height[near], edge.ghost[near], edge.outline[near], away[near])
         )
-    shifts, slope = np.zeros(2), 1.0
+    shifts, slope = np.zeros(2), _first_slope(sides)
     covariance = np.zeros((3, 3))
     for _ in range(6):
         designs, residuals = [], []
@@ -171,26 +189,40 @@ def _diameter(edge: _Edge, angle_deg: int, plane: Plane) -> tuple[tuple[float, f
     scatter = float(residual @ residual) / (residual.size - 3)
     if scatter > _UNCLEAR:
         return None
-    u_fit = math.sqrt(scatter * float(covariance[:2, :2].sum()))
+    alike = 1 / min(slope, 1.0)  # pixels closer than the resolution share their noise
+    u_fit = math.sqrt(alike * scatter * float(covariance[:2, :2].sum()))
     radii, u_ghost = [], 0.0
     for k, (_, unit, _, ghost, outline, away) in enumerate(sides):
         radii.append(float(outline[np.argmin(np.abs(away))] + shifts[k]))
         u_ghost += float(ghost.mean()) / 2 / slope * float(unit.mean()) / math.sqrt(2)
-    unseen = math.sqrt(2) * _UNSEEN_PX * float(np.mean(plane.pixel_mm))
+    unseen = math.sqrt(2) * _UNSEEN_PX * alike * float(np.mean(plane.pixel_mm))
     return (radii[0], radii[1]), math.sqrt(u_fit**2 + u_ghost**2 + unseen**2), slope
+
+
+def _first_slope(sides: Sequence[tuple[Floats, ...]]) -> float:
+    """Slope of the edge as a straight line through the pixels near it shows it."""
+    depth = np.concatenate([-distance / unit for distance, unit, *_ in sides])
+    root = np.sqrt(np.clip(np.concatenate([side[2] for side in sides]), 0, None))
+    near = np.abs(depth) <= _NEAR
+    if near.sum() < 4 or not np.ptp(depth[near]) > 0:
+        return 1.0
+    away = depth[near] - depth[near].mean()
+    return float(np.clip(away @ root[near] / (away @ away), 0.1, 1.5))
 
 
 def _depth_mm(scan: Acquisition, pose: Pose, phantom: Phantom, section: CrossSection) -> tuple[float, float]:
     """Return what a sphere's diameter at half height has over the mean one within the slice, which an image shows.
 
     The outline recedes with the square of the height, whose mean over a rectangular slice profile is h^2 + t^2 / 12. A
-    slice of unknown height is taken to lie within a quarter slice of the middle, evenly. Some micrometres at the equator.
+    slice of unknown height is taken to lie within a fifth of its thickness of the centre, evenly. Some micrometres at the
+    equator.
     """
     thick = scan.settings.slice_thickness_mm
     if phantom.body.shape != "sphere" or not thick:
         return 0.0, 0.0
     if pose.u_centre_mm[2] is None:
-        return thick**2 / 24 / section.radius_mm, thick**2 / 16 * math.sqrt(4 / 45) / section.radius_mm
+        far = thick / 5
+        return (far**2 / 3 + thick**2 / 48) / section.radius_mm, far**2 * math.sqrt(4 / 45) / section.radius_mm
     height = _height_mm(scan, pose, section)
     return float((height**2 + thick**2 / 12 - _half_height_square(height, thick)) / section.radius_mm), 0.0
 
