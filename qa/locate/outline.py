@@ -8,7 +8,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from qa.geometry import Plane, find_rim, harmonics, robust_fit
 from qa.records import CrossSection
@@ -61,6 +60,8 @@ def find_silhouettes(pixels: NDArray[np.float32], plane: Plane) -> tuple[Silhoue
     tuple of Silhouette, or str
         One for each slice that shows an object; or a plain reason.
     """
+    from scipy import ndimage
+
     block = max(1, round(min(pixels.shape[1:]) / _COARSE))
     rows, columns = (n // block * block for n in pixels.shape[1:])
     coarse = pixels[:, :rows, :columns].reshape(len(pixels), rows // block, block, columns // block, block).mean(axis=(2, 4))
