@@ -15,7 +15,7 @@ from qa.report.words import about, clipped, count_of, sentence, typeset
 __all__ = ["ExpectedSeries", "PinUp", "render_pin_up"]
 
 _ATTEMPTS = ((16, 6, ""), (12, 5, ""), (8, 4, ""), (10, 4, "dense"), (5, 3, "dense"), (0, 1, "dense"))
-"""Rows of figures, things to do and size of type that are tried in turn until the sheet is one page; the last is taken as it comes."""
+"""Rows of figures, things to do and size of type, tried in turn until the sheet is one page; the last is taken as it comes."""
 _WEEKDAYS = ("Monday", "Tuesday", "Wednesday", "Thursday", "Friday", "Saturday", "Sunday")
 
 

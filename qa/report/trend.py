@@ -232,10 +232,13 @@ def _draw_points(plot: Plot, chart: TrendChart) -> None:
     places = plot.at(x, y)
     pieces = pieces_of(x, chart)
     plot.path([places[piece] for piece in pieces], edgecolor=DATA, linewidth=0.55, joinstyle="round", zorder=3)
+    spacing = plot.width * chart.every_days / (plot.x_range[1] - plot.x_range[0])
     barred = half > 0
     if barred.any():
-        plot.segments(plot.at(x, y - half)[barred], plot.at(x, y + half)[barred], edgecolor=GREY, linewidth=0.5, zorder=2.5)
-    spacing = plot.width * chart.every_days / (plot.x_range[1] - plot.x_range[0])
+        # Bars that nearly touch are kept pale, or they would bury the line.
+        ink, thickness = (GREY, 0.5) if spacing > _DENSE else (FAINT, min(0.5, 0.6 * spacing))
+        starts, ends = plot.at(x, y - half)[barred], plot.at(x, y + half)[barred]
+        plot.segments(starts, ends, edgecolor=ink, linewidth=thickness, zorder=2.5)
     scale = min(1.0, max(0.62, spacing / 4))
     lone = np.concatenate([np.full(len(piece), len(piece) == 1) for piece in pieces])
     for mark in MARKS:
