@@ -38,7 +38,7 @@ def time_ticks(first: date, last: date) -> tuple[list[date], list[str], list[dat
     if span <= 3 * 366:
         named = [month for month in months if month.month in {1, 4, 7, 10}]
         return named, _month_names(named), months
-    step = max(1, round(span / 365 / 12))
+    step = -(-span // (12 * 366))
     named = [month for month in months if month.month == 1 and month.year % step == 0]
     return named, [str(month.year) for month in named], [month for month in months if month.month in {1, 4, 7, 10}]
 
