@@ -24,6 +24,7 @@ for command in (
     daily.check,
     daily.status,
     daily.report,
+    daily.board,
     daily.commission,
     daily.demo,
     decisions.sign,

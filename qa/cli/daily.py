@@ -8,7 +8,7 @@ import typer
 from qa.cli.common import HERE, JsonOption, PathsArgument, QuietOption, SiteOption, finish, progress, put, say, to_day
 from qa.errors import ExitStatus
 
-__all__ = ["check", "commission", "demo", "ingest", "init", "measure", "report", "status"]
+__all__ = ["board", "check", "commission", "demo", "ingest", "init", "measure", "report", "status"]
 
 
 def init(folder: Annotated[Path, typer.Argument(help="The new department folder.")]) -> None:
@@ -87,12 +87,20 @@ def ingest(
         finish(survey(department).exit_status(attention=intake.needs_a_person))
 
 
-def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
+def check(
+    *,
+    site: SiteOption = HERE,
+    mail: Annotated[
+        Path | None, typer.Option("--mail-text", help="Write the run's mail into this folder, as mail.txt and mail.html.")
+    ] = None,
+    quiet: QuietOption = False,
+) -> None:
     """Run the scheduled job: take the inbox in, look for scanners out of limits or overdue, print only what needs a person.
 
     Example (crontab): 30 6 * * * evenfield check --site /srv/mr-qa
     """
-    from qa.pipeline import open_department, survey, take_in
+    from qa.pipeline import mail_text, open_department, survey, take_in
+    from qa.report.mail import write_mail
     from qa.report.terminal import attention_lines, refused_line, taken_line
 
     with open_department(site) as department:
@@ -105,6 +113,11 @@ def check(*, site: SiteOption = HERE, quiet: QuietOption = False) -> None:
                 put(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
             for one in intake.refused:
                 put(refused_line(one))
+            for remark in (found.clock, *found.remarks):
+                if remark:
+                    put(remark)
+        if mail is not None:
+            write_mail(mail, mail_text(department, intake, found))
         finish(found.exit_status(attention=intake.needs_a_person))
 
 
@@ -132,6 +145,9 @@ def status(
             from qa.report.terminal import status_table
 
             put(status_table(found.assessments))
+            for remark in (found.clock, *found.remarks):
+                if remark:
+                    say(remark)
         finish(found.exit_status())
 
 
@@ -147,16 +163,23 @@ def report(
         str | None, typer.Option("--as-of", help="The day the report is dated with; today when not given.")
     ] = None,
     page: Annotated[str | None, typer.Option("--page", help="A4 or Letter; site.toml decides when not given.")] = None,
+    pin_up: Annotated[
+        bool, typer.Option("--pin-up", help="In place of the report, a sheet for technologists to pin up beside the scanner.")
+    ] = False,
     quiet: QuietOption = False,
 ) -> None:
-    """Render the dated PDF trend report of each scanner.
+    """Render the dated PDF trend report of each scanner, and that of the fleet when no scanner is named.
 
     Example: evenfield report north-3t --from 2026-01-01 --to 2026-12-31
     """
-    from qa.pipeline import open_department, write_reports
+    from qa.pipeline import open_department, write_pin_ups, write_reports
 
     days = (to_day(first, "--from"), to_day(last, "--to"), to_day(as_of, "--as-of"))
     with open_department(site) as department:
+        if pin_up:
+            for path in write_pin_ups(department, scanners or (), days[2]):
+                put(str(path))
+            return
         for path in write_reports(department, scanners or (), *days, page=page, progress=progress(quiet=quiet)):
             put(str(path))
 
@@ -207,6 +230,24 @@ def commission(
         if not quiet:
             say(f"{report} is the evidence for the file.")
     finish(ExitStatus.DONE if result.met else ExitStatus.OUT_OF_LIMITS)
+
+
+def board(
+    folder: Annotated[Path, typer.Argument(help="Where to: a new or an empty folder, or an earlier board.")],
+    *,
+    site: SiteOption = HERE,
+    as_of: Annotated[str | None, typer.Option("--as-of", help="The day to look from; today when not given.")] = None,
+    quiet: QuietOption = False,
+) -> None:
+    """Write the same content as a static web site, for the intranet or a wall screen; it works from a file share.
+
+    Example: evenfield board /srv/www/mr-qa --site /srv/mr-qa
+    """
+    from qa.pipeline import open_department, publish_board
+
+    day = to_day(as_of, "--as-of")
+    with open_department(site) as department:
+        put(str(publish_board(department, folder, day, progress(quiet=quiet))))
 
 
 def demo(

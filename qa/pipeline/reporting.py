@@ -34,7 +34,7 @@ from qa.report.words import count_of
 from qa.site import SiteScanner
 from qa.version import __version__
 
-__all__ = ["fleet_report", "scanner_report", "write_reports"]
+__all__ = ["fleet_report", "notices_of", "scanner_report", "write_reports"]
 
 
 def write_reports(
@@ -183,7 +183,7 @@ def scanner_report(department: Department, scanner: SiteScanner, first: date, la
         refused=_refused(department, first, last),
         every_days=scanner.every_days,
         grace_days=scanner.grace_days,
-        attention=tuple(_notices(assessment)),
+        attention=tuple(notices_of(assessment)),
         previous_report=before,
         since_previous=tuple(_news(earlier, assessment, history, before)),
         courses=tuple(_course(state) for state in assessment.quantities if not state.superseded),
@@ -242,7 +242,7 @@ def _refused(department: Department, first: date, last: date) -> tuple[RefusedSe
     )
 
 
-def _notices(assessment: Assessment) -> Iterable[Notice]:
+def notices_of(assessment: Assessment) -> Iterable[Notice]:
     """Say what needs a person, the gravest first."""
     counting = [state for state in assessment.quantities if not state.superseded]
     if assessment.out:
@@ -254,7 +254,7 @@ def _notices(assessment: Assessment) -> Iterable[Notice]:
     rest = assessment.reasons[out:]
     yield from (Notice("due", _sentence(text)) for text in rest if text not in drifting)
     yield from (Notice("drifting", _sentence(text)) for text in drifting)
-    yield from (Notice("set-up", _sentence(text)) for text in assessment.remarks)
+    yield from (Notice("to note", _sentence(text)) for text in assessment.remarks)
 
 
 def _sentence(text: str) -> str:

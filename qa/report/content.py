@@ -27,7 +27,7 @@ __all__ = [
 
 PageSize = Literal["A4", "Letter"]
 ControlState = Literal["in control", "out of control", "still learning"]
-NoticeKind = Literal["out of limits", "drifting", "due", "refused", "set-up"]
+NoticeKind = Literal["out of limits", "drifting", "due", "refused", "set-up", "to note"]
 Standing = Literal["within limits", "drifting", "out of limits", "overdue"]
 
 _LOCAL_FIRST = (

@@ -5,13 +5,15 @@ import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date
+from pathlib import Path
 
+from qa.errors import FaultError
 from qa.report.content import CAUTIONS, Notice, RefusedSeries, Standing
 from qa.report.numbers import long_date
 from qa.report.render import fill_template
 from qa.report.words import count_of, sentence, typeset
 
-__all__ = ["FleetNews", "MailText", "ScannerNews", "compose_mail"]
+__all__ = ["FleetNews", "MailText", "ScannerNews", "compose_mail", "write_mail"]
 
 _ORDER: tuple[Standing, ...] = ("out of limits", "overdue", "drifting", "within limits")
 _MOST_REFUSED = 12
@@ -141,3 +143,21 @@ def compose_mail(news: FleetNews) -> MailText:
         version=news.software_version,
     )
     return MailText(subject, _plain(news, ordered), html)
+
+
+def write_mail(folder: Path, mail: MailText) -> None:
+    """Write a mail as `mail.txt`, its subject in the first line, and `mail.html`; those of an earlier run are written over.
+
+    Raises
+    ------
+    qa.errors.FaultError
+        The folder cannot be written to.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        (folder / "mail.txt").write_text(f"Subject: {mail.subject}\n\n{mail.plain}", encoding="utf-8")
+        (folder / "mail.html").write_text(mail.html, encoding="utf-8")
+    except OSError as error:
+        raise FaultError(
+            f"{folder}: the mail could not be written there ({error.strerror}): choose another folder."
+        ) from error

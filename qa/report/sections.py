@@ -58,6 +58,7 @@ _NOTICE_MARKS = {
     "due": "overdue",
     "refused": "conditional-fail",
     "set-up": "conditional-fail",
+    "to note": "no-limit",
 }
 _REGIONS = {"M": "measurement region, M"}
 _NOBODY: Mapping[tuple[str, int], str] = MappingProxyType({})

@@ -120,7 +120,7 @@ def attention_lines(assessments: "Sequence[Assessment]") -> list[str]:
         if one.standing != "within limits"
         for reason in one.reasons
     ] + [
-        _one_line(f"{one.scanner_name}: look first at: {cause.sentence}")
+        _one_line(f"{one.scanner_name}: {cause.sentence}")
         for one in assessments
         if one.standing in {"out of limits", "drifting"}
         for cause in one.causes[:1]

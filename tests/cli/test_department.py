@@ -280,7 +280,8 @@ def test_an_altered_record_is_found(evenfield, department, scans):
 
 def test_every_command_explains_itself_with_an_example(evenfield):
     words = [
-        ("init",), ("measure",), ("ingest",), ("check",), ("status",), ("report",), ("commission",), ("demo",), ("sign",),
+        ("init",), ("measure",), ("ingest",), ("check",), ("status",), ("report",), ("board",), ("commission",), ("demo",),
+        ("sign",),
         ("limits", "show"), ("limits", "set"), ("limits", "history"), ("limits", "what-if"), ("baseline", "accept"),
         ("baseline", "set"), ("baseline", "show"), ("event", "add"), ("event", "list"), ("record", "verify"),
     ]  # fmt: skip
