@@ -156,7 +156,7 @@ def fit_marks(
     middle = np.argsort(np.hypot(*start_mm.T))[:_TRIAL]
     trial = patches.some(middle)
     shapes = (_shape(view, section, axes, arms=arms[middle], reach_mm=trial.reach_mm, blur=blur) for blur in _BLURS)
-    blur = _BLURS[int(np.argmin([_fit(trial, shape, 2).misfit for shape in shapes]))]
+    blur = _BLURS[int(np.argmin([_fit(trial, shape, 1).misfit for shape in shapes]))]
     shape = _shape(view, section, axes, arms=arms, reach_mm=patches.reach_mm, blur=blur)
     return _judge(_fit(patches, shape, _STEPS), patches, section)
 
@@ -304,6 +304,7 @@ def _fit(patches: _Patches, shape: Shape, steps: int) -> _Fit:
         centre = centre + np.clip(change[:, 4:], -limit, limit)
         if np.percentile(np.abs(change[:, 4:]), 95) < _SETTLED_PX * patches.soft_mm:
             break
+    residual = residual - (change[:, None, :] @ design)[:, 0]
     spread = np.linalg.inv(normal)[:, [4, 5], [4, 5]].mean(axis=1)
     return _Fit(centre, depth, level, spread, residual, weight)
 

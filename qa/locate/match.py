@@ -44,7 +44,13 @@ class Matched:
 
 
 def match_lattice(
-    marks_mm: Floats, lattice: NDArray[np.intp], pitch_mm: float, centre_mm: Floats, turn_deg: float = 0.0
+    marks_mm: Floats,
+    lattice: NDArray[np.intp],
+    pitch_mm: float,
+    centre_mm: Floats,
+    turn_deg: float = 0.0,
+    *,
+    trusted: NDArray[np.bool_] | None = None,
 ) -> Matched | str:
     """Tell which mark is which place of a square lattice.
 
@@ -60,6 +66,8 @@ def match_lattice(
         About where place 0, 0 lies: off by less than half a pitch.
     turn_deg : float
         About how the lattice is turned; a square lattice tells its turn only up to quarter turns, and the nearest is taken.
+    trusted : (N,) bool, optional
+        Places whose marks are seen without bias, and which alone foretell the others; all when left out.
 
     Returns
     -------
@@ -89,6 +97,10 @@ def match_lattice(
     where = np.full(_SPAN, -1, dtype=np.intp)
     where[tuple(np.clip(index[placed] + shift + _MIDDLE, 0, _SPAN[0] - 1).T)] = placed
     mark = where[tuple((lattice + _MIDDLE).T)]
+    if trusted is not None and np.count_nonzero(trusted & (mark >= 0)) >= 5:
+        biased = mark[~trusted & (mark >= 0)]
+        index = index.copy()
+        index[biased] = _NEVER
     foretold = _foretell(index, marks, lattice - shift) @ back.T
     return Matched(mark, foretold * pitch_mm + centre_mm, float(np.degrees(turn)))
 

@@ -16,6 +16,7 @@ __all__ = ["overlay"]
 
 _STEPS = 5
 _SETTLED_DEG, _SETTLED_MM = 0.03, 0.03
+_STEP = 0.25
 _BLUR = 1.2
 _PIXELS = 1000
 """About how many pixels of each section are looked at."""
@@ -70,8 +71,8 @@ def overlay(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose:
         for patch in patches:
             slopes, residual, contrast = _linearised(patch, turn, rise, thickness, soft)
             contrasts.append(contrast)
-            normal += slopes.T @ slopes
-            right += slopes.T @ residual
+            normal += slopes @ slopes.T
+            right += slopes @ residual
             squares += float(residual @ residual)
             count += residual.size
         scale = np.sqrt(np.maximum(np.diag(normal), 1e-12))
@@ -150,27 +151,22 @@ def _around(section: Any) -> tuple[tuple[float, float], tuple[float, float]]:  #
 
 
 def _linearised(patch: _Patch, turn_deg: float, rise_mm: float, thickness: float, soft: float) -> tuple[Floats, Floats, float]:
-    """Slopes (P, 2) of a section's pixels by turn in degrees and rise in mm, and residuals; level and floor are fitted out.
+    """Slopes (2, P) of a section's pixels by turn in degrees and rise in mm, and residuals; level and floor are fitted out.
 
     The third value is the contrast: how much darker the inserts are than the fill, as a share of the fill's signal.
     """
-
-    def fill(turn: float, rise: float) -> Floats:
-        c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
-        places = Places(c * patch.X + s * patch.Y, c * patch.Y - s * patch.X, patch.Z + rise)
-        return expected_fill((patch.section,), places, thickness, soft)
-
-    now = fill(turn_deg, rise_mm)
-    by_turn = (fill(turn_deg + 0.25, rise_mm) - fill(turn_deg - 0.25, rise_mm)) / 0.5
-    by_rise = (fill(turn_deg, rise_mm + 0.25) - fill(turn_deg, rise_mm - 0.25)) / 0.5
+    turns = np.radians(turn_deg + np.array([[0.0], [_STEP], [-_STEP], [0.0], [0.0]]))
+    rises = rise_mm + np.array([[0.0], [0.0], [0.0], [_STEP], [-_STEP]])
+    c, s = np.cos(turns), np.sin(turns)
+    places = Places(c * patch.X + s * patch.Y, c * patch.Y - s * patch.X, patch.Z + rises)
+    now, more_turn, less_turn, higher, lower = expected_fill((patch.section,), places, thickness, soft)
+    by_turn, by_rise = (more_turn - less_turn) / (2 * _STEP), (higher - lower) / (2 * _STEP)
     x, y = patch.X - patch.X.mean(), patch.Y - patch.Y.mean()
-    design = np.stack([np.ones_like(now), now, now * x, now * y], axis=1)
-    gram = design.T @ design
+    design = np.stack([np.ones_like(now), now, now * x, now * y])
+    gram = design @ design.T
     gram[range(4), range(4)] *= 1 + 1e-9
-    wanted = np.stack([patch.values, by_turn, by_rise], axis=1)
-    fitted = np.linalg.solve(gram, design.T @ wanted)
-    floor, gain = fitted[0, 0], fitted[1, 0]
-    level = gain + fitted[2, 0] * x + fitted[3, 0] * y
-    slopes = np.stack([by_turn, by_rise], axis=1) * level[:, None]
-    slopes -= design @ np.linalg.solve(gram, design.T @ slopes)
-    return slopes, patch.values - design @ fitted[:, 0], float(gain / max(gain + floor, 1e-9))
+    fitted = np.linalg.solve(gram, design @ patch.values)
+    level = fitted[1] + fitted[2] * x + fitted[3] * y
+    slopes = np.stack([by_turn * level, by_rise * level])
+    slopes -= (np.linalg.solve(gram, design @ slopes.T).T) @ design
+    return slopes, patch.values - fitted @ design, float(fitted[1] / max(fitted[1] + fitted[0], 1e-9))

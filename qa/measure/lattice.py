@@ -109,11 +109,12 @@ def _field(scan: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Latt
     places = np.array([(i, j) for i, j, _, _ in listed], dtype=np.intp)
     true = np.array([(x, y) for _, _, x, y in listed])
     found = find_marks(image, view, section, float(np.hypot(*true.T).max()) + 0.4 * section.pitch_mm)
-    matched = match_lattice(found, places, section.pitch_mm, np.zeros(2))
-    if isinstance(matched, str):
-        return matched
     low, high = places.min(axis=0), places.max(axis=0)
     arms = np.stack([places > low, places < high], axis=2).reshape(len(places), 4)
+    whole = None if isinstance(section, Rods) else np.asarray(arms.all(axis=1), dtype=np.bool_)
+    matched = match_lattice(found, places, section.pitch_mm, np.zeros(2), trusted=whole)
+    if isinstance(matched, str):
+        return matched
     start = matched.foretold_mm
     if isinstance(section, Rods):
         start = np.where((matched.mark >= 0)[:, None], found[matched.mark], start)

@@ -4,9 +4,9 @@
     python tests/bench/campaign_structured.py --lattices 10000
 
 Prints, for each quantity: cases, bias with its standard error, the error that 95 % of the cases stay within, the bar, and how
-often the expanded interval (k = 2) holds the truth. For slice thickness the Cramer-Rao limit of each case stands beside it: the
-Fisher information of noncentral chi magnitudes (as many channels as the scan has) about middle, length and height of each bar,
-with level and noise known, in the pixels of the slots. No unbiased routine can do better on these pixels.
+often the expanded interval (k = 2) holds the truth. For slice thickness the Cramer-Rao limit of each case stands beside it:
+the Fisher information of noncentral chi magnitudes (as many channels as the scan has) about middle, length and height of each
+bar, with level and noise known, in the pixels of the slots. No unbiased routine can do better on these pixels.
 """
 
 import argparse
