@@ -104,6 +104,8 @@ def slice_of_section(acquisition: Acquisition, pose: Pose, phantom: Phantom, z_m
     """
     normal = acquisition.planes[0].normal
     along = float(normal @ pose.orientation[:, 2])
+    if abs(along) < 0.5:
+        return "the slices lie along the phantom's axis, not across it"
     heights = np.array([p.position_along_normal for p in acquisition.planes]) - normal @ pose.centre_patient
     off = heights / along - z_mm
     index = int(np.argmin(np.abs(off)))

@@ -11,7 +11,19 @@ from typing import Any
 
 import numpy as np
 
-from qa.measure import background, frequency, ghosting, lattice, lengths, position, setup, snr, thickness, uniformity
+from qa.measure import (
+    axial_length,
+    background,
+    frequency,
+    ghosting,
+    lattice,
+    lengths,
+    position,
+    setup,
+    snr,
+    thickness,
+    uniformity,
+)
 from qa.phantoms import Phantom
 from qa.records import Acquisition, Measurement, NotLocated, NotMeasured, Pose
 
@@ -33,6 +45,7 @@ ROUTINES: tuple[Routine, ...] = (
     Routine(uniformity.uniformity, ("uniformity_piu", "uniformity_naad")),
     Routine(ghosting.ghosting, ("ghosting",)),
     Routine(lengths.lengths, ("length_0", "length_45", "length_90", "length_135", "distortion_max", "scale_x", "scale_y")),
+    Routine(axial_length.length_axial, ("length_axial",)),
     Routine(lattice.lattice, ("lattice_rms", "lattice_max", "distortion_max", "scale_x", "scale_y")),
     Routine(thickness.slice_thickness, ("slice_thickness",)),
     Routine(position.slice_position, ("slice_position", "slice_position_end")),
