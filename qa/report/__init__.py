@@ -1,5 +1,10 @@
 """Figures, pages and the dated PDF.
 
-`content` says what a report is made from, `scanner` lays one scanner's out, `render` fills the templates and makes the PDF,
-`files` keeps it. Figures come from `trend` and `picture`, in the one style of `style`; figures in text from `numbers`.
+From records to pages: `content` and `fleet_content` say what a report is made from; `streams` gathers what belongs together
+over time; `sections`, `images`, `maps` and `data` turn it into finished words, figures and files; `page` is what the template
+places; `scanner`, `fleet`, `pin_up`, `board` and `mail` lay out one output each; `render` fills templates and makes the PDF,
+`fetcher` serves it its own files and no others, `files` keeps it.
+
+Figures: `style` is the one house style, `plot` the plotting area, `chart` and `trend` the chart over time, `spark` its small
+sister, `picture` the image with regions. Figures in text: `numbers` and `words`.
 """

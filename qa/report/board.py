@@ -18,11 +18,11 @@ from qa.report.content import ScannerReport
 from qa.report.files import file_stem, why_not_written
 from qa.report.fleet import lay_out_fleet
 from qa.report.fleet_content import FleetReport
+from qa.report.images import region_words
 from qa.report.numbers import long_date
 from qa.report.picture import draw_picture
 from qa.report.render import fill_template
 from qa.report.scanner import lay_out_scanner
-from qa.report.sections import region_words
 from qa.report.streams import History, histories
 from qa.report.trend import point_places
 from qa.report.words import value_words

@@ -4,11 +4,11 @@ import hashlib
 
 from qa.report.content import ScannerReport
 from qa.report.data import AttachedFile, attached_data
+from qa.report.images import Figures, pictures
 from qa.report.numbers import long_date
 from qa.report.page import ScannerPage
 from qa.report.render import fill_template, to_pdf
 from qa.report.sections import (
-    Figures,
     causes,
     facts,
     groups,
@@ -17,7 +17,6 @@ from qa.report.sections import (
     missing_sentence,
     never_measured,
     notices,
-    pictures,
     provenance,
     signatures,
     trends,

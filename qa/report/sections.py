@@ -1,23 +1,21 @@
 """The sections of a scanner's report, each from its records: table, trends, images, what happened, what traces it."""
 
 from collections import Counter
-from collections.abc import Mapping, Sequence
-from types import MappingProxyType
+from collections.abc import Sequence
 
 from qa.records import Judged, Measurement, Picture, RecordedAcquisition, Session, Verdict
 from qa.report.chart import TrendChart
-from qa.report.content import Comparison, Course, ScannerReport
+from qa.report.content import Course, ScannerReport
 from qa.report.data import AttachedFile
+from qa.report.images import Figures, compare
 from qa.report.maps import maps_of
 from qa.report.numbers import COVERAGE_FACTOR, long_date, plain_number, rounded, typeset_unit, with_unit
-from qa.report.page import Compared, Fact, Group, Happening, LegendEntry, NoticeRow, Row, Shown, Trend
-from qa.report.picture import draw_picture, grey_window
+from qa.report.page import Fact, Group, Happening, LegendEntry, NoticeRow, Row, Shown, Trend
 from qa.report.spark import draw_spark
 from qa.report.streams import History, event_letters, in_order, mark_of, split_phantoms, stream_of
 from qa.report.trend import draw_trend, marks_present
 from qa.report.words import (
     about,
-    clipped,
     count_of,
     day_runs,
     expanded,
@@ -29,7 +27,6 @@ from qa.report.words import (
 )
 
 __all__ = [
-    "Figures",
     "causes",
     "facts",
     "groups",
@@ -38,20 +35,12 @@ __all__ = [
     "missing_sentence",
     "never_measured",
     "notices",
-    "pictures",
     "provenance",
-    "region_words",
     "signatures",
     "table_row",
     "trends",
 ]
 
-Figures = dict[str, bytes]
-
-_PICTURE_MM = 87.0
-_PAIR_MM = 74.0
-_SEEN_IN_AIR = {"ghosting", "snr_background"}
-_BRIGHTENED = 10
 _NOTICE_MARKS = {
     "out of limits": "fail",
     "drifting": "conditional-pass",
@@ -60,8 +49,6 @@ _NOTICE_MARKS = {
     "set-up": "conditional-fail",
     "to note": "no-limit",
 }
-_REGIONS = {"M": "measurement region, M"}
-_NOBODY: Mapping[tuple[str, int], str] = MappingProxyType({})
 _RULES = {"simple": "simple acceptance", "guarded": "guarded acceptance: the expanded uncertainty must fit inside too"}
 
 
@@ -278,7 +265,7 @@ def trends(content: ScannerReport, found: Sequence[History], width_mm: float, fi
             maps = (drawn[0],)
             figures[drawn[0].figure] = drawn[1]
         compared = [
-            _compared(one, f"{number}-{n}", figures)
+            compare(one, f"{number}-{n}", figures)
             for n, one in enumerate(content.comparisons)
             if one.quantity == measurement.quantity and one.phantom == history.stream.phantom
         ]
@@ -297,71 +284,6 @@ def trends(content: ScannerReport, found: Sequence[History], width_mm: float, fi
             )
         )
     return tuple(collected)
-
-
-def _compared(one: Comparison, name: str, figures: Figures) -> Compared:
-    """Draw the last good and the first bad image in one grey scale; where air tells, it is brightened."""
-    black, white = grey_window(one.good)
-    remark = ""
-    if one.quantity in _SEEN_IN_AIR:
-        white, remark = black + (white - black) / _BRIGHTENED, f", {_BRIGHTENED} times brighter than usual"
-    good, bad = (
-        _shown(
-            picture, f"{word}-{name}", f"{title}, {long_date(day)}", _PAIR_MM, figures, window=(black, white), remark=remark
-        )
-        for word, title, picture, day in (
-            ("good", "Last good", one.good, one.good_day),
-            ("bad", "First out", one.bad, one.bad_day),
-        )
-    )
-    return Compared(good, bad)
-
-
-def region_words(name: str) -> str:
-    """Name a region as a key does."""
-    return _REGIONS.get(name, name)
-
-
-def _shown(
-    picture: Picture, figure: str, title: str, largest_mm: float, figures: Figures, *,
-    window: tuple[float, float] | None = None, remark: str = "", used_by: Mapping[tuple[str, int], str] = _NOBODY,
-) -> Shown:  # fmt: skip
-    drawn = draw_picture(picture, largest_mm, largest_mm, window)
-    figures[figure] = drawn.svg
-    entries = [(entry.number, region_words(entry.name), used_by.get((entry.name, picture.slice), "")) for entry in drawn.key]
-    names = ", ".join(f"{number} {name}" for number, name, _ in entries)
-    return Shown(
-        title=clipped(title, 120),
-        figure=figure,
-        description=f"Image of slice {picture.slice}: {title}. Regions drawn: {names or 'none'}.",
-        width_mm=drawn.width_mm,
-        height_mm=drawn.height_mm,
-        key=tuple(entries),
-        caption=f"Slice {picture.slice}. Grey scale: {drawn.grey_scale}{remark}.",
-    )
-
-
-def _used_by(content: ScannerReport) -> dict[tuple[str, int], str]:
-    """Say which quantities of the latest session each region, by name and slice, served."""
-    found: dict[tuple[str, int], list[str]] = {}
-    for session in content.sessions[-1:]:
-        for acquisition in session.acquisitions:
-            for judged in in_order(acquisition.judged):
-                for region in judged.measurement.regions:
-                    titles = found.setdefault((region.name, region.slice), [])
-                    title = about(judged.measurement.quantity).title
-                    if title not in titles:
-                        titles.append(title)
-    return {key: "; ".join(titles) if len(titles) < 4 else f"{len(titles)} quantities" for key, titles in found.items()}
-
-
-def pictures(content: ScannerReport, figures: Figures) -> tuple[Shown, ...]:
-    """Draw the images of the latest session, numbered as the notes of the quantities name them."""
-    used_by = _used_by(content)
-    return tuple(
-        _shown(picture, f"picture-{number}", f"Image {number}: {picture.title}", _PICTURE_MM, figures, used_by=used_by)
-        for number, picture in enumerate(content.pictures, start=1)
-    )
 
 
 def happenings(content: ScannerReport) -> tuple[Happening, ...]:
