@@ -24,7 +24,7 @@ OLDEST = (3, 11)
 
 PANGO = ("libpango-1.0-0", "libpangoft2-1.0-0", "libharfbuzz-subset0", "fonts-dejavu-core")
 PEERS = {
-    "dciodvfy": "dicom3tools",
+    "chromium": "chromium",
     "dcmdump": "dcmtk",
     "pdftotext": "poppler-utils",
     "qpdf": "qpdf",

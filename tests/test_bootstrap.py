@@ -40,7 +40,7 @@ def test_without_the_right_it_says_what_to_install(monkeypatch, capsys):
     monkeypatch.setattr(bootstrap.shutil, "which", lambda _: None)
     bootstrap.check_peers()
     said = capsys.readouterr().err
-    for package in ("dcmtk", "dicom3tools", "poppler-utils", "qpdf"):
+    for package in ("chromium", "dcmtk", "poppler-utils", "qpdf"):
         assert package in said
     assert "apt-get install" in said
 
