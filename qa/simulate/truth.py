@@ -95,7 +95,7 @@ def _signals(machine: Scan, uniform: tuple[int, ...]) -> dict[int, Found]:
         if key not in known:
             radius = float(_diameters(setup, plane).mean()) / 2
             inner = setup.region_radius_mm(radius, _section_percent(setup, plane))
-            known[key] = signal_truths(machine, number - 1, (seen_centre(setup, plane), radius), inner)
+            known[key] = signal_truths(machine, number - 1, (_outline_centre(setup, plane), radius), inner)
         per_slice[number] = known[key]
     return per_slice
 
@@ -105,6 +105,16 @@ def _section_percent(setup: Setup, plane: Plane) -> float | None:
     height = _height(setup, plane)
     named = (s for s in setup.phantom.sections_at(height, height + 1e-9) if isinstance(s, Uniform))
     return next((s.region_percent for s in named if s.region_percent is not None), None)
+
+
+def _outline_centre(setup: Setup, plane: Plane) -> tuple[float, float]:
+    """Centre of the circle through the outline: where gradients are bent, not where the phantom's centre appears."""
+    x, y = seen_centre(setup, plane)
+    turns = np.arange(24) * 2 * math.pi / 24
+    directions = np.stack([np.cos(turns), np.sin(turns)], axis=-1)
+    away = outline_mm(setup, plane, (x, y), directions)[:, None] * directions
+    shift = away.sum(axis=0) / 12
+    return x + float(shift[0]), y + float(shift[1])
 
 
 def _signal_slice(setup: Setup, uniform: tuple[int, ...]) -> int:
@@ -123,6 +133,8 @@ def _diameters(setup: Setup, plane: Plane) -> Floats:
 
 def _square_diameter(setup: Setup, plane: Plane) -> float:
     """Diameter of the cross-section as a perfect scanner shows it, the phantom set up square."""
+    if setup.phantom.body.diameter_mm is None:
+        return float(_diameters(setup, plane).mean())  # nobody knows another: held against its own mean
     if setup.phantom.body.shape == "cylinder":
         return setup.body_diameter_mm
     perfect = setup.but(
@@ -170,6 +182,10 @@ def _pose(setup: Setup) -> dict[str, Truth]:
     middle = setup.planes[(setup.slices - 1) // 2]
     centre = middle.from_patient(np.asarray(setup.centre_patient))
     x, y = image_place(setup, middle, centre[0], centre[1])
+    if setup.slices == 1 and setup.phantom.body.shape == "cylinder" and not setup.lengthwise:
+        # One slice cannot tell the height: where it shows the axis stands in for the centre.
+        x, y = (np.asarray(v) for v in seen_centre(setup, middle))
+        centre[2] = 0.0
     seen = middle.to_patient(float(x), float(y), float(centre[2]))
     from_isocentre = middle.axes.T @ seen
     found = {"setup_offset": Truth(math.hypot(from_isocentre[0], from_isocentre[1]), {}, {"patient_mm": seen.tolist()})}

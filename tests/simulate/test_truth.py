@@ -185,7 +185,11 @@ def test_uniform_slices_are_those_without_inserts(make):
 
 
 def test_offset_tilt_and_frequency(make):
-    truth = true_values(make("cylinder-200", centre_patient=(6.0, -8.0, 5.0), tilt_x_deg=1.5, frequency_offset_ppm=3.0))
+    tilted = make("cylinder-200", centre_patient=(6.0, -8.0, 5.0), tilt_x_deg=1.5, frequency_offset_ppm=3.0)
+    truth = true_values(tilted)
+    # one slice shows the axis 5 mm below the centre, where the tilt has moved it: that stands in for the centre
+    assert truth["setup_offset"].value == pytest.approx(math.hypot(6, 8 - 5 * math.tan(math.radians(1.5))), abs=1e-4)
+    truth = true_values(tilted.but(slices=3, spacing_mm=10.0))
     assert truth["setup_offset"].value == pytest.approx(10)
     assert truth["setup_offset"].details["patient_mm"] == pytest.approx([6, -8, 5])
     assert truth["setup_tilt"].value == pytest.approx(1.5)
