@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from qa.geometry import Floats
 from qa.judge.course import JUMP, STEP, Course, fit_course
-from qa.judge.trend import correlation_left, inflation, mann_kendall, theil_sen
+from qa.judge.trend import corrected_line, inflation, mann_kendall
 
 __all__ = ["CONFIDENCE", "WINDOW", "Forecast", "Onset", "OnsetKind", "Trend", "forecast", "onset", "pettitt", "trend"]
 
@@ -95,12 +95,8 @@ def trend(days: ArrayLike, values: ArrayLike) -> Trend | None:
     t, x = _window(days, values, WINDOW)
     if x.size < _AT_LEAST or t[0] == t[-1]:
         return None
-    line = theil_sen(t, x, CONFIDENCE)
-    correlation = correlation_left(x - line.intercept - line.slope * t)
-    factor = inflation(correlation)
-    if correlation > 0:
-        line = theil_sen(t, x, CONFIDENCE, factor)
-    test = mann_kendall(x, factor)
+    line, correlation = corrected_line(t, x, CONFIDENCE)
+    test = mann_kendall(x, inflation(correlation))
     year = 365.25
     return Trend(
         line.slope * year,

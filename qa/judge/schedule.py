@@ -4,6 +4,7 @@ from collections import deque
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
+from functools import cached_property
 
 from qa.records import Event
 
@@ -42,7 +43,7 @@ class Schedule:
 
     def later(self, day: date, days: int) -> date:
         """Give the day that lies so many days that count after another; `date.max` where downtime has no end."""
-        for first, last in self._spans():
+        for first, last in self._spans:
             if last <= day:
                 continue
             between = max((first - day).days - 1, 0)
@@ -53,6 +54,7 @@ class Schedule:
             day, days = last, days - between
         return day + timedelta(days=days)
 
+    @cached_property
     def _spans(self) -> list[tuple[date, date]]:
         """Give the downtimes in order, such as touch or overlap made one."""
         spans: list[tuple[date, date]] = []

@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from qa.geometry import Floats
 
-__all__ = ["MannKendall", "TheilSen", "correlation_left", "inflation", "mann_kendall", "theil_sen"]
+__all__ = ["MannKendall", "TheilSen", "corrected_line", "correlation_left", "inflation", "mann_kendall", "theil_sen"]
 
 _CORRELATION_AT_MOST = 0.5
 
@@ -63,12 +63,31 @@ def theil_sen(x: ArrayLike, y: ArrayLike, confidence: float = 0.9, inflated: flo
     P. K. Sen, Estimates of the regression coefficient based on Kendall's tau, JASA 63 (1968) 1379.
     """
     u, v = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+    return _line(_slopes(u, v), u, v, confidence, inflated)
+
+
+def corrected_line(x: ArrayLike, y: ArrayLike, confidence: float = 0.9) -> tuple[TheilSen, float]:
+    """Fit as `theil_sen`, with the autocorrelation of the residuals allowed for; gives that autocorrelation too."""
+    u, v = np.asarray(x, dtype=float), np.asarray(y, dtype=float)
+    slopes = _slopes(u, v)
+    line = _line(slopes, u, v, confidence, 1.0)
+    correlation = correlation_left(v - line.intercept - line.slope * u)
+    if correlation > 0:
+        line = _line(slopes, u, v, confidence, inflation(correlation))
+    return line, correlation
+
+
+def _slopes(u: Floats, v: Floats) -> Floats:
+    """Give all pairwise slopes in order of size."""
     first, second = _pairs(v.size)
     run = u[second] - u[first]
     moved = run != 0
     if not moved.any():
         raise ValueError("a trend needs values at two different times")
-    slopes = np.sort((v[second] - v[first])[moved] / run[moved])
+    return np.sort((v[second] - v[first])[moved] / run[moved])
+
+
+def _line(slopes: Floats, u: Floats, v: Floats, confidence: float, inflated: float) -> TheilSen:
     slope = float(np.median(slopes))
     half = NormalDist().inv_cdf(0.5 + confidence / 2) * math.sqrt(inflated * _score_variance(v, u))
     low = max(round((slopes.size - half) / 2) - 1, 0)
@@ -119,8 +138,8 @@ def _score_variance(y: Floats, x: Floats | None = None) -> float:
     n = y.size
     variance = n * (n - 1) * (2 * n + 5) / 18
     for values in (y, x):
-        if values is not None:
-            tied = _ties(values)
+        tied = None if values is None else _ties(values)
+        if tied is not None and tied.size < n:
             variance -= float((tied * (tied - 1) * (2 * tied + 5)).sum()) / 18
     return max(variance, 0.0)
 

@@ -9,8 +9,8 @@ from qa.errors import ExitStatus
 from qa.judge import (
     Assessment,
     Grounds,
-    Schedule,
     ScannerStreams,
+    Schedule,
     assess_streams,
     control_charts,
     control_rules,

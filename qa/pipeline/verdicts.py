@@ -1,19 +1,19 @@
 """Hold what was measured against the limits, with what the record knows of the scanner."""
 
-from collections.abc import Sequence
+from collections.abc import Collection
 from dataclasses import replace
 from datetime import date, timedelta
 
-from qa.judge import Context, in_force, judge, true_values, with_derived
+from qa.judge import Context, choose, in_force, judge, true_values, with_derived
 from qa.phantoms import Phantom
 from qa.pipeline.department import Department
-from qa.records import Measurement, Outcome, Session, Verdict
+from qa.records import Limit, Measurement, Outcome, Verdict
 from qa.site import SiteScanner
 
 __all__ = ["judge_outcome"]
 
 _LOOK_BACK = timedelta(days=400)
-"""How far back the session before is looked for, for limits on the change from one to the next."""
+"""How far back the session before is looked for, where a limit on the change from one to the next applies."""
 
 
 def judge_outcome(
@@ -43,23 +43,32 @@ def judge_outcome(
         true_values=true_values(phantom, outcome.measurements),
     )
     measurements, missing = with_derived(outcome.measurements, context)
-    earlier = record.sessions(scanner.name, day - _LOOK_BACK, day - timedelta(days=1))
+    limits = department.site.limits
+    changing = {m.quantity for m in measurements if _on_change(choose(limits, m.quantity, context).limit)}
+    before = _before(department, scanner.name, outcome.phantom, day, changing) if changing else {}
     verdicts = []
     for measurement in measurements:
-        previous, previous_day = _before(earlier, outcome.phantom, measurement.quantity)
-        verdicts.append(
-            judge(measurement, department.site.limits, replace(context, previous=previous, previous_day=previous_day))
-        )
+        previous, previous_day = before.get(measurement.quantity, (None, None))
+        verdicts.append(judge(measurement, limits, replace(context, previous=previous, previous_day=previous_day)))
     judged = replace(outcome, measurements=measurements, not_measured=(*outcome.not_measured, *missing))
     return judged, tuple(verdicts)
 
 
-def _before(sessions: Sequence[Session], phantom: str, quantity: str) -> tuple[Measurement | None, date | None]:
-    """Find the same quantity on the same phantom in the latest session that has it."""
-    for session in reversed(sessions):
+def _on_change(limit: Limit | None) -> bool:
+    return limit is not None and (limit.per_day is not None or limit.warn_per_day is not None)
+
+
+def _before(
+    department: Department, scanner_name: str, phantom: str, day: date, quantities: Collection[str]
+) -> dict[str, tuple[Measurement, date]]:
+    """Find each quantity on the same phantom in the latest session before a day that has it."""
+    earlier = department.record.sessions(scanner_name, day - _LOOK_BACK, day - timedelta(days=1), details=False)
+    found: dict[str, tuple[Measurement, date]] = {}
+    for session in reversed(earlier):
         for acquisition in reversed(session.acquisitions):
-            if acquisition.phantom == phantom:
-                for judged in acquisition.judged:
-                    if judged.measurement.quantity == quantity:
-                        return judged.measurement, session.day
-    return None, None
+            for judged in acquisition.judged if acquisition.phantom == phantom else ():
+                if judged.measurement.quantity in quantities:
+                    found.setdefault(judged.measurement.quantity, (judged.measurement, session.day))
+        if len(found) == len(quantities):
+            break
+    return found

@@ -126,7 +126,7 @@ def clock_remark(last_at: str, now: datetime) -> str:
     behind = datetime.fromisoformat(last_at) - now.astimezone(UTC)
     if behind.total_seconds() <= 1:
         return ""
-    return f"this machine's clock stands {_span(behind.total_seconds())} before the time of the entry before: check the clock"
+    return f"this machine's clock stands {_span(behind.total_seconds())} before the time of the last entry: check the clock"
 
 
 def _span(seconds: float) -> str:

@@ -250,20 +250,18 @@ class Decisions(Ledger):
 
     def added_since(self, signed: Kept[SignOff]) -> tuple[int, ...]:
         """Give the acquisitions of a signed period that were taken in, corrected or withdrawn after it was signed."""
-        period, later = signed.what, entries.alias()
-        query = (
-            select(acquisitions.c.entry)
-            .join(sessions, sessions.c.entry == acquisitions.c.session)
-            .outerjoin(later, later.c.corrects == acquisitions.c.entry)
-            .where(
-                sessions.c.scanner_name == period.scanner_name,
-                sessions.c.day.between(period.first_day.isoformat(), period.last_day.isoformat()),
-                (acquisitions.c.entry > signed.entry) | (later.c.number > signed.entry),
-            )
-            .order_by(acquisitions.c.entry)
-        )
         with self._database.reading() as connection:
-            return tuple(connection.execute(query).scalars())
+            rows = connection.execute(_ADDED.where(sign_offs.c.entry == signed.entry))
+            return tuple(entry for _, entry in rows)
+
+    def added_to_signed(self) -> dict[int, tuple[int, ...]]:
+        """Do the same for all sign-offs that stand: by their entries, those without any left out."""
+        withdrawn = select(entries.c.corrects).where(entries.c.corrects > 0)
+        found: dict[int, list[int]] = {}
+        with self._database.reading() as connection:
+            for signed, entry in connection.execute(_ADDED.where(sign_offs.c.entry.not_in(withdrawn))):
+                found.setdefault(signed, []).append(entry)
+        return {signed: tuple(added) for signed, added in found.items()}
 
     def _decide(
         self,
@@ -297,6 +295,22 @@ class Decisions(Ledger):
             query = query.where(table.c.scanner_name == scanner_name)
         with self._database.reading() as connection:
             return tuple(_kept(row, read(row)) for row in connection.execute(query))
+
+
+_LATER = entries.alias()
+_ADDED = (
+    select(sign_offs.c.entry, acquisitions.c.entry)
+    .join(
+        sessions,
+        (sessions.c.scanner_name == sign_offs.c.scanner_name)
+        & sessions.c.day.between(sign_offs.c.first_day, sign_offs.c.last_day),
+    )
+    .join(acquisitions, acquisitions.c.session == sessions.c.entry)
+    .outerjoin(_LATER, _LATER.c.corrects == acquisitions.c.entry)
+    .where((acquisitions.c.entry > sign_offs.c.entry) | (_LATER.c.number > sign_offs.c.entry))
+    .order_by(sign_offs.c.entry, acquisitions.c.entry)
+)
+"""Sign-offs, each with the acquisitions of its period that are not what they were when it was signed."""
 
 
 def _standing(table: Table, *, withdrawn: bool = False) -> Select[Any]:

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 import numpy as np
 from sqlalchemy import Connection, Select, select
 
-from qa.records import OUT_OF_LIMITS, History, Judged, Measurement, Session
+from qa.records import OUT_OF_LIMITS, History, Judged, Measurement, Session, Settings
 from qa.store import queries, rows
 from qa.store.tables import acquisitions, details, measurements, sessions, verdicts
 
@@ -107,30 +107,30 @@ class _Acquisitions:
     def __init__(self, connection: Connection, period: Period) -> None:
         a, s = acquisitions.c, sessions.c
         query = (
-            select(a.entry, s.scanner_name, s.day, a.phantom, a.settings, a.scanner)
+            select(a.entry, s.scanner_name, s.day, a.phantom, a.scanner, a.settings)
             .join(sessions, s.entry == a.session)
             .where(a.entry.in_(queries.standing_acquisitions(*period)))
             .order_by(s.scanner_name, s.day, a.acquired_at, a.entry)
         )
-        entry, name, day, phantom, setting, scanner = _columns(
-            [row for batch in _batches(connection, query) for row in batch], 6
-        )
-        build = rows.Builder()
-        names, phantoms = _Numbers[str](), _Numbers[str]()
-        settings, scanners = _Numbers[str](), _Numbers[str]()
-        texts: dict[str, str] = {}
-        # The frequency alone would make every acquisition's settings a text of their own.
-        keys = [_FREQUENCY.sub("", text) for text in setting]
-        for key, text in zip(keys, setting, strict=True):
-            texts.setdefault(key, text)
-        self.identifiers = np.array(entry, dtype=np.int64)
-        self.days = _ordinals(day)
-        self.scanner_name = _numbered(names, name)
-        self.phantom = _numbered(phantoms, phantom)
-        self.setting = _numbered(settings, keys)
-        self.scanner = _numbered(scanners, scanner)
-        self.scanner_names, self.phantoms = tuple(names), tuple(phantoms)
-        self.settings = tuple(replace(build.setting(texts[key]), frequency_MHz=None) for key in settings)
+        build, days = rows.Builder(), _Numbers[str]()
+        names, phantoms, settings, scanners = _Numbers[str](), _Numbers[str](), _Numbers[str](), _Numbers[str]()
+        parsed: list[Settings] = []
+        columns: list[list[int]] = [[], [], [], [], [], []]
+        for batch in _batches(connection, query):
+            entry, *words, setting = zip(*batch, strict=True)
+            # The frequency alone would make the settings of every acquisition a text of their own.
+            keys = [_FREQUENCY.sub("", text) for text in setting]
+            numbers = [settings[key] for key in keys]
+            for number, text in zip(numbers, setting, strict=True):
+                if number == len(parsed):
+                    parsed.append(replace(build.setting(text), frequency_MHz=None))
+            columns[0] += entry
+            columns[1] += numbers
+            for column, known, texts in zip(columns[2:], (names, days, phantoms, scanners), words, strict=True):
+                column += [known[text] for text in texts]
+        self.identifiers, self.setting, self.scanner_name, day, self.phantom, self.scanner = np.array(columns, dtype=np.int64)
+        self.days = np.array([date.fromisoformat(text).toordinal() for text in days], dtype=np.int64)[day]
+        self.scanner_names, self.phantoms, self.settings = tuple(names), tuple(phantoms), tuple(parsed)
         self.scanners = tuple(build.scanner(text) for text in scanners)
 
 
@@ -187,17 +187,8 @@ class _Figures:
         )
 
 
-def _columns(found: Sequence[Sequence[Any]], count: int) -> Sequence[Sequence[Any]]:
-    return list(zip(*found, strict=True)) if found else [()] * count
-
-
 def _numbered(numbers: _Numbers[T], things: Sequence[T]) -> "NDArray[np.int64]":
     return np.array([numbers[one] for one in things], dtype=np.int64)
-
-
-def _ordinals(days: Sequence[str]) -> "NDArray[np.int64]":
-    once = {day: date.fromisoformat(day).toordinal() for day in set(days)}
-    return np.array([once[day] for day in days], dtype=np.int64)
 
 
 def _found(entry: "NDArray[np.int64]", position: "NDArray[np.int64]", wanted: Sequence[Sequence[int]]) -> "NDArray[np.bool_]":

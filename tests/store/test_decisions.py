@@ -139,6 +139,20 @@ def test_what_came_after_a_signature_is_named(record, make):
     assert record.added_since(signed) == (old, late)
 
 
+def test_what_came_after_is_named_for_all_signatures_that_stand(record, make):
+    make.fill(record)
+    assert record.added_to_signed() == {}
+    first, second = sign(record, make), sign(record, make, who=Who("bob", "Bob Invented"))
+    assert record.added_to_signed() == {}
+    late = record.store_all([make.intake(9, day=3)])[0]
+    assert record.added_to_signed() == {first: (late,), second: (late,)}
+    record.withdraw(first, why="signed too early", when=make.now)
+    third = sign(record, make)
+    assert record.added_to_signed() == {second: (late,)}
+    better = record.replace(late, make.intake(9, day=3), why="measured again")
+    assert record.added_to_signed() == {second: (late, better), third: (late, better)}
+
+
 def test_entries_of_a_wrong_clock_are_kept_with_a_remark(record, make):
     record.add_event(make.event(), today=TODAY, when=make.now)
     record.add_event(make.event(), today=TODAY, when=make.now - timedelta(hours=5))
