@@ -109,17 +109,21 @@ def sample(images: NDArray[np.floating], rows: Floats, columns: Floats) -> Float
         Interpolated values; NaN where a place lies outside its image.
     """
     count, height, width = images.shape
-    top, left = np.floor(rows), np.floor(columns)
     inside = (rows >= 0) & (rows <= height - 1) & (columns >= 0) & (columns <= width - 1)
-    i = np.clip(top, 0, max(height - 2, 0)).astype(np.intp)
-    j = np.clip(left, 0, max(width - 2, 0)).astype(np.intp)
+    i = np.clip(rows.astype(np.intp), 0, max(height - 2, 0))
+    j = np.clip(columns.astype(np.intp), 0, max(width - 2, 0))
     down, right = rows - i, columns - j
     flat = images.reshape(-1)
     at = (np.arange(count) * (height * width)).reshape((-1,) + (1,) * (rows.ndim - 1)) + i * width + j
     step_right, step_down = (1 if width > 1 else 0), (width if height > 1 else 0)
-    upper = flat[at] * (1 - right) + flat[at + step_right] * right
-    lower = flat[at + step_down] * (1 - right) + flat[at + step_down + step_right] * right
-    return np.where(inside, upper * (1 - down) + lower * down, np.nan)
+    first, second = np.take(flat, at), np.take(flat, at + step_right)
+    upper = first + (second - first) * right
+    at += step_down
+    first, second = np.take(flat, at), np.take(flat, at + step_right)
+    lower = first + (second - first) * right
+    read: Floats = upper + (lower - upper) * down
+    read[~inside] = np.nan
+    return read
 
 
 def harmonics(angles: ArrayLike, order: int) -> Floats:

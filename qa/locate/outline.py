@@ -63,8 +63,7 @@ def find_silhouettes(pixels: NDArray[np.float32], plane: Plane) -> tuple[Silhoue
     from scipy import ndimage
 
     block = max(1, round(min(pixels.shape[1:]) / _COARSE))
-    rows, columns = (n // block * block for n in pixels.shape[1:])
-    coarse = pixels[:, :rows, :columns].reshape(len(pixels), rows // block, block, columns // block, block).mean(axis=(2, 4))
+    coarse = _coarse(pixels, block)
     low, high = (float(v) for v in np.percentile(coarse, [5, 99.5]))
     if high <= 0:
         return "the images hold no signal: check that the phantom was in the coil and that the right series was sent"
@@ -96,6 +95,18 @@ def find_silhouettes(pixels: NDArray[np.float32], plane: Plane) -> tuple[Silhoue
             )
         )
     return tuple(found) or "nothing stands out from the background: check that the phantom was in the coil"
+
+
+def _coarse(pixels: NDArray[np.float32], block: int) -> NDArray[np.float32]:
+    """Means over blocks of pixels; rows and columns left over are cut off."""
+    rows, columns = (n // block * block for n in pixels.shape[1:])
+    strips = pixels[:, 0:rows:block, :columns].copy()
+    for k in range(1, block):
+        strips += pixels[:, k:rows:block, :columns]
+    blocks = strips[..., 0::block].copy()
+    for k in range(1, block):
+        blocks += strips[..., k::block]
+    return blocks / np.float32(block * block)
 
 
 def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[Silhouette, ...]) -> tuple[Outline, ...]:
