@@ -15,6 +15,7 @@ from qa.judge.control import (
     CALM,
     CORRELATION_AT_MOST,
     LEARNING,
+    OUTLIER,
     QUARANTINE,
     REFERENCE,
     ControlChart,
@@ -22,9 +23,7 @@ from qa.judge.control import (
     Walked,
     assemble,
     control_chart,
-    first_outliers,
     judged_segments,
-    steps_of,
 )
 from qa.judge.streams import Stream
 from qa.judge.student import normal_scores
@@ -72,8 +71,8 @@ def _walk(segments: Sequence[tuple[Floats, Floats]], rules: ControlRules) -> Ite
     lanes = _Lanes([segments[i] for i in order], rules)
     lanes.learn()
     lanes.go_on()
-    back = np.argsort(order)
-    return map(lanes.walked, back.tolist())
+    found = lanes.walked()
+    return (found[place] for place in np.argsort(order).tolist())
 
 
 class _Lanes:
@@ -83,12 +82,13 @@ class _Lanes:
         self.rules = rules
         self.sizes = [values.size for _, values in segments]
         shape = (self.sizes[0], len(segments))
-        self.x, self.steps, self.bad = np.zeros(shape), np.ones(shape), np.zeros(shape, dtype=bool)
+        day, x = np.zeros(shape[::-1]), np.zeros(shape[::-1])
         for lane, (days, values) in enumerate(segments):
-            self.x[: values.size, lane] = values - values[0]
-            self.steps[: values.size, lane] = steps_of(days)
-            self.bad[:LEARNING, lane] = first_outliers(self.x[:LEARNING, lane])
-        self.outliers = self.bad[:LEARNING].copy()
+            day[lane, : days.size], x[lane, : values.size] = days, values
+        self.x, self.steps = (x - x[:, :1]).T.copy(), _steps(day.T)
+        self.outliers = _outliers(self.x[:LEARNING])
+        self.bad = np.zeros(shape, dtype=bool)
+        self.bad[:LEARNING] = self.outliers
         self.going = np.searchsorted(-np.array(self.sizes), -np.arange(1, shape[0] + 1), side="right").tolist()
         self.models = np.zeros((7, *shape))
         self.scores = np.zeros(shape)
@@ -153,15 +153,12 @@ class _Lanes:
         self.course[:, i, :going] = value, deviation
         return value, deviation
 
-    def walked(self, lane: int) -> Walked:
-        """Give what came of a lane."""
-        judged = slice(LEARNING, self.sizes[lane])
-        return Walked(
-            self.outliers[:, lane],
-            np.ascontiguousarray(self.models[:, judged, lane]),
-            np.ascontiguousarray(self.scores[judged, lane]),
-            np.ascontiguousarray(self.course[:, judged, lane]),
-        )
+    def walked(self) -> list[Walked]:
+        """Give what came of each lane."""
+        outliers, scores = self.outliers.T.copy(), self.scores.T.copy()
+        models, course = (np.ascontiguousarray(one.transpose(2, 0, 1)) for one in (self.models, self.course))
+        judged = [slice(LEARNING, size) for size in self.sizes]
+        return [Walked(outliers[i], models[i, :, j], scores[i, j], course[i, :, j]) for i, j in enumerate(judged)]
 
 
 class _Sums:
@@ -203,6 +200,22 @@ class _Sums:
         square = correlation * correlation
         freedom = (n - 1) * (1 - square) / (1 + square)
         return np.stack((mean, sigma, sigma * np.sqrt(1 + f / n), freedom, correlation, f / (n + f), n))
+
+
+def _steps(day: Floats) -> Floats:
+    """Do as `qa.judge.control` for (sessions, lanes) days."""
+    gaps = np.diff(day, axis=0)
+    ratio = gaps / np.maximum(np.median(gaps[: LEARNING - 1], axis=0), 1 / 24)
+    steps = np.ones(day.shape)
+    steps[1:] = np.where((ratio >= 0.5) & (ratio < 1.5), 1.0, np.maximum(ratio, 1 / 7))
+    return steps
+
+
+def _outliers(first: Floats) -> NDArray[np.bool_]:
+    """Do as `qa.judge.control.first_outliers` for (sessions, lanes) values."""
+    distance = np.abs(first - np.median(first, axis=0))
+    scatter = 1.4826 * np.median(distance, axis=0)
+    return np.asarray((distance > OUTLIER * scatter) & (scatter > 0))
 
 
 def _scores(t: Floats, freedom: Floats) -> Floats:

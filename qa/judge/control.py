@@ -51,6 +51,7 @@ __all__ = [
     "CORRELATION_AT_MOST",
     "FALSE_ALARM_RATE",
     "LEARNING",
+    "OUTLIER",
     "QUARANTINE",
     "REFERENCE",
     "RULES",
@@ -61,7 +62,6 @@ __all__ = [
     "control_chart",
     "first_outliers",
     "judged_segments",
-    "steps_of",
     "walk",
 ]
 
@@ -73,7 +73,8 @@ REFERENCE = 104
 """Sessions of a segment that may join the reference: two years of weeks, so that a season is not taken for a change."""
 CORRELATION_AT_MOST = 0.4
 """Autocorrelation that is allowed for at most."""
-_OUTLIER = 8.0
+OUTLIER = 8.0
+"""Scaled median absolute deviations beyond which a first session is far from the rest."""
 CALM = 2.0
 """Standard deviations within which the smoothed course is calm."""
 
@@ -173,7 +174,7 @@ def first_outliers(values: Floats) -> NDArray[np.bool_]:
     """Find values far from the rest of a short series: more than 8 scaled median absolute deviations from its median."""
     distance = np.abs(values - np.median(values))
     scatter = 1.4826 * float(np.median(distance))
-    return np.asarray(distance > _OUTLIER * scatter) if scatter > 0 else np.zeros(values.size, dtype=bool)
+    return np.asarray(distance > OUTLIER * scatter) if scatter > 0 else np.zeros(values.size, dtype=bool)
 
 
 def control_chart(
@@ -358,7 +359,7 @@ class _Smoother:
 def walk(day: Floats, x: Floats, rules: ControlRules) -> Walked:
     """Go along one segment; a loop, because what joins the reference hangs on what was said before."""
     # Sums of squares are taken about the first value, or they would lose all digits of a centre frequency.
-    x, steps, outlier = x - x[0], steps_of(day), first_outliers(x[:LEARNING])
+    x, steps, outlier = x - x[0], _steps(day), first_outliers(x[:LEARNING])
     values, bad = x.tolist(), outlier.tolist() + [False] * (x.size - LEARNING)
     reference, smooth = _Reference(), _Smoother(rules.weight)
     for i in range(LEARNING):
@@ -392,7 +393,7 @@ def walk(day: Floats, x: Floats, rules: ControlRules) -> Walked:
     return Walked(outlier, by_session, np.concatenate((scores, rest)), np.array(course).T)
 
 
-def steps_of(day: Floats) -> list[float]:
+def _steps(day: Floats) -> list[float]:
     """Gap before each session in usual intervals; whole where a session came on time."""
     gaps = np.diff(day)
     ratio = gaps / max(float(np.median(gaps[: LEARNING - 1])), 1 / 24)

@@ -30,7 +30,7 @@ class Survey:
     """The fleet as of a moment, in the order of site.toml.
 
     `clock` says that the machine's clock stands before the record's last entry, so that what is due cannot be told; empty
-    where it does not. `remarks` says what else a person should know, such as what was added to a period after it was signed.
+    where it does not. `remarks` says what was added to a period after it was signed. Both need a person.
     """
 
     at: datetime
@@ -43,7 +43,7 @@ class Survey:
         standings = {one.standing for one in self.assessments}
         if "out of limits" in standings:
             return ExitStatus.OUT_OF_LIMITS
-        needed = attention or bool(self.clock) or standings & {"overdue", "drifting"}
+        needed = attention or self.clock or self.remarks or standings & {"overdue", "drifting"}
         return ExitStatus.NEEDS_A_PERSON if needed else ExitStatus.DONE
 
 

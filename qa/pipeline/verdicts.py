@@ -12,8 +12,9 @@ from qa.site import SiteScanner
 
 __all__ = ["judge_outcome"]
 
-_LOOK_BACK = timedelta(days=400)
-"""How far back the session before is looked for, where a limit on the change from one to the next applies."""
+_LOOK_BACK = (timedelta(days=60), timedelta(days=400))
+"""How far back the session before is looked for, where a limit on the change from one to the next applies: at first, and where
+it is not found."""
 
 
 def judge_outcome(
@@ -62,13 +63,14 @@ def _before(
     department: Department, scanner_name: str, phantom: str, day: date, quantities: Collection[str]
 ) -> dict[str, tuple[Measurement, date]]:
     """Find each quantity on the same phantom in the latest session before a day that has it."""
-    earlier = department.record.sessions(scanner_name, day - _LOOK_BACK, day - timedelta(days=1), details=False)
     found: dict[str, tuple[Measurement, date]] = {}
-    for session in reversed(earlier):
-        for acquisition in reversed(session.acquisitions):
-            for judged in acquisition.judged if acquisition.phantom == phantom else ():
-                if judged.measurement.quantity in quantities:
-                    found.setdefault(judged.measurement.quantity, (judged.measurement, session.day))
+    for back in _LOOK_BACK:
+        sessions = department.record.sessions(scanner_name, day - back, day - timedelta(days=1), details=False)
+        for session in reversed(sessions):
+            for acquisition in reversed(session.acquisitions):
+                for judged in acquisition.judged if acquisition.phantom == phantom else ():
+                    if judged.measurement.quantity in quantities:
+                        found.setdefault(judged.measurement.quantity, (judged.measurement, session.day))
         if len(found) == len(quantities):
             break
     return found

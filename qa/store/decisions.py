@@ -250,16 +250,29 @@ class Decisions(Ledger):
 
     def added_since(self, signed: Kept[SignOff]) -> tuple[int, ...]:
         """Give the acquisitions of a signed period that were taken in, corrected or withdrawn after it was signed."""
+        query = _SIGNED.where(sign_offs.c.entry == signed.entry, sign_offs.c.entry < _CHANGED)
         with self._database.reading() as connection:
-            rows = connection.execute(_ADDED.where(sign_offs.c.entry == signed.entry))
-            return tuple(entry for _, entry in rows)
+            return tuple(entry for _, entry in connection.execute(query.order_by(acquisitions.c.entry)))
 
     def added_to_signed(self) -> dict[int, tuple[int, ...]]:
-        """Do the same for all sign-offs that stand: by their entries, those without any left out."""
+        """Give all acquisitions that were taken in, corrected or withdrawn after the last signature on their day.
+
+        Returns
+        -------
+        dict of int to tuple of int
+            Numbers of the acquisitions by the number of that signature; those without any are left out.
+        """
         withdrawn = select(entries.c.corrects).where(entries.c.corrects > 0)
+        last = func.max(sign_offs.c.entry)
+        query = (
+            _SIGNED.with_only_columns(last, acquisitions.c.entry)
+            .where(sign_offs.c.entry.not_in(withdrawn))
+            .group_by(acquisitions.c.entry)
+            .having(func.max(_CHANGED) > last)
+        )
         found: dict[int, list[int]] = {}
         with self._database.reading() as connection:
-            for signed, entry in connection.execute(_ADDED.where(sign_offs.c.entry.not_in(withdrawn))):
+            for signed, entry in connection.execute(query.order_by(last, acquisitions.c.entry)):
                 found.setdefault(signed, []).append(entry)
         return {signed: tuple(added) for signed, added in found.items()}
 
@@ -298,7 +311,9 @@ class Decisions(Ledger):
 
 
 _LATER = entries.alias()
-_ADDED = (
+_CHANGED = func.coalesce(_LATER.c.number, acquisitions.c.entry)
+"""The entry that an acquisition was taken in with, or corrected or withdrawn by."""
+_SIGNED = (
     select(sign_offs.c.entry, acquisitions.c.entry)
     .join(
         sessions,
@@ -307,10 +322,8 @@ _ADDED = (
     )
     .join(acquisitions, acquisitions.c.session == sessions.c.entry)
     .outerjoin(_LATER, _LATER.c.corrects == acquisitions.c.entry)
-    .where((acquisitions.c.entry > sign_offs.c.entry) | (_LATER.c.number > sign_offs.c.entry))
-    .order_by(sign_offs.c.entry, acquisitions.c.entry)
 )
-"""Sign-offs, each with the acquisitions of its period that are not what they were when it was signed."""
+"""Sign-offs, each with every acquisition of its period."""
 
 
 def _standing(table: Table, *, withdrawn: bool = False) -> Select[Any]:

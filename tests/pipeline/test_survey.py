@@ -188,6 +188,8 @@ def test_what_was_added_to_a_signed_period_is_said(department):
         "north-3t: 2 acquisitions were added, corrected or withdrawn after Ada Invented had signed the period from "
         "2025-01-01 to 2025-03-31 off"
     )
+    record.sign("north-3t", *period, comment="seen again", who=Who("bob", "Bob"), today=department.today, when=now)
+    assert survey(department).remarks == ()
 
 
 def test_the_change_since_the_session_before_is_judged_by_the_latest_that_has_the_quantity(department):

@@ -139,18 +139,21 @@ def test_what_came_after_a_signature_is_named(record, make):
     assert record.added_since(signed) == (old, late)
 
 
-def test_what_came_after_is_named_for_all_signatures_that_stand(record, make):
+def test_what_came_after_the_last_signature_is_named_until_somebody_signs_again(record, make):
     make.fill(record)
     assert record.added_to_signed() == {}
-    first, second = sign(record, make), sign(record, make, who=Who("bob", "Bob Invented"))
+    first = sign(record, make)
     assert record.added_to_signed() == {}
-    late = record.store_all([make.intake(9, day=3)])[0]
-    assert record.added_to_signed() == {first: (late,), second: (late,)}
-    record.withdraw(first, why="signed too early", when=make.now)
-    third = sign(record, make)
-    assert record.added_to_signed() == {second: (late,)}
+    late = record.store_all([make.intake(9, day=3), make.intake(10, day=60)])[0]
+    assert record.added_to_signed() == {first: (late,)}
+    second = sign(record, make, who=Who("bob", "Bob Invented"))
+    assert record.added_to_signed() == {}
     better = record.replace(late, make.intake(9, day=3), why="measured again")
-    assert record.added_to_signed() == {second: (late, better), third: (late, better)}
+    assert record.added_to_signed() == {second: (late, better)}
+    record.withdraw(second, why="signed too early", when=make.now)
+    assert record.added_to_signed() == {first: (late, better)}
+    sign(record, make, who=Who("bob", "Bob Invented"))
+    assert record.added_to_signed() == {}
 
 
 def test_entries_of_a_wrong_clock_are_kept_with_a_remark(record, make):

@@ -152,6 +152,7 @@ def test_corrections_and_signatures(url, make):
         record.sign("north-3t", date(2026, 3, 1), today, comment="", who=make.who, today=today, when=make.now + timedelta(30))
         late = record.store_all([make.intake(9, day=3)])[0]
         assert record.added_since(record.sign_offs()[0]) == (late,)
+        assert record.added_to_signed() == {record.sign_offs()[0].entry: (late,)}
         assert record.verify().whole
 
 
