@@ -113,9 +113,8 @@ def check(
                 put(taken_line(taken.scanner_name, taken.outcome, taken.verdicts))
             for one in intake.refused:
                 put(refused_line(one))
-            for remark in (found.clock, *found.remarks):
-                if remark:
-                    put(remark)
+            for remark in found.sentences:
+                put(remark)
         if mail is not None:
             write_mail(mail, mail_text(department, intake, found))
         finish(found.exit_status(attention=intake.needs_a_person))
@@ -140,14 +139,13 @@ def status(
         if as_json:
             from qa.report.figures_json import status_document, to_json
 
-            put(to_json(status_document(found.at, found.assessments)))
+            put(to_json(status_document(found.at, found.assessments, found.sentences)))
         elif not quiet:
             from qa.report.terminal import status_table
 
             put(status_table(found.assessments))
-            for remark in (found.clock, *found.remarks):
-                if remark:
-                    say(remark)
+            for remark in found.sentences:
+                say(remark)
         finish(found.exit_status())
 
 

@@ -38,12 +38,17 @@ class Survey:
     clock: str = ""
     remarks: tuple[str, ...] = ()
 
+    @property
+    def sentences(self) -> tuple[str, ...]:
+        """What a person should know besides the standings."""
+        return (self.clock, *self.remarks) if self.clock else self.remarks
+
     def exit_status(self, *, attention: bool = False) -> ExitStatus:
         """Give the exit status of a run; `attention` tells that something else needs a person, such as a refused series."""
         standings = {one.standing for one in self.assessments}
         if "out of limits" in standings:
             return ExitStatus.OUT_OF_LIMITS
-        needed = attention or self.clock or self.remarks or standings & {"overdue", "drifting"}
+        needed = attention or self.sentences or standings & {"overdue", "drifting"}
         return ExitStatus.NEEDS_A_PERSON if needed else ExitStatus.DONE
 
 

@@ -44,7 +44,7 @@ def measurements_document(outcomes: Iterable[Outcome], refused: Iterable[Refused
     }
 
 
-def status_document(at: datetime, assessments: "Iterable[Assessment]") -> dict[str, Any]:
+def status_document(at: datetime, assessments: "Iterable[Assessment]", remarks: Iterable[str] = ()) -> dict[str, Any]:
     """Lay out what `evenfield status --json` prints.
 
     Parameters
@@ -53,6 +53,8 @@ def status_document(at: datetime, assessments: "Iterable[Assessment]") -> dict[s
         The moment of the run, with its time zone.
     assessments : iterable of Assessment
         One a scanner.
+    remarks : iterable of str
+        What else a person should know, one sentence each.
 
     Returns
     -------
@@ -64,6 +66,7 @@ def status_document(at: datetime, assessments: "Iterable[Assessment]") -> dict[s
         "version": 1,
         "at": _moment(at),
         "scanners": [_scanner(one) for one in assessments],
+        "remarks": list(remarks),
     }
 
 

@@ -170,6 +170,7 @@ def test_a_clock_that_jumped_back_needs_a_person(place, department):
     with open_department(place, FIRST + timedelta(weeks=10)) as early:
         found = survey(early)
     assert found.clock.startswith("this machine's clock stands 350 days before")
+    assert found.sentences == (found.clock,)
     assert found.exit_status() == ExitStatus.NEEDS_A_PERSON
 
 
