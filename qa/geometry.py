@@ -161,17 +161,20 @@ def robust_fit(design: Floats, values: Floats, least_scale: float, start: Floats
     filled = np.where(known, values, 0.0)
     outer = design[:, :, None] * design[:, None, :]
     tiny = 1e-9 * np.eye(design.shape[1])
+    settled = 1e-3 * least_scale
 
     def solve(weights: Floats) -> Floats:
-        matrix = np.einsum("sn,npq->spq", weights, outer) + tiny
-        solved: Floats = np.linalg.solve(matrix, ((weights * filled) @ design)[:, :, None])[:, :, 0]
+        matrix = (weights @ outer.reshape(len(outer), -1)).reshape(-1, *tiny.shape) + tiny
+        solved: Floats = np.linalg.solve(matrix, ((weights * filled) @ design)[:, :, None])[:, :, 0].astype(np.float64)
         return solved
 
     parameters = solve(known.astype(np.float64)) if start is None else start
     if start is None:
         for _ in range(12):
             residual = np.abs(filled - parameters @ design.T)
-            parameters = solve(known / np.maximum(residual, least_scale))
+            before, parameters = parameters, solve(known / np.maximum(residual, least_scale))
+            if np.abs(parameters - before).max() < settled:
+                break
     weights = known.astype(np.float64)
     for _ in range(8):
         residual = np.abs(filled - parameters @ design.T)
@@ -179,7 +182,9 @@ def robust_fit(design: Floats, values: Floats, least_scale: float, start: Floats
         middle = ranked[np.arange(len(values)), np.maximum(known.sum(axis=1) - 1, 0) // 2]
         scale = np.maximum(1.4826 * np.where(np.isfinite(middle), middle, 0.0), least_scale)
         weights = known * np.clip(1 - (residual / (4.685 * scale[:, None])) ** 2, 0, None) ** 2
-        parameters = solve(weights)
+        before, parameters = parameters, solve(weights)
+        if np.abs(parameters - before).max() < settled:
+            break
     poor = (weights > 0).sum(axis=1) <= design.shape[1]
     return np.where(poor[:, None], np.nan, parameters), weights
 
