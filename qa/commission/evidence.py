@@ -1,8 +1,8 @@
 """The report on disk: a new file of the name that was asked for, never written over another."""
 
-import contextlib
 from pathlib import Path
 
+from qa.disk import why_not_written, write_new
 from qa.errors import FaultError, UsageError
 
 __all__ = ["check_target", "write_evidence"]
@@ -31,12 +31,7 @@ def write_evidence(path: Path, pdf: bytes) -> None:
         The disk is full, permission is missing, or a file of that name has come up meanwhile.
     """
     try:
-        with path.open("xb") as file:
-            try:
-                file.write(pdf)
-            except OSError:
-                with contextlib.suppress(OSError):
-                    path.unlink()
-                raise
+        if not write_new(path, pdf):
+            raise FaultError(f"The report {path} was not written: a file of that name has come up meanwhile: name another.")
     except OSError as error:
-        raise FaultError(f"The report {path} was not written ({error.strerror or error}): see to it and run again.") from error
+        raise FaultError(f"The report {path} was not written: {why_not_written(error)}.") from error

@@ -11,11 +11,12 @@ from dataclasses import dataclass
 from datetime import date
 from pathlib import Path
 
+from qa.disk import why_not_written
 from qa.errors import FaultError, UsageError
 from qa.records import Picture
 from qa.report import style
 from qa.report.content import ScannerReport
-from qa.report.files import file_stem, why_not_written
+from qa.report.files import file_stem
 from qa.report.fleet import lay_out_fleet
 from qa.report.fleet_content import FleetReport
 from qa.report.images import region_words

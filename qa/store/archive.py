@@ -9,14 +9,14 @@ import hashlib
 import os
 import re
 import shutil
-import tempfile
 from datetime import date
 from pathlib import Path
 
+from qa.disk import why_not_written, write_new
 from qa.errors import FaultError
 from qa.records import SourceFile
 
-__all__ = ["archive_path", "clear_empty_folders", "file_away", "refuse_file", "write_new"]
+__all__ = ["archive_path", "clear_empty_folders", "file_away", "refuse_file", "release"]
 
 
 def _safe(identifier: str) -> str:
@@ -36,44 +36,11 @@ def _sha256(path: Path) -> str:
         return hashlib.file_digest(stream, "sha256").hexdigest()
 
 
-def write_new(target: Path, content: bytes) -> bool:
-    """Write a file that must not exist yet: complete and on disk before it has its name.
-
-    Returns
-    -------
-    bool
-        False where `target` exists already; it is then left as it is.
-
-    Raises
-    ------
-    FaultError
-        The disk is full, or the folder cannot be written to.
-    """
+def _write_new(target: Path, content: bytes) -> bool:
     try:
-        target.parent.mkdir(parents=True, exist_ok=True)
-        with tempfile.NamedTemporaryFile(dir=target.parent, prefix=".incoming-", delete=False) as stream:
-            temporary = Path(stream.name)
-            try:
-                stream.write(content)
-                stream.flush()
-                os.fsync(stream.fileno())
-            except OSError:
-                temporary.unlink(missing_ok=True)
-                raise
-        try:
-            os.link(temporary, target)
-        except FileExistsError:
-            return False
-        except OSError:
-            # Some network shares know no hard links; a rename is the next best there.
-            if target.exists():
-                return False
-            temporary.rename(target)
-        finally:
-            temporary.unlink(missing_ok=True)
+        return write_new(target, content)
     except OSError as error:
-        raise FaultError(f"{target}: could not be written ({error.strerror}): free disk space or mend permissions.") from error
-    return True
+        raise FaultError(f"{target}: could not be written: {why_not_written(error)}.") from error
 
 
 def file_away(file: SourceFile, target: Path, *, move: bool) -> Path:
@@ -101,9 +68,9 @@ def file_away(file: SourceFile, target: Path, *, move: bool) -> Path:
         raise FaultError(
             f"{file.path}: changed while it was being measured: wait until the transfer is complete, then run again."
         )
-    if not write_new(target, content) and _sha256(target) != file.sha256:
+    if not _write_new(target, content) and _sha256(target) != file.sha256:
         target = target.with_name(f"{target.stem}_{file.sha256[:12]}.dcm")
-        write_new(target, content)
+        _write_new(target, content)
     if move:
         release(file.path, file.sha256, target)
     return target
@@ -150,7 +117,7 @@ def refuse_file(original: Path, refused: Path, day: date, reason: str) -> Path:
         suffix = original.suffix if re.fullmatch(r"\.[A-Za-z0-9]{1,5}", original.suffix) else ""
         target = refused / day.isoformat() / f"{sha256[:16]}{'.data' if suffix == '.txt' else suffix}"
         target.parent.mkdir(parents=True, exist_ok=True)
-        write_new(target.with_name(f"{sha256[:16]}.txt"), f"{reason}\n".encode())
+        _write_new(target.with_name(f"{sha256[:16]}.txt"), f"{reason}\n".encode())
         if target.exists() and _sha256(target) == sha256:
             original.unlink()
         else:
