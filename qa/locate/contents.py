@@ -33,6 +33,8 @@ _NEAR_MM = 8.0
 _SURE = 0.5
 """Correlation with what is expected from which the phantom is believed to be the one named."""
 _MOST_TURN_DEG = 20.0
+_ALIKE = 0.97
+"""Share of the best agreement from which another is as good."""
 _LEAST_U_MM = 0.004
 _LEAST_U_DEG = 0.006
 
@@ -73,12 +75,12 @@ def refine(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose | Not
         return pose if section is None else _turned_by_lattice(acquisition, upright, phantom, section)
     rings = _Rings.of(acquisition, upright, phantom)
     axial = is_axial(acquisition.planes[0])
-    best = rings.best(phantom, reach_mm=_NEAR_MM, ways=(False,))
+    complete = phantom.slices is not None and len(acquisition.planes) == phantom.slices.count
+    far = _FAR_MM if complete else (phantom.extent_mm or 0.0) / 2
+    best = rings.best(phantom, reach_mm=_NEAR_MM if complete else far, ways=(False,))
     expected = best.score >= _SURE and (abs(best.turn_deg) <= _MOST_TURN_DEG or not axial)
     if not expected:
-        best = max(
-            (rings.best(phantom, reach_mm=_FAR_MM, ways=(way,)) for way in (False, True)), key=lambda guess: guess.score
-        )
+        best = max((rings.best(phantom, reach_mm=far, ways=(way,)) for way in (False, True)), key=lambda guess: guess.score)
     if best.score < _SURE:
         return NotLocated(
             f"the slices show none of the inserts of {phantom.name} where they should be: another phantom was scanned, "
@@ -221,13 +223,18 @@ class _Rings:
         return cls(np.fft.rfft(dark, axis=-1).astype(np.complex64), float(np.sum(dark**2)), heights, thickness)
 
     def best(self, phantom: Phantom, *, reach_mm: float, ways: tuple[bool, ...]) -> _Guess:
-        """Return the best agreement over all turns and over heights within reach."""
+        """Return the best agreement over all turns and over heights within reach.
+
+        Of ways that agree alike (a lattice looks the same after a quarter turn) the one nearest to the nominal set-up is
+        taken.
+        """
         _, templates, energies = _expected_rings(phantom, self.thickness_mm)
         last = len(templates) // 2
         count = int(reach_mm / _STEP_MM)
         shifts = np.arange(-count, count + 1) * _STEP_MM
         found = _Guess(-1.0, reversed=False, shift_mm=0.0, turn_deg=0.0)
         waves = np.arange(templates.shape[-1])
+        turns = (np.arange(_ANGLES) * 360 / _ANGLES + 180) % 360 - 180
         for way in ways:
             signed = -self.heights_mm if way else self.heights_mm
             number = np.round((signed[None, :] + shifts[:, None]) / _STEP_MM).astype(np.intp)
@@ -240,13 +247,17 @@ class _Rings:
             agreement = np.fft.irfft(product, n=_ANGLES, axis=-1)
             norm = np.sqrt(np.maximum((energies[at] * known).sum(axis=1), 1e-9) * max(self.energy, 1e-9))
             score = agreement / norm[:, None]
-            n, turn = (int(v) for v in np.unravel_index(int(np.argmax(score)), score.shape))
-            if score[n, turn] > found.score:
+            near = np.where(np.abs(turns) <= _MOST_TURN_DEG, score, -1.0)
+            best = near if near.max() > _ALIKE * score.max() else score
+            n, turn = np.unravel_index(int(np.argmax(best)), score.shape)
+            if _ALIKE * score[n, turn] > found.score:
                 fine = _vertex(score[n, [turn - 1, turn, (turn + 1) % _ANGLES]])
                 rise = _vertex(score[n - 1 : n + 2, turn]) if 0 < n < len(shifts) - 1 else 0.0
-                angle = (turn + fine) * 360 / _ANGLES
                 found = _Guess(
-                    float(score[n, turn]), way, float(shifts[n] + rise * _STEP_MM), float((angle + 180) % 360 - 180)
+                    score=float(score[n, turn]),
+                    reversed=way,
+                    shift_mm=float(shifts[n] + rise * _STEP_MM),
+                    turn_deg=float(turns[turn] + fine * 360 / _ANGLES),
                 )
         return found
 

@@ -22,6 +22,8 @@ _PIXELS = 900
 """About how many pixels of each section are looked at, drawn evenly: a regular choice would beat against bars and edges."""
 _LEAST_U_DEG = 0.006
 _LEAST_U_MM = 0.07
+_UNKNOWN_TILT_MM = 1.0
+"""What a tilt of a degree that one slice cannot show does to the height on the axis, told from bars at the rim."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,6 +86,8 @@ def overlay(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose:
             break
     spread = squares / max(1, count - 2)
     u_turn, u_rise = (math.sqrt(spread * inverse[k, k]) for k in (0, 1))
+    if pose.u_tilt_deg is None:
+        u_rise = math.hypot(u_rise, _UNKNOWN_TILT_MM)
     c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
     axes = pose.orientation @ np.array([[c, -s, 0.0], [s, c, 0.0], [0.0, 0.0, 1.0]])
     known = any(isinstance(p.section, Ramps | WedgeBars) and seen > 0.3 for p, seen in zip(patches, contrasts, strict=True))

@@ -9,6 +9,7 @@ from qa.records import Acquisition, NotLocated, Pose
 
 __all__ = ["is_axial", "off_sections", "suffering"]
 
+_MOST_NAMED = 4
 _ENTERS_MM = 1.0
 """What a set-up puts into a slice position, from which it is worth a remark."""
 _MOST_OFF = 0.75
@@ -51,8 +52,9 @@ def off_sections(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> tupl
             )
         return ()
     missing = [n for n, z in enumerate(expected, start=1) if np.abs(heights - z).min() > stack.spacing_mm / 2]
-    which = f"; missing: {', '.join(f'slice {n}' for n in missing)}" if missing else ""
-    return (f"{len(heights)} slices where {stack.count} are expected{which}",)
+    which = f"; missing: {', '.join(f'slice {n}' for n in missing)}" if 0 < len(missing) <= _MOST_NAMED else ""
+    seen = "1 slice" if len(heights) == 1 else f"{len(heights)} slices"
+    return (f"{seen} where {stack.count} are expected{which}",)
 
 
 def _way(acquisition: Acquisition, off_mm: float) -> str:

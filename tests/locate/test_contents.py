@@ -113,6 +113,19 @@ def test_a_missing_slice_is_named_and_the_rest_located(plain, gone, said):
     assert pose.centre_patient == pytest.approx(whole.centre_patient, abs=0.2)
 
 
+@pytest.mark.parametrize("which", [[0], [10], [0, 10], [9, 10], [4], [6, 7, 8, 9, 10]])
+def test_a_few_slices_that_show_something_are_enough(plain, which):
+    whole, few = locate(plain, SECTIONED), locate(cut(plain, which), SECTIONED)
+    assert few.rotation_deg == pytest.approx(whole.rotation_deg, abs=0.2)
+    if which == [4]:
+        assert few.u_centre_mm[2] is None
+        return
+    assert (few.u_centre_mm[2] > 1) == (len(which) == 1)
+    lowest = few.to_phantom(np.asarray(plain.planes[which[0]].to_patient(*few.section(0).centre_mm)))
+    assert lowest[2] == pytest.approx(-50.0 + 10 * which[0] - 1.2, abs=2 * few.u_centre_mm[2])
+    assert any("where 11 are expected" in remark for remark in few.remarks)
+
+
 def test_slices_of_uniform_fill_alone_do_not_tell_the_pose(plain):
     pose = locate(cut(plain, [5, 6, 7]), SECTIONED)
     assert isinstance(pose, NotLocated)
