@@ -37,6 +37,7 @@ _CIRCLES_MM = (100.0, 150.0, 200.0)
 _LEAST_U_PX = 0.008
 _FAINT_PX = 0.2
 """A mark whose centre is less certain than this is too faint to count."""
+_ENOUGH, _LEAST_SHARE = 30, 0.25
 _CURVED_MM = 0.003
 """What the bend of a strong distortion within a mark adds to its centre."""
 _DRAWS = 100
@@ -80,8 +81,8 @@ class _Field:
 def lattice(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measurement | NotMeasured]:
     """Measure the displacement field of a lattice, and what follows from it.
 
-    Standard uncertainty: of each mark from its fit, at least 0.008 pixel for ringing of what lies round it; of the figures by
-    propagation, and by resampling the marks for the largest.
+    Standard uncertainty: of each mark from its fit, or from the marks' scatter about a smooth surface where that is smaller,
+    and 0.008 pixel for ringing of what lies round it; of the figures by propagation, and by resampling for the largest.
     """
     section = next((s for s in phantom.sections if isinstance(s, Rods | Lattice)), None)
     names = ("lattice_rms", "lattice_max", *(("distortion_max", "scale_x", "scale_y") if isinstance(section, Rods) else ()))
@@ -126,10 +127,10 @@ def _field(scan: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Latt
         return (
             f"only {len(seen)} of the lattice's {len(places)} marks were found: the field of view cuts it, or noise hides it"
         )
-    u = np.hypot(u, _LEAST_U_PX * pixel)
     axes = _nearest_turn(view.lay[:2])
     laid = image_mm @ axes.T
     turn, shift = _rigid(laid, true[seen])
+    u = np.hypot(u * _scatter_share((laid - shift) @ turn - true[seen], true[seen], u), _LEAST_U_PX * pixel)
     size = view.plane.size_mm
     gone = np.delete(np.arange(len(places)), seen)
     wanted = (true[gone] @ turn.T + shift) @ axes
@@ -148,6 +149,22 @@ def _field(scan: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Latt
         turn_deg=math.degrees(math.atan2(turn[1, 0], turn[0, 0])),
         slice_index=index,
     )
+
+
+def _scatter_share(away: Floats, true: Floats, u: Floats) -> float:
+    """Compare the marks' scatter about a smooth displacement (third order) with their uncertainties, at most 1.
+
+    Residuals of a fit hold ringing that does not move a mark, so uncertainties from them are upper bounds; where the marks lie
+    on a smooth surface more closely than these say, their scatter counts.
+    """
+    if len(away) < _ENOUGH:
+        return 1.0
+    x, y = true.T / np.abs(true).max()
+    design = np.stack([x ** (n - k) * y**k for n in range(4) for k in range(n + 1)], axis=1)
+    weighted = design / u[:, None]
+    left = (away - design @ np.linalg.lstsq(weighted, away / u[:, None], rcond=None)[0]) / u[:, None]
+    scatter = math.sqrt(float(np.sum(left**2)) / (left.size - 2 * design.shape[1]))
+    return min(1.0, max(_LEAST_SHARE, scatter))
 
 
 def _nearest_turn(matrix: Floats) -> Floats:
@@ -174,13 +191,13 @@ def _displacement(field: _Field, section: Rods | Lattice) -> list[Measurement | 
     true_power = max(power - noise, 0.0)
     rms = math.sqrt(true_power)
     u_power = math.sqrt(4 * float(np.sum(true_power * field.u_mm**2 + field.u_mm**4))) / count
-    u_power = math.hypot(u_power, 0.3 * noise)
+    u_power = math.hypot(u_power, 0.4 * noise)
     u_rms = max(math.sqrt(true_power + 2 * u_power) - rms, rms - math.sqrt(max(true_power - 2 * u_power, 0.0))) / 2
     u_rms = math.hypot(u_rms, _CURVED_MM)
     shrink = math.sqrt(true_power / power) if power > 0 else 0.0
     worst = int(np.argmax(length))
     largest, u_largest = _largest(field.away_mm * shrink, field.u_mm, float(length[worst]))
-    u_largest = math.hypot(u_largest, 1.5 * u_rms)
+    u_largest = math.hypot(u_largest, 2 * u_rms)
     common: dict[str, Any] = {
         "rods": [
             {"i": int(i), "j": int(j), "measured_mm": m.tolist(), "true_mm": t.tolist(), "u_mm": float(u)}
