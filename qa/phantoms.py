@@ -296,6 +296,12 @@ class Phantom(_Table):
         """Length along z of the body."""
         return self.body.length_mm if self.body.shape == "cylinder" else self.body.diameter_mm
 
+    @property
+    def clear_rim_mm(self) -> float:
+        """Width of fill between the body's edge and the rods nearest to it; infinite where there are none."""
+        reaches = [_reach(section) for section in self.sections if isinstance(section, Rods)]
+        return math.inf if self.radius_mm is None or not reaches else self.radius_mm - max(reaches)
+
     def sections_at(self, z_from_mm: float, z_to_mm: float) -> Iterator[Any]:
         """Yield the sections that a slice from one height to another meets."""
         return (s for s in self.sections if s.z_from_mm < z_to_mm and s.z_to_mm > z_from_mm)

@@ -64,7 +64,7 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     if isinstance(section, str):
         return [NotMeasured(name, section) for name in (*(f"length_{a}" for a in ANGLES), *derived)]
     plane = scan.planes[section.slice_index]
-    edge = _edge_pixels(scan, section)
+    edge = _edge_pixels(scan, section, phantom.clear_rim_mm)
     depth, u_depth = _depth_mm(scan, pose, phantom, section)
     found: dict[int, tuple[float, float]] = {}
     results: list[Measurement | NotMeasured] = []
@@ -97,14 +97,15 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     return results
 
 
-def _edge_pixels(scan: Acquisition, section: CrossSection) -> _Edge | None:
+def _edge_pixels(scan: Acquisition, section: CrossSection, clear_mm: float) -> _Edge | None:
     """Gather the pixels near the edge, each with its distance from a smooth outline and its height over the floor."""
     image, plane = scan.pixels[section.slice_index], scan.planes[section.slice_index]
     pixel = float(np.mean(plane.pixel_mm))
     angles = np.linspace(0, 2 * np.pi, _RAYS, endpoint=False)
     centre = np.array([section.centre_mm])
     start = np.full((1, _RAYS), section.radius_mm)
-    reach = min(max(0.3 * section.radius_mm / pixel, 6.0), _REACH_PX)
+    # What is read inside the edge must be fill: rods near the rim would pull the plateau down.
+    reach = max(min(max(0.3 * section.radius_mm / pixel, 6.0), _REACH_PX, clear_mm / pixel - 1), 4.0)
     for order in (2, _ORDER):
         rim = find_rim(image[None], plane, centre, start, angles, reach_px=reach)
         shape, _ = robust_fit(harmonics(angles, order), rim.radius_mm, 0.05 * pixel)
