@@ -15,6 +15,9 @@ from qa.records import CrossSection
 __all__ = ["Outline", "Silhouette", "find_outlines", "find_silhouettes"]
 
 _COARSE = 64
+_FIRST_RAYS = 64
+_RAYS, _RAYS_OF_MANY, _MANY = 192, 120, 6
+"""Radii along which an outline is read; fewer in each slice of a stack, whose outlines are looked at together."""
 
 
 @dataclass(frozen=True)
@@ -133,10 +136,10 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     radii = np.array([s.radius_mm for s in silhouettes])
     pixel = float(np.mean(plane.pixel_mm))
 
-    angles = np.linspace(0, 2 * np.pi, 96, endpoint=False)
+    angles = np.linspace(0, 2 * np.pi, _FIRST_RAYS, endpoint=False)
     reach = 9 + 0.1 * float(radii.max()) / pixel
     edges = find_rim(
-        images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), 96)), angles, reach_px=reach, coarse=True
+        images, plane, centres, np.broadcast_to(radii[:, None], (len(radii), _FIRST_RAYS)), angles, reach_px=reach, coarse=True
     ).radius_mm
     rigid, _ = robust_fit(harmonics(angles, 1), edges, 0.3 * pixel)
     shape, _ = robust_fit(harmonics(angles, 2), edges, 0.3 * pixel, np.pad(rigid, ((0, 0), (0, 2))))
@@ -146,7 +149,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     shape[:, 1:3] = 0
     if not len(images):
         return ()
-    angles = np.linspace(0, 2 * np.pi, 192, endpoint=False)
+    angles = np.linspace(0, 2 * np.pi, _RAYS if len(images) < _MANY else _RAYS_OF_MANY, endpoint=False)
     edges = find_rim(images, plane, centres, shape @ harmonics(angles, 2).T, angles, reach_px=8).radius_mm
     shape, weights = robust_fit(harmonics(angles, 2), edges, 0.05 * pixel, shape)
 
