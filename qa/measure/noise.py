@@ -7,6 +7,7 @@ analysis, n over the sum of the autocorrelation or of its square (Bayley and Ham
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -193,11 +194,7 @@ class Chi:
     @classmethod
     def with_ratio(cls, ratio: float) -> "Chi":
         """Find the distribution whose mean over standard deviation is given; one channel (1.913) is the least there can be."""
-        low, high = 1.0, 1024.0
-        for _ in range(60):
-            middle = math.sqrt(low * high)
-            low, high = (middle, high) if cls(middle).ratio < ratio else (low, middle)
-        return cls(low)
+        return cls(_channels_with_ratio(ratio))
 
     @property
     def mean(self) -> float:
@@ -220,3 +217,12 @@ class Chi:
         n, mean = self.channels, self.mean
         third = 2 * mean * (n + 0.5)
         return (4 * n * (n + 1) - 4 * mean * third + 12 * n * mean**2 - 3 * mean**4) / self.sd**4
+
+
+@lru_cache(maxsize=64)
+def _channels_with_ratio(ratio: float) -> float:
+    low, high = 1.0, 1024.0
+    for _ in range(44):
+        middle = math.sqrt(low * high)
+        low, high = (middle, high) if Chi(middle).ratio < ratio else (low, middle)
+    return low
