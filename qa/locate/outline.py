@@ -15,7 +15,7 @@ from qa.records import CrossSection
 __all__ = ["Outline", "Silhouette", "find_outlines", "find_silhouettes"]
 
 _COARSE = 64
-_FIRST_RAYS = 64
+_FIRST_RAYS = 96
 _RAYS, _RAYS_OF_MANY, _MANY = 192, 120, 6
 """Radii along which an outline is read; fewer in each slice of a stack, whose outlines are looked at together."""
 
