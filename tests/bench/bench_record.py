@@ -1,7 +1,7 @@
 """How long a record of ten years and fifty scanners takes to verify and to give its history.
 
 26,000 sessions, 300,000 measurements, 572,000 files, written in large transactions so that filling takes minutes. The
-scanners' software changes every three years, and a few scanners fail or are on their way to it.
+scanners' software changes every four years, and a few scanners fail or are on their way to it.
 Prints seconds, the size, and the ratio to the time that SQLite itself takes to read every row.
 """
 
@@ -38,7 +38,7 @@ def outcome(scanner: int, week: int, rng: np.random.Generator, slices: int) -> O
             acquired_at=when + timedelta(minutes=repeat),
             kind="magnitude",
             temporal_position=1,
-            scanner=Scanner("Invented", "Model 7", f"STATION{scanner}", f"{scanner}", 3.0, f"{1 + week // 170}.0"),
+            scanner=Scanner("Invented", "Model 7", f"STATION{scanner}", f"{scanner}", 3.0, f"{1 + week // 200}.0"),
             settings=Settings(
                 "QA_SE",
                 "SE",
