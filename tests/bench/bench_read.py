@@ -31,7 +31,12 @@ def write_pair(folder: Path) -> list[Path]:
             dataset.StudyInstanceUID, dataset.SeriesInstanceUID = study, series
             dataset.Modality, dataset.Manufacturer, dataset.ManufacturerModelName = "MR", "Invented", "Model 7"
             dataset.StationName, dataset.DeviceSerialNumber, dataset.SoftwareVersions = "NORTH3T", "40071", "1"
-            dataset.PatientName, dataset.PatientID, dataset.PatientBirthDate, dataset.PatientSex = "QA^Phantom", "QA-1", "", "O"
+            dataset.PatientName, dataset.PatientID, dataset.PatientBirthDate, dataset.PatientSex = (
+                "QA^Phantom",
+                "QA-1",
+                "",
+                "O",
+            )
             dataset.ImageType = ["ORIGINAL", "PRIMARY", "M", "ND"]
             dataset.StudyDate = dataset.SeriesDate = dataset.AcquisitionDate = dataset.ContentDate = "20261123"
             dataset.StudyTime = dataset.SeriesTime = dataset.AcquisitionTime = dataset.ContentTime = f"0741{repeat:02d}"
