@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from qa.geometry import Floats, Plane
 from qa.locate.expected import Places, expected_fill
 from qa.locate.marks import find_marks
-from qa.locate.match import match_lattice
+from qa.locate.match import ideal_marks, match_lattice, rigid_fit
 from qa.locate.overlay import overlay
 from qa.locate.placing import is_axial, off_sections, suffering
 from qa.locate.view import SliceView, slice_of_section
@@ -103,20 +103,18 @@ def _turned_by_lattice(acquisition: Acquisition, pose: Pose, phantom: Phantom, s
     if isinstance(index, str):
         return replace(pose, remarks=(*pose.remarks, index))
     view = SliceView.of(acquisition.planes[index], pose)
-    listed = section.rods_mm() if isinstance(section, Rods) else section.crossings_mm()
-    places = np.array([(i, j) for i, j, _, _ in listed], dtype=np.intp)
-    true = np.array([(x, y) for _, _, x, y in listed])
+    places, true = ideal_marks(section)
     marks = find_marks(acquisition.pixels[index], view, section, float(np.hypot(*true.T).max()) + 0.4 * section.pitch_mm)
     matched = match_lattice(marks, places, section.pitch_mm, np.zeros(2))
     if isinstance(matched, str):
         return replace(pose, remarks=(*pose.remarks, matched))
     seen = matched.mark >= 0
-    a, b = marks[matched.mark[seen]], true[seen]
-    a, b = a - a.mean(axis=0), b - b.mean(axis=0)
-    turn = math.degrees(math.atan2(float(np.sum(b[:, 0] * a[:, 1] - b[:, 1] * a[:, 0])), float(np.sum(a * b))))
-    c, s = math.cos(math.radians(turn)), math.sin(math.radians(turn))
-    left = a - b @ np.array([[c, s], [-s, c]])
-    u_turn = math.degrees(math.sqrt(float(np.sum(left**2)) / max(1, a.size - 3) / float(np.sum(b**2))))
+    found, ideal = marks[matched.mark[seen]], true[seen]
+    rotation, shift = rigid_fit(found, ideal)
+    turn = math.degrees(math.atan2(rotation[1, 0], rotation[0, 0]))
+    left = found - ideal @ rotation.T - shift
+    reach = float(np.sum((ideal - ideal.mean(axis=0)) ** 2))
+    u_turn = math.degrees(math.sqrt(float(np.sum(left**2)) / max(1, left.size - 3) / reach))
     turned = _moved(pose, _Guess(1.0, reversed=False, shift_mm=0.0, turn_deg=turn))
     return replace(turned, u_rotation_deg=math.hypot(u_turn, _LEAST_U_DEG))
 

@@ -11,8 +11,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from qa.geometry import Floats
+from qa.phantoms import Lattice, Rods
 
-__all__ = ["Matched", "match_lattice"]
+__all__ = ["Matched", "ideal_marks", "match_lattice", "rigid_fit"]
 
 _CLEAR = 0.38
 """Share of the pitch within which a mark is taken for the one foretold there."""
@@ -41,6 +42,20 @@ class Matched:
     mark: NDArray[np.intp]
     foretold_mm: Floats
     turn_deg: float
+
+
+def ideal_marks(section: Rods | Lattice) -> tuple[NDArray[np.intp], Floats]:
+    """Whole-number places i, j (N, 2) of a section's rods or crossings, and where they lie in the phantom, mm (N, 2)."""
+    listed = section.rods_mm() if isinstance(section, Rods) else section.crossings_mm()
+    return np.array([mark[:2] for mark in listed], dtype=np.intp), np.array([mark[2:] for mark in listed])
+
+
+def rigid_fit(seen: Floats, true: Floats) -> tuple[Floats, Floats]:
+    """Return turn R and shift t with `seen` about `true @ R.T + t`, by least squares and without scale (Kabsch)."""
+    a, b = seen - seen.mean(axis=0), true - true.mean(axis=0)
+    u, _, vt = np.linalg.svd(a.T @ b)
+    turn = u @ np.diag([1.0, np.sign(np.linalg.det(u @ vt))]) @ vt
+    return turn, seen.mean(axis=0) - turn @ true.mean(axis=0)
 
 
 def match_lattice(

@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from qa.geometry import Floats
 from qa.locate.marks import find_marks, fit_marks
-from qa.locate.match import match_lattice
+from qa.locate.match import ideal_marks, match_lattice, rigid_fit
 from qa.locate.view import SliceView, slice_of_section
 from qa.measure.regions import figure, magnitude_only
 from qa.phantoms import Lattice, Phantom, Rods
@@ -106,9 +106,7 @@ def _field(scan: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Latt
         return index
     view = SliceView.of(scan.planes[index], pose)
     image = scan.pixels[index]
-    listed = section.rods_mm() if isinstance(section, Rods) else section.crossings_mm()
-    places = np.array([(i, j) for i, j, _, _ in listed], dtype=np.intp)
-    true = np.array([(x, y) for _, _, x, y in listed])
+    places, true = ideal_marks(section)
     found = find_marks(image, view, section, float(np.hypot(*true.T).max()) + 0.4 * section.pitch_mm)
     low, high = places.min(axis=0), places.max(axis=0)
     arms = np.stack([places > low, places < high], axis=2).reshape(len(places), 4)
@@ -129,7 +127,7 @@ def _field(scan: Acquisition, pose: Pose, phantom: Phantom, section: Rods | Latt
         )
     axes = _nearest_turn(view.lay[:2])
     laid = image_mm @ axes.T
-    turn, shift = _rigid(laid, true[seen])
+    turn, shift = rigid_fit(laid, true[seen])
     u = np.hypot(u * _scatter_share((laid - shift) @ turn - true[seen], true[seen], u), _LEAST_U_PX * pixel)
     size = view.plane.size_mm
     gone = np.delete(np.arange(len(places)), seen)
@@ -172,14 +170,6 @@ def _nearest_turn(matrix: Floats) -> Floats:
     u, _, vt = np.linalg.svd(matrix)
     nearest: Floats = u @ vt
     return nearest
-
-
-def _rigid(seen: Floats, true: Floats) -> tuple[Floats, Floats]:
-    """Return turn R and shift t with `seen` about `true @ R.T + t`, by least squares and without scale (Kabsch)."""
-    a, b = seen - seen.mean(axis=0), true - true.mean(axis=0)
-    u, _, vt = np.linalg.svd(a.T @ b)
-    turn = u @ np.diag([1.0, np.sign(np.linalg.det(u @ vt))]) @ vt
-    return turn, seen.mean(axis=0) - turn @ true.mean(axis=0)
 
 
 def _displacement(field: _Field, section: Rods | Lattice) -> list[Measurement | NotMeasured]:
