@@ -67,6 +67,7 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
     edge = _edge_pixels(scan, section, phantom.clear_rim_mm)
     depth, u_depth = _depth_mm(scan, pose, phantom, section)
     found: dict[int, tuple[float, float]] = {}
+    alone: dict[int, float] = {}
     results: list[Measurement | NotMeasured] = []
     for angle in ANGLES:
         fitted = None if edge is None else _diameter(edge, angle, plane)
@@ -79,7 +80,7 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
             continue
         radii, u_edges, slope = fitted
         length, u_length = sum(radii) + depth, math.hypot(u_edges, u_depth)
-        found[angle] = length, u_length
+        found[angle], alone[angle] = (length, u_length), u_edges
         turn = math.radians(angle)
         ends = tuple(
             (section.centre_mm[0] + side * r * math.cos(turn), section.centre_mm[1] + side * r * math.sin(turn))
@@ -92,6 +93,8 @@ def lengths(scan: Acquisition, pose: Pose, phantom: Phantom) -> Iterable[Measure
                 f"length_{angle}", length, u_length, _LENGTH, slice_index=section.slice_index, details=details, regions=(line,)
             )
         )
+    if phantom.radius_mm is None:
+        found = _against_own_mean(found, alone)
     if not with_rods:
         results += _derived(found, _true_diameter(scan, pose, phantom, section, found), section)
     return results
@@ -247,13 +250,25 @@ def _true_diameter(
     if phantom.radius_mm is None:
         if len(found) < len(ANGLES):
             return math.nan, 0.0
-        return float(np.mean([v for v, _ in found.values()])), math.sqrt(sum(u**2 for _, u in found.values())) / len(found)
+        return float(np.mean([v for v, _ in found.values()])), 0.0
     if phantom.body.shape == "cylinder":
         return 2 * phantom.radius_mm, 0.0
     height = _height_mm(scan, pose, section)
     square = _half_height_square(height, scan.settings.slice_thickness_mm or 0.0)
     radius = math.sqrt(max(phantom.radius_mm**2 - square, 1e-6))
     return 2 * radius, 2 * abs(height) / radius * (pose.u_centre_mm[2] or 0.0)
+
+
+def _against_own_mean(found: dict[int, tuple[float, float]], alone: dict[int, float]) -> dict[int, tuple[float, float]]:
+    """Give each diameter the uncertainty of its difference from the mean of all: what they share drops out of that.
+
+    With weights 1 - 1/n for itself and 1/n for each other one, which are independent but for what they share.
+    """
+    n, total = len(found), sum(u**2 for u in alone.values())
+    return {
+        angle: (length, math.sqrt((1 - 1 / n) ** 2 * alone[angle] ** 2 + (total - alone[angle] ** 2) / n**2))
+        for angle, (length, _) in found.items()
+    }
 
 
 def _derived(
