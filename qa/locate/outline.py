@@ -16,8 +16,8 @@ __all__ = ["Outline", "Silhouette", "find_outlines", "find_silhouettes"]
 
 _COARSE = 64
 _FIRST_RAYS = 96
-_RAYS, _RAYS_OF_MANY, _MANY = 192, 120, 6
-"""Radii along which an outline is read; fewer in each slice of a stack, whose outlines are looked at together."""
+_RAYS = 192
+"""Radii along which an outline is read; the first look needs fewer."""
 
 
 @dataclass(frozen=True)
@@ -149,7 +149,7 @@ def find_outlines(pixels: NDArray[np.float32], plane: Plane, silhouettes: tuple[
     shape[:, 1:3] = 0
     if not len(images):
         return ()
-    angles = np.linspace(0, 2 * np.pi, _RAYS if len(images) < _MANY else _RAYS_OF_MANY, endpoint=False)
+    angles = np.linspace(0, 2 * np.pi, _RAYS, endpoint=False)
     edges = find_rim(images, plane, centres, shape @ harmonics(angles, 2).T, angles, reach_px=8).radius_mm
     shape, weights = robust_fit(harmonics(angles, 2), edges, 0.05 * pixel, shape)
 
