@@ -24,8 +24,8 @@ from qa.records import Acquisition, NotLocated, Pose
 
 __all__ = ["refine"]
 
-_ANGLES = 128
-_RINGS = 14
+_ANGLES = 112
+_RINGS = 12
 _INNER, _OUTER = 0.1, 0.94
 _STEP_MM = 2.0
 _FAR_MM = 40.0

@@ -166,7 +166,7 @@ def _window_mm(view: SliceView, section: Rods | Lattice) -> float:
     pixel = max(view.plane.pixel_mm)
     if isinstance(section, Rods):
         return min(0.45 * section.pitch_mm, section.rod_diameter_mm / 2 + 2.5 * pixel)
-    return min(0.5 * section.pitch_mm, section.bar_width_mm / 2 + 3.5 * pixel)
+    return min(0.5 * section.pitch_mm, section.bar_width_mm / 2 + 3 * pixel)
 
 
 def _axes(turn_deg: float) -> Floats:
@@ -302,7 +302,8 @@ def _fit(patches: _Patches, shape: Shape, steps: int) -> _Fit:
         level, slopes = level + change[:, 0], slopes + change[:, 1:3]
         depth = np.clip(depth + change[:, 3], 0.02, 2.0)
         centre = centre + np.clip(change[:, 4:], -limit, limit)
-        if np.percentile(np.abs(change[:, 4:]), 95) < _SETTLED_PX * patches.soft_mm:
+        moved = np.sort(np.abs(change[:, 4:]), axis=None)
+        if moved[int(0.95 * moved.size)] < _SETTLED_PX * patches.soft_mm:
             break
     residual = residual - (change[:, None, :] @ design)[:, 0]
     spread = np.linalg.inv(normal)[:, [4, 5], [4, 5]].mean(axis=1)

@@ -85,7 +85,7 @@ def find_silhouettes(pixels: NDArray[np.float32], plane: Plane) -> tuple[Silhoue
             continue
         sizes = np.bincount(labels.ravel())[1:]
         order = np.argsort(sizes)[::-1]
-        body = ndimage.binary_fill_holes(labels == order[0] + 1)
+        body = _filled(labels == order[0] + 1)
         i, j = np.nonzero(body)
         y, x = ((k.mean() * block + (block - 1) / 2) * mm for k, mm in zip((i, j), plane.pixel_mm, strict=True))
         found.append(
@@ -98,6 +98,19 @@ def find_silhouettes(pixels: NDArray[np.float32], plane: Plane) -> tuple[Silhoue
             )
         )
     return tuple(found) or "nothing stands out from the background: check that the phantom was in the coil"
+
+
+def _filled(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Fill the holes of a mask: what is not joined to the image's border from outside."""
+    from scipy import ndimage
+
+    outside, count = ndimage.label(~mask)
+    open_air = np.zeros(count + 1, dtype=np.bool_)
+    for border in (outside[0], outside[-1], outside[:, 0], outside[:, -1]):
+        open_air[border] = True
+    open_air[0] = False
+    filled: NDArray[np.bool_] = ~open_air[outside]
+    return filled
 
 
 def _coarse(pixels: NDArray[np.float32], block: int) -> NDArray[np.float32]:

@@ -18,7 +18,9 @@ _STEPS = 5
 _SETTLED_DEG, _SETTLED_MM = 0.03, 0.03
 _STEP = 0.25
 _BLUR = 1.2
-_PIXELS = 900
+_USUAL_DEG, _USUAL_MM = 2.0, 3.0
+"""How far turn and rise may be off at the start; they are held back with that weight."""
+_PIXELS = 700
 """About how many pixels of each section are looked at, drawn evenly: a regular choice would beat against bars and edges."""
 _LEAST_U_DEG = 0.006
 _LEAST_U_MM = 0.07
@@ -66,6 +68,8 @@ def overlay(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose:
     if not patches:
         return pose
     turn, rise = 0.0, 0.0
+    rises = any(isinstance(p.section, Ramps | WedgeBars) for p in patches)
+    held = np.diag([_USUAL_DEG**-2, _USUAL_MM**-2 if rises else 1e9])
     for _ in range(_STEPS):
         normal, right = np.zeros((2, 2)), np.zeros(2)
         squares, count = 0.0, 0
@@ -77,14 +81,13 @@ def overlay(acquisition: Acquisition, pose: Pose, phantom: Phantom) -> Pose:
             right += slopes @ residual
             squares += float(residual @ residual)
             count += residual.size
-        scale = np.sqrt(np.maximum(np.diag(normal), 1e-12))
-        inverse = np.linalg.inv(normal / np.outer(scale, scale) + 1e-6 * np.eye(2)) / np.outer(scale, scale)
+        spread = max(squares / max(1, count - 2), 1e-12)
+        inverse = np.linalg.inv(normal + spread * held)
         change = inverse @ right
         turn += float(np.clip(change[0], -2, 2))
         rise += float(np.clip(change[1], -3, 3))
         if abs(change[0]) < _SETTLED_DEG and abs(change[1]) < _SETTLED_MM:
             break
-    spread = squares / max(1, count - 2)
     u_turn, u_rise = (math.sqrt(spread * inverse[k, k]) for k in (0, 1))
     if pose.u_tilt_deg is None:
         u_rise = math.hypot(u_rise, _UNKNOWN_TILT_MM)

@@ -40,7 +40,7 @@ _FAINT_PX = 0.2
 _ENOUGH, _LEAST_SHARE = 30, 0.25
 _CURVED_MM = 0.003
 """What the bend of a strong distortion within a mark adds to its centre."""
-_DRAWS = 100
+_DRAWS = 64
 
 
 @dataclass(frozen=True, eq=False)

@@ -151,7 +151,6 @@ def _solve(pixels: _Pixels, ends: Floats, edge_mm: float, blur_mm: float) -> _En
         plane = level + lean[0] * x + lean[1] * y
         signal = plane * edge.value
         steep = 2 * signal
-        by_width = (rise(Y - np.where(first[0], ends[0], ends[1]), width * 1.02, blur_mm).value - edge.value) / (0.02 * width)
         design = np.stack(
             [
                 np.where(first[0], -steep * plane * edge.by_place, 0.0),
@@ -160,7 +159,7 @@ def _solve(pixels: _Pixels, ends: Floats, edge_mm: float, blur_mm: float) -> _En
                 steep * edge.value * x,
                 steep * edge.value * y,
                 np.ones_like(x),
-                steep * plane * by_width,
+                steep * plane * edge.by_box,
             ]
         )
         residual = power - signal**2 - floor

@@ -12,11 +12,12 @@ __all__ = ["Reader", "Rise", "rise"]
 
 @dataclass(frozen=True, eq=False)
 class Rise:
-    """Values of a rising edge from 0 to 1, and how they change with place and with the Gaussian's standard deviation."""
+    """Values of a rising edge from 0 to 1, with slopes by place, by the Gaussian's standard deviation and by the box."""
 
     value: Floats
     by_place: Floats
     by_soft: Floats
+    by_box: Floats
 
 
 def rise(place_mm: Floats, box_mm: float, soft_mm: float) -> Rise:
@@ -30,7 +31,12 @@ def rise(place_mm: Floats, box_mm: float, soft_mm: float) -> Rise:
     below_up, below_down = ndtr(up), ndtr(down)
     bell_up, bell_down = (np.exp(-0.5 * a * a) / math.sqrt(2 * math.pi) for a in (up, down))
     value = soft_mm / box_mm * (up * below_up + bell_up - down * below_down - bell_down)
-    return Rise(value, (below_up - below_down) / box_mm, (bell_up - bell_down) / box_mm)
+    return Rise(
+        value,
+        by_place=(below_up - below_down) / box_mm,
+        by_soft=(bell_up - bell_down) / box_mm,
+        by_box=((below_up + below_down) / 2 - value) / box_mm,
+    )
 
 
 class Reader:

@@ -31,6 +31,7 @@ _LEAST_SOFT_MM = 0.1
 _LEAST_GHOST = 0.006
 """What else may lie over the block in phase with it, as a share of the fill: a ghost of the body, in most scans."""
 _STEPS = 20
+_SETTLED_MM = 0.05
 _ACROSS_MM = 0.1
 _PARAMETERS = 14
 _SHIFT, _TURN, _FLOOR, _SOFT, _SPACING, _BOX, _GHOST, _SCALE = 0, 1, 8, 9, 10, 11, 12, 13
@@ -141,7 +142,7 @@ def _read(image: Floats, view: SliceView, section: Ramps, across_mm: float) -> _
         if np.count_nonzero(fill & (sign * v > 0)) < 50 or np.count_nonzero(block) < 100:
             return "the image does not reach round the ramp block"
     terms = _surface(u[fill] / width, v[fill] / height)
-    coefficients, *_ = np.linalg.lstsq(terms, part[fill], rcond=None)
+    coefficients = np.linalg.solve(terms.T @ terms, terms.T @ part[fill])
     sigma = 1.4826 * float(np.median(np.abs(part[fill] - terms @ coefficients)))
     level = _surface(u[block] / width, v[block] / height) @ coefficients
     if sigma <= 0 or level.min() <= 0:
@@ -298,7 +299,7 @@ class _Model:
                 return "the bars of the ramps cannot be told from noise"
             change = np.linalg.solve(normal / np.outer(scale, scale) + 1e-6 * np.eye(_PARAMETERS), right / scale) / scale
             moved = np.clip(q + np.clip(change, -limit, limit), low, high)
-            done = np.abs(moved - q)[[2, 3, 5, 6]].max() < 0.02
+            done = np.abs(moved - q)[[2, 3, 5, 6]].max() < _SETTLED_MM
             q = moved
             if done:
                 break

@@ -128,7 +128,7 @@ def _profile(fit: RampFit) -> tuple[list[float], list[float]]:
 def _width_at(fit: RampFit, section: Ramps, share: float) -> float:
     """Full width of the fitted profile at a share of its maximum, mm of slice."""
     box = float(np.mean([slot.thickness_mm for slot in section.slots]))
-    place = np.linspace(0, 2 * fit.thickness_mm + 6 * fit.soft_mm + box, 2001)
+    place = np.linspace(0, 2 * fit.thickness_mm + 6 * fit.soft_mm + box, 501)
     half = fit.thickness_mm / 2
     height = rise(place + half, box, fit.soft_mm).value - rise(place - half, box, fit.soft_mm).value
     below = int(np.argmax(height < share * height.max()))

@@ -222,7 +222,7 @@ def main() -> None:
     tables = {n: information(n) for n in (1, 2, 4, 8, 16)} if arguments.cases else {}
     for kind in arguments.kinds if arguments.cases else ():
         done = Parallel(n_jobs=arguments.workers)(delayed(case)(kind, number, tables) for number in range(arguments.cases))
-        print(f"{kind}: {arguments.cases} scans")
+        print(f"{kind}: {arguments.cases} scans", flush=True)
         table([row for rows in done for row in rows])
     if arguments.lattices:
         lattices(arguments.lattices)

@@ -72,5 +72,7 @@ def test_slopes_of_rise(place, box, soft):
     by_place = (rise(at + step, box, soft).value - rise(at - step, box, soft).value) / (2 * step)
     by_soft = (rise(at, box, soft + step).value - rise(at, box, soft - step).value) / (2 * step)
     assert edge.by_place == pytest.approx(by_place, abs=1e-5)
+    by_box = (rise(at, box + step, soft).value - rise(at, box - step, soft).value) / (2 * step)
     assert edge.by_soft == pytest.approx(by_soft, abs=1e-5)
+    assert edge.by_box == pytest.approx(by_box, abs=1e-5)
     assert edge.value + rise(-at, box, soft).value == pytest.approx(1.0, abs=1e-12)
