@@ -250,14 +250,27 @@ class _Rings:
             n, turn = np.unravel_index(int(np.argmax(best)), score.shape)
             if _ALIKE * score[n, turn] > found.score:
                 fine = _vertex(score[n, [turn - 1, turn, (turn + 1) % _ANGLES]])
-                rise = _vertex(score[n - 1 : n + 2, turn]) if 0 < n < len(shifts) - 1 else 0.0
+                height = _middle_of_peak(score[:, turn], int(n))
                 found = _Guess(
                     score=float(score[n, turn]),
                     reversed=way,
-                    shift_mm=float(shifts[n] + rise * _STEP_MM),
+                    shift_mm=float(shifts[0] + height * _STEP_MM),
                     turn_deg=float(turns[turn] + fine * 360 / _ANGLES),
                 )
         return found
+
+
+def _middle_of_peak(scores: Floats, top: int) -> float:
+    """Place of a peak in steps: its vertex, or, where several steps agree alike (within a lattice), the middle of these."""
+    alike = scores >= _ALIKE * scores[top]
+    low, high = top, top
+    while low > 0 and alike[low - 1]:
+        low -= 1
+    while high < len(scores) - 1 and alike[high + 1]:
+        high += 1
+    if high - low >= 3 or not 0 < top < len(scores) - 1:
+        return (low + high) / 2
+    return top + _vertex(scores[top - 1 : top + 2])
 
 
 def _vertex(three: Floats) -> float:
